@@ -9,7 +9,12 @@ import numpy as np
 from numpy.typing import ArrayLike
 from scipy.spatial.transform import RigidTransform, Rotation
 
-from sta_prior.checks import FloatArray, check_rotation, check_shape
+from sta_prior.checks import BoolArray, FloatArray, check_rotation, check_shape
+
+
+def _missing(array: FloatArray, axis: int | tuple[int, ...]) -> BoolArray:
+    """Return where any value over these axes is NaN."""
+    return np.asarray(np.isnan(array).any(axis=axis))
 
 
 def make_pose(rotation: ArrayLike, position: ArrayLike) -> FloatArray:
@@ -138,7 +143,7 @@ def exp(tangent: ArrayLike) -> FloatArray:
     [0.393727, 1.933798, 3.157957]
     """
     tangent = check_shape(tangent, (6,), "tangent")
-    missing = np.isnan(tangent).any(axis=-1)
+    missing = _missing(tangent, -1)
     clean = np.where(missing[..., None], 0.0, tangent)
     pose: FloatArray = RigidTransform.from_exp_coords(clean).as_matrix()
     pose[missing] = np.nan
@@ -162,7 +167,7 @@ def log(pose: ArrayLike) -> FloatArray:
     RotationError : rotation block not orthonormal to 1e-6, or a reflection.
     """
     pose = check_shape(pose, (4, 4), "pose")
-    missing = np.isnan(pose).any(axis=(-2, -1))
+    missing = _missing(pose, (-2, -1))
     clean = np.where(missing[..., None, None], np.eye(4), pose)
     # SciPy would orthonormalise a sheared matrix without a word.
     check_rotation(rotation_of(clean), "pose")
@@ -187,7 +192,7 @@ def rotation_exp(vector: ArrayLike) -> FloatArray:
     ShapeError : last axis is not 3.
     """
     vector = check_shape(vector, (3,), "rotation vector")
-    missing = np.isnan(vector).any(axis=-1)
+    missing = _missing(vector, -1)
     rotation: FloatArray = Rotation.from_rotvec(np.where(missing[..., None], 0.0, vector)).as_matrix()
     rotation[missing] = np.nan
     return rotation
@@ -210,7 +215,7 @@ def rotation_log(rotation: ArrayLike) -> FloatArray:
     RotationError : not orthonormal to 1e-6, or a reflection.
     """
     rotation = check_shape(rotation, (3, 3), "rotation")
-    missing = np.isnan(rotation).any(axis=(-2, -1))
+    missing = _missing(rotation, (-2, -1))
     clean = check_rotation(np.where(missing[..., None, None], np.eye(3), rotation))
     vector: FloatArray = Rotation.from_matrix(clean).as_rotvec()
     vector[missing] = np.nan
