@@ -316,15 +316,18 @@ def gimbal_margin(convention: JointConvention, proximal_from_distal: ArrayLike) 
 
 def mirror_points(points: ArrayLike) -> FloatArray:
     """Mirror points across the sagittal plane, z → −z: shape (..., 3), any unit, frame kept."""
-    return check_shape(points, (3,), "points") * _MIRROR
+    mirrored: FloatArray = check_shape(points, (3,), "points") * _MIRROR
+    return mirrored
 
 
 def mirror_rotation(rotation: ArrayLike) -> FloatArray:
     """Mirror rotations across the sagittal plane, M R M: shape (..., 3, 3), still right-handed."""
-    return check_shape(rotation, (3, 3), "rotation") * (_MIRROR[:, None] * _MIRROR)
+    mirrored: FloatArray = check_shape(rotation, (3, 3), "rotation") * (_MIRROR[:, None] * _MIRROR)
+    return mirrored
 
 
 def mirror_pose(pose: ArrayLike) -> FloatArray:
     """Mirror poses across the sagittal plane, M T M: shape (..., 4, 4), position m."""
     signs = np.append(_MIRROR, 1.0)
-    return check_shape(pose, (4, 4), "pose") * (signs[:, None] * signs)
+    mirrored: FloatArray = check_shape(pose, (4, 4), "pose") * (signs[:, None] * signs)
+    return mirrored

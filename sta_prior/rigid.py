@@ -321,7 +321,8 @@ def deformation_modes(reference: ArrayLike) -> DeformationModes:
         raise ShapeError(message("reference", f"expected shape (m, 3), got {reference.shape}"))
     count = len(reference)
     centred = reference - reference.mean(axis=0)
-    ratio = float(_line_ratio(np.linalg.eigvalsh(centred.T @ centred)[::-1])) if count >= 3 else 0.0
+    moments = np.asarray(np.linalg.eigvalsh(centred.T @ centred)[::-1], dtype=np.float64)
+    ratio = float(_line_ratio(moments)) if count >= 3 else 0.0
     if count < 3 or ratio < MINIMUM_LINE_RATIO:
         raise NotDeterminedError(
             message(
