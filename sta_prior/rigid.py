@@ -229,7 +229,7 @@ def rigid_part(reference: ArrayLike, displacement: ArrayLike) -> FloatArray:
     mean, centred = _centre(source, weight)
     shift = moved.sum(axis=-2) / np.maximum(weight.sum(axis=-1), 1.0)[..., None]
     outer = np.swapaxes(centred, -1, -2) @ centred
-    ratio = _line_ratio(np.linalg.eigvalsh(outer)[..., ::-1])
+    ratio = _line_ratio(np.asarray(np.linalg.eigvalsh(outer), dtype=np.float64)[..., ::-1])
     determined = np.asarray((weight.sum(axis=-1) >= 3) & (ratio >= MINIMUM_LINE_RATIO))[..., None]
     information = np.trace(outer, axis1=-2, axis2=-1)[..., None, None] * np.eye(3) - outer
     information = np.where(determined[..., None], information, np.eye(3))
