@@ -50,17 +50,16 @@ def cholesky(covariance: ArrayLike, name: str = "covariance") -> FloatArray:
     Raises
     ------
     ShapeError : not square, or not finite.
-    CovarianceError : not positive definite; names the first matrix that is not. Nothing is
+    CovarianceError : not positive definite; names the worst matrix of the stack. Nothing is
         added to the diagonal to hide it.
     """
     covariance = _square(covariance, name)
     try:
-        return np.linalg.cholesky(covariance)
+        return np.asarray(np.linalg.cholesky(covariance), dtype=np.float64)
     except np.linalg.LinAlgError as error:
         lowest = np.linalg.eigvalsh(covariance)[..., 0]
         # The factorisation also fails where rounding alone makes an eigenvalue negative.
-        where = np.unravel_index(int(np.argmin(lowest)), lowest.shape)
-        index = tuple(int(i) for i in where)
+        index = tuple(int(i) for i in np.unravel_index(int(np.argmin(lowest)), lowest.shape))
         raise CovarianceError(
             message(
                 (name, f"index {index}" if index else None),
@@ -93,7 +92,7 @@ def whiten(factor: FloatArray, matrix: FloatArray) -> FloatArray:
         single: FloatArray = scipy.linalg.solve_triangular(factor, matrix, lower=True)
         return single
     # NumPy's stacked solver beats SciPy's loop over triangular solves by an order of magnitude.
-    return np.linalg.solve(factor, matrix)
+    return np.asarray(np.linalg.solve(factor, matrix), dtype=np.float64)
 
 
 def solve_spd(covariance: ArrayLike, matrix: ArrayLike, name: str = "covariance") -> FloatArray:
@@ -119,7 +118,8 @@ def solve_spd(covariance: ArrayLike, matrix: ArrayLike, name: str = "covariance"
     if factor.ndim == 2 and matrix.ndim == 2:
         single: FloatArray = scipy.linalg.cho_solve((factor, True), matrix)
         return single
-    return np.linalg.solve(np.swapaxes(factor, -1, -2), np.linalg.solve(factor, matrix))
+    half = np.linalg.solve(factor, matrix)
+    return np.asarray(np.linalg.solve(np.swapaxes(factor, -1, -2), half), dtype=np.float64)
 
 
 def _whitened_vector(residual: ArrayLike, covariance: ArrayLike) -> tuple[FloatArray, FloatArray]:
