@@ -69,7 +69,8 @@ def read_c3d(path: str | Path) -> xr.Dataset:
     unit, factor = _declared_unit(layout)
     position, residual = _decode_points(layout)
     labels = _point_labels(layout)
-    kept = _without_unseen_twins(labels, np.isfinite(position[..., 0]).any(axis=0))
+    seen: BoolArray = np.asarray(np.isfinite(position[..., 0]).any(axis=0))
+    kept = _without_unseen_twins(labels, seen)
     labels = [labels[number] for number in kept]
     check_unique(labels, layout.path, "label")
     position, residual = position[:, kept], residual[:, kept]

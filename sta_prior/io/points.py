@@ -45,7 +45,12 @@ def metres_per_unit(unit: str, place: str | Path | tuple[object, ...]) -> float:
         ) from None
 
 
-def check_extent(position: FloatArray, unit: str, place: str | Path | tuple[object, ...]) -> None:
+def check_extent(
+    position: FloatArray,
+    unit: str,
+    place: str | Path | tuple[object, ...],
+    lowest: float = LOWEST_EXTENT,
+) -> None:
     """Notice metres declared as millimetres, and the reverse, by the size of the whole cloud.
 
     Parameters
@@ -53,20 +58,21 @@ def check_extent(position: FloatArray, unit: str, place: str | Path | tuple[obje
     position : shape (..., axis), m, NaN where not seen
     unit : unit the file declares, for the message
     place : where the positions stand
+    lowest : smallest extent that passes, m
 
     Raises
     ------
-    InputError : the cloud is smaller than 20 mm or larger than 100 m. Limits: common practice, no source.
+    InputError : the cloud is smaller than `lowest` or larger than 100 m. Limits: common practice, no source.
     """
     flat = position.reshape(-1, position.shape[-1])
     flat = flat[np.isfinite(flat).all(axis=1)]
     if not len(flat):
         return
     extent = float(np.ptp(flat, axis=0).max())
-    if LOWEST_EXTENT <= extent <= HIGHEST_EXTENT:
+    if lowest <= extent <= HIGHEST_EXTENT:
         return
-    small = extent < LOWEST_EXTENT
-    limit = "at least 20 mm" if small else "at most 100 m"
+    small = extent < lowest
+    limit = f"at least {lowest * 1e3:g} mm" if small else "at most 100 m"
     size = f"{extent * 1e3:.3g} mm" if small else f"{extent:.4g} m"
     likely = "metres" if small else "millimetres"
     raise InputError(

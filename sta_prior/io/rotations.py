@@ -10,7 +10,7 @@ from pathlib import Path
 
 import numpy as np
 
-from sta_prior.checks import FloatArray, check_rotation
+from sta_prior.checks import BoolArray, FloatArray, check_rotation
 from sta_prior.errors import InputError, RotationError
 
 ROUNDING_TOLERANCE = 1e-3
@@ -41,7 +41,7 @@ def check_table_rotations(
         names file, time and segment of the first one.
     """
     parts = place if isinstance(place, tuple) else (place,)
-    missing = np.isnan(rotation).all(axis=(-2, -1))
+    missing: BoolArray = np.asarray(np.isnan(rotation).all(axis=(-2, -1)))
     gram = np.einsum("...ji,...jk->...ik", rotation, rotation) - np.eye(3)
     whole = np.where(missing[..., None, None], np.eye(3), rotation)
     bad = ~missing & (~(np.abs(gram).max(axis=(-2, -1)) <= ROUNDING_TOLERANCE) | ~(np.linalg.det(whole) > 0))
