@@ -49,8 +49,8 @@ class JointConvention:
     ----------
     kind : knee, hip, ankle: Grood–Suntay angles, that is, intrinsic rotations about z, x, y;
         cardan: the intrinsic `sequence`
-    side : of the body; on the left, rotations about x and y are counted in the mirror
-        image, so that adduction, inversion and internal rotation mean the same on both sides
+    side : of the body; a left joint is read in the mirror image, z → −z, so that adduction,
+        inversion and internal rotation mean the same on both sides
     sequence : three axes, used by cardan only; first and third may be the same axis
     signs : factor of each angle, +1 or −1, used by cardan only
 
@@ -120,11 +120,8 @@ class JointConvention:
 
     @property
     def angle_signs(self) -> FloatArray:
-        """Factor of each raw angle, the side included, shape (3,)."""
-        signs = np.array(_SIGNS.get(self.kind, self.signs), dtype=np.float64)
-        if self.side == "left":
-            signs *= [1.0 if letter == "z" else -1.0 for letter in self.sequence]
-        return signs
+        """Factor of each angle of the intrinsic sequence on the right side, shape (3,)."""
+        return np.array(_SIGNS.get(self.kind, self.signs), dtype=np.float64)
 
 
 def _axes(sequence: str) -> tuple[int, int, int, int, float, bool]:
@@ -143,16 +140,19 @@ def _raw_angles(sequence: str, rotation: FloatArray) -> tuple[FloatArray, FloatA
     else:
         lower, upper = -parity * rotation[..., j, k], rotation[..., k, k]
         second = np.arctan2(parity * rotation[..., i, k], np.hypot(rotation[..., i, i], rotation[..., i, j]))
-    first = np.arctan2(lower, upper)
-    # The third angle is read after undoing the first, so that their sum stays right near the singularity.
+    # Where the two merge the first is set to 0. The third is read after undoing the first, so that
+    # together they stay right near the singularity.
+    first = np.where(np.hypot(lower, upper) < _SINGULAR, 0.0, np.arctan2(lower, upper))
     cosine, sine = np.cos(first), parity * np.sin(first)
     undone = cosine[..., None] * rotation[..., j, :] + sine[..., None] * rotation[..., k, :]
     side = -parity * undone[..., k] if proper else parity * undone[..., i]
     return first, second, np.arctan2(side, undone[..., j])
 
 
-def _checked(proximal_from_distal: ArrayLike) -> FloatArray:
-    return check_rotation(proximal_from_distal, "proximal_from_distal")
+def _on_the_right(convention: JointConvention, proximal_from_distal: ArrayLike) -> FloatArray:
+    """Return the checked rotation; of a left joint its mirror image."""
+    rotation = check_rotation(proximal_from_distal, "proximal_from_distal")
+    return mirror_rotation(rotation) if convention.side == "left" else rotation
 
 
 def joint_angles(convention: JointConvention, proximal_from_distal: ArrayLike) -> FloatArray:
@@ -167,7 +167,7 @@ def joint_angles(convention: JointConvention, proximal_from_distal: ArrayLike) -
     Returns
     -------
     shape (..., 3), rad, in the order of `convention.dof`; NaN where missing. The middle angle
-    of three different axes lies in ±π/2.
+    of three different axes lies in ±π/2. In the singular posture the first angle is 0.
 
     Raises
     ------
@@ -178,7 +178,7 @@ def joint_angles(convention: JointConvention, proximal_from_distal: ArrayLike) -
     -----
     R = R_z(α) R_x(β) R_y(γ): rotation about the floating axis of Grood & Suntay is β.
     """
-    raw = _raw_angles(convention.sequence, _checked(proximal_from_distal))
+    raw = _raw_angles(convention.sequence, _on_the_right(convention, proximal_from_distal))
     return np.stack(raw, axis=-1) * convention.angle_signs
 
 
@@ -215,7 +215,7 @@ def rotation_from_angles(convention: JointConvention, angles: ArrayLike) -> Floa
     result: FloatArray = (
         _elementary(i, raw[..., 0]) @ _elementary(j, raw[..., 1]) @ _elementary(last, raw[..., 2])
     )
-    return result
+    return mirror_rotation(result) if convention.side == "left" else result
 
 
 def angle_jacobian(convention: JointConvention, proximal_from_distal: ArrayLike) -> FloatArray:
@@ -235,7 +235,7 @@ def angle_jacobian(convention: JointConvention, proximal_from_distal: ArrayLike)
     ------
     ShapeError, RotationError : as `joint_angles`.
     """
-    rotation = _checked(proximal_from_distal)
+    rotation = _on_the_right(convention, proximal_from_distal)
     i, j, k, last, parity, proper = _axes(convention.sequence)
     third = _raw_angles(convention.sequence, rotation)[2]
     # The three axes of rotation in the distal frame; the angles' rates are ω in the reciprocal basis.
@@ -256,7 +256,7 @@ def angle_jacobian(convention: JointConvention, proximal_from_distal: ArrayLike)
     volume = np.einsum("...i,...i->...", rows[..., 0, :], first_axis)
     volume = np.where(np.abs(volume) < _SINGULAR, np.nan, volume)
     result: FloatArray = convention.angle_signs[:, None] * rows / volume[..., None, None]
-    return result
+    return result * MIRROR_TANGENT_SIGNS[:3] if convention.side == "left" else result
 
 
 def joint_angle_pose_jacobians(
@@ -308,7 +308,7 @@ def gimbal_margin(convention: JointConvention, proximal_from_distal: ArrayLike) 
     ------
     ShapeError, RotationError : as `joint_angles`.
     """
-    second = _raw_angles(convention.sequence, _checked(proximal_from_distal))[1]
+    second = _raw_angles(convention.sequence, _on_the_right(convention, proximal_from_distal))[1]
     if _axes(convention.sequence)[-1]:
         return np.minimum(second, np.pi - second)
     return np.pi / 2 - np.abs(second)
