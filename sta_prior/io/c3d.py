@@ -19,24 +19,20 @@ from pathlib import Path
 
 import numpy as np
 import xarray as xr
+from numpy.typing import NDArray
 
-from sta_prior.checks import BoolArray, FloatArray
+from sta_prior.checks import FloatArray
 from sta_prior.errors import InputError, StaPriorWarning, message
-from sta_prior.io.c3d_format import (
-    BIG_ENDIAN,
-    C3dContent,
-    decode_floats,
-    order,
-    parse_c3d,
-)
-from sta_prior.io.c3d_write import copy_with_rotations, write_c3d
-from sta_prior.io.points import AXES, Event, check_extent, check_unique, metres_per_unit, points_dataset
-from sta_prior.io.rotations import check_table_rotations
+from sta_prior.io.c3d_format import EXPORT_AGAIN, C3dContent, parse_c3d
+from sta_prior.io.c3d_records import BIG_ENDIAN, BLOCK, SHORT_LIMIT, decode_floats, decode_text, order
+from sta_prior.io.c3d_write import ROTATION_FLOATS, copy_with_rotations, write_c3d
+from sta_prior.io.points import Event, check_extent, check_unique, metres_per_unit, points_dataset
+from sta_prior.io.rotations import check_table_rotations, poses_dataset
 
 __all__ = ["copy_with_rotations", "read_c3d", "read_c3d_rotations", "write_c3d"]
 
-ROTATION_FLOATS = 17
 EVENT_KEY = 12345
+HEADER_EVENTS = 18
 
 
 def read_c3d(path: str | Path) -> xr.Dataset:
@@ -59,32 +55,31 @@ def read_c3d(path: str | Path) -> xr.Dataset:
 
     Warns
     -----
-    StaPriorWarning : no unit declared (mm is taken); more data than the declared frames.
+    StaPriorWarning : no unit declared (mm is taken) or another than mm; more data than declared frames;
+        all events outside the stored frames.
 
     Notes
     -----
-    A negative residual word or a NaN is an occluded point, whatever its coordinates; 0 is kept.
+    A negative residual word or a NaN is an occluded point, whatever its coordinates; 0 is kept. Of points
+    that share a label, those never seen are left out; if two are seen, the file is refused.
     """
     layout = parse_c3d(path)
     unit, factor = _declared_unit(layout)
     position, residual = _decode_points(layout)
     labels = _point_labels(layout)
-    seen: BoolArray = np.asarray(np.isfinite(position[..., 0]).any(axis=0))
-    kept = _without_unseen_twins(labels, seen)
+    kept = _without_unseen_twins(labels, np.atleast_1d(np.isfinite(position[..., 0]).any(axis=0)))
     labels = [labels[number] for number in kept]
     check_unique(labels, layout.path, "label")
-    position, residual = position[:, kept], residual[:, kept]
+    position, residual = position[:, kept] * factor, residual[:, kept] * factor
     if not np.isfinite(position).any():
         raise InputError(
-            message(
-                layout.path, f"none of its {layout.points} points is seen in any frame", "Export it again."
-            )
+            message(layout.path, f"none of its {layout.points} points is seen in any frame", EXPORT_AGAIN)
         )
-    position *= factor
     check_extent(position, unit, layout.path)
+    _warn_of_more_frames(layout)
     return points_dataset(
         position,
-        residual * factor,
+        residual,
         np.arange(layout.frames) / layout.rate,
         labels,
         rate=layout.rate,
@@ -95,16 +90,35 @@ def read_c3d(path: str | Path) -> xr.Dataset:
 
 
 def _declared_unit(layout: C3dContent) -> tuple[str, float]:
-    """Return the unit of the points and its size in metres."""
+    """Return the unit of the points and its size in metres; the standard wants mm."""
     units = [unit for unit in layout.texts("POINT:UNITS") if unit]
+    place = (layout.path, "POINT:UNITS")
+    unit = units[0] if units else "mm"
+    factor = metres_per_unit(unit, place)
     if not units:
-        warnings.warn(
-            message(layout.path, "POINT:UNITS is missing, mm is taken", "State the unit when you export."),
-            StaPriorWarning,
-            stacklevel=3,
+        _warn(message(place, "missing, mm is taken", "State the unit when you export."))
+    elif unit.lower() != "mm":
+        _warn(message(place, f"{unit}, converted to SI; the standard expects mm"))
+    return unit, factor
+
+
+def _warn(text: str) -> None:
+    warnings.warn(text, StaPriorWarning, stacklevel=4)
+
+
+def _warn_of_more_frames(layout: C3dContent) -> None:
+    """Say so where a file declares the most that 16 bits hold, and has data for more."""
+    if layout.frames != SHORT_LIMIT or layout.number("ROTATION:USED"):
+        return
+    stored = (len(layout.content) - layout.data_start - BLOCK) // layout.frame_size
+    if stored > layout.frames:
+        _warn(
+            message(
+                layout.path,
+                f"declares {layout.frames} frames and holds {stored} or more; the rest is not read",
+                "Export it with POINT:LONG_FRAMES.",
+            )
         )
-        return "mm", metres_per_unit("mm", layout.path)
-    return units[0], metres_per_unit(units[0], (layout.path, "POINT:UNITS"))
 
 
 def _point_labels(layout: C3dContent) -> list[str]:
@@ -114,14 +128,14 @@ def _point_labels(layout: C3dContent) -> list[str]:
     return [label or f"unlabelled_{number}" for number, label in enumerate(labels, start=1)]
 
 
-def _without_unseen_twins(labels: list[str], seen: BoolArray) -> list[int]:
+def _without_unseen_twins(labels: list[str], seen: NDArray[np.bool_]) -> list[int]:
     """Return which points to keep: of those that share a label, the ones never seen go (but one stays)."""
+    visible = {label for label, is_seen in zip(labels, seen, strict=True) if is_seen}
     kept: list[int] = []
     for number, label in enumerate(labels):
-        twins = [other for other, name in enumerate(labels) if name == label]
-        visible = [other for other in twins if seen[other]] or twins[:1]
-        if number in visible:
+        if seen[number] or label not in visible:
             kept.append(number)
+            visible.add(label)
     return kept
 
 
@@ -142,35 +156,51 @@ def _decode_points(layout: C3dContent) -> tuple[FloatArray, FloatArray]:
     return position, residual * abs(layout.scale)
 
 
-def _decode_residual(word: FloatArray) -> tuple[BoolArray, FloatArray]:
+def _decode_residual(word: FloatArray) -> tuple[NDArray[np.bool_], FloatArray]:
     """Split the fourth word: the sign bit of its 16 bits says occluded, the low byte is the residual.
 
     Float files hold the word as a number; some write FFFF hex as 65535 instead of −1.
     """
     finite = np.isfinite(word) & (np.abs(word) <= 65536)
     whole = np.where(finite, word, -1.0).astype(np.int64)
-    occluded: BoolArray = ~finite | (word < 0) | ((whole & 0x8000) != 0)
+    occluded = np.asarray(~finite | (word < 0) | ((whole & 0x8000) != 0))
     return occluded, (whole & 0xFF).astype(np.float64)
 
 
 def _events(layout: C3dContent) -> list[Event]:
     """Return the events on the clock whose 0 is the first stored frame; the file counts from frame 1."""
     shift = (layout.first_frame - 1) / layout.rate
-    times = layout.numbers("EVENT:TIMES")
-    used = layout.number("EVENT:USED")
+    events = [event._replace(time=event.time - shift) for event in _stored_events(layout)]
+    last = (layout.frames - 1) / layout.rate
+    if events and not any(-1 / layout.rate <= event.time <= last + 1 / layout.rate for event in events):
+        _warn(
+            message(
+                (layout.path, "EVENT"),
+                f"none of its {len(events)} events falls inside the stored frames, 0 … {last:g} s",
+                "Check the frame numbers, or give the cycles in the study file.",
+            )
+        )
+    return events
+
+
+def _stored_events(layout: C3dContent) -> list[Event]:
+    """Return the events of the EVENT group, or else of the header, in s from frame 1."""
+    times, used = layout.numbers("EVENT:TIMES"), layout.whole("EVENT:USED")
     if times is not None and used is not None:
         clock = times[: len(times) // 2 * 2].reshape(-1, 2) @ (60.0, 1.0)
         labels, contexts = layout.all_texts("EVENT:LABELS"), layout.all_texts("EVENT:CONTEXTS")
-        count = min(int(used), len(clock))
-        labels += [""] * (count - len(labels))
-        contexts += [""] * (count - len(contexts))
-        return [Event(labels[i], float(clock[i] - shift), contexts[i]) for i in range(count)]
-    key, count = struct.unpack_from(order(layout.processor) + "2H", layout.content, 298)
-    if key != EVENT_KEY or count > 18:
-        return []
-    clock = decode_floats(layout.content[304:376], layout.processor)
-    names = [layout.content[396 + 4 * i : 400 + 4 * i].decode("latin-1").strip("\0 ") for i in range(count)]
-    return [Event(name, float(clock[i] - shift), "") for i, name in enumerate(names)]
+    else:
+        key, used = struct.unpack_from(order(layout.processor) + "2H", layout.content, 298)
+        if key != EVENT_KEY or used > HEADER_EVENTS:
+            return []
+        clock = decode_floats(layout.content[304:376], layout.processor)
+        names = layout.content[396:468]
+        labels, contexts = [decode_text(names[at : at + 4]) for at in range(0, len(names), 4)], []
+    count = min(used, len(clock))
+    labels += [""] * (count - len(labels))
+    contexts += [""] * (count - len(contexts))
+    rows = zip(labels, clock, contexts, strict=False)
+    return [Event(label, float(time), context) for label, time, context in rows][:count]
 
 
 def read_c3d_rotations(path: str | Path) -> xr.Dataset:
@@ -196,56 +226,41 @@ def read_c3d_rotations(path: str | Path) -> xr.Dataset:
     reliability, a NaN or a zero matrix is a missing pose. ROTATION:RATE is a whole multiple of POINT:RATE.
     """
     layout = parse_c3d(path)
-    used = int(layout.number("ROTATION:USED") or 0)
+    used = layout.whole("ROTATION:USED") or 0
     if used == 0:
         raise InputError(
             message(layout.path, "no ROTATION group with poses", "Name a file that holds segment poses.")
         )
     unit, factor = _declared_unit(layout)
     ratio = _rotation_ratio(layout)
-    labels = layout.all_texts("ROTATION:LABELS")[:used]
-    if len(labels) < used or not all(labels):
+    labels = [label for label in layout.all_texts("ROTATION:LABELS")[:used] if label]
+    if len(labels) < used:
         raise InputError(
             message(
-                layout.path, f"ROTATION:LABELS holds {len([x for x in labels if x])} names, expected {used}"
+                (layout.path, "ROTATION:LABELS"), f"expected {used} names, got {len(labels)}", EXPORT_AGAIN
             )
         )
-    check_unique(labels, layout.path, "ROTATION label")
+    check_unique(labels, (layout.path, "ROTATION:LABELS"), "label")
     count = layout.frames * ratio
-    start = (int(layout.number("ROTATION:DATA_START") or 0) - 1) * 512
-    size = count * used * ROTATION_FLOATS * 4
-    if start < 512 or start + size > len(layout.content):
-        raise InputError(
-            message(
-                (layout.path, "ROTATION"),
-                f"truncated, expected {max(start, 0) + size} bytes, got {len(layout.content)}",
-                "Copy or export the file again.",
-            )
-        )
-    values = decode_floats(layout.content[start : start + size], layout.processor)
-    values = values.reshape(count, used, ROTATION_FLOATS)
-    reliability = values[..., 16].copy()
+    start = ((layout.whole("ROTATION:DATA_START") or 0) - 1) * BLOCK
+    end = start + count * used * ROTATION_FLOATS * 4
+    if start < BLOCK or end > len(layout.content):
+        wrong = f"truncated, its data are bytes {start} … {end}, the file has {len(layout.content)}"
+        raise InputError(message((layout.path, "ROTATION"), wrong, EXPORT_AGAIN))
+    values = decode_floats(layout.content[start:end], layout.processor).reshape(count, used, ROTATION_FLOATS)
+    reliability = values[..., 16]
     matrix = np.swapaxes(values[..., :16].reshape(count, used, 4, 4), -1, -2)
     missing = ~(reliability >= 0) | ~np.isfinite(matrix).all(axis=(-2, -1)) | ~matrix.any(axis=(-2, -1))
-    rotation = np.where(missing[..., None, None], np.nan, matrix[..., :3, :3])
-    position = np.where(missing[..., None], np.nan, matrix[..., :3, 3]) * factor
     time = np.arange(count) / (layout.rate * ratio)
-    rotation = check_table_rotations(rotation, time, labels, (layout.path, "ROTATION"))
-    return xr.Dataset(
-        {
-            "rotation": (("time", "segment", "row", "col"), rotation, {"units": "1"}),
-            "position": (("time", "segment", "axis"), position, {"units": "m"}),
-            "reliability": (("time", "segment"), reliability, {"units": "1"}),
-        },
-        coords={
-            "time": ("time", time, {"units": "s"}),
-            "segment": ("segment", np.array(labels, dtype=str)),
-            "row": ("row", list(AXES)),
-            "col": ("col", list(AXES)),
-            "axis": ("axis", list(AXES)),
-        },
-        attrs={"rate": layout.rate * ratio, "source": layout.path.name, "units_declared": unit},
+    rotation = np.where(missing[..., None, None], np.nan, matrix[..., :3, :3])
+    dataset = poses_dataset(
+        check_table_rotations(rotation, time, labels, (layout.path, "ROTATION")),
+        np.where(missing[..., None], np.nan, matrix[..., :3, 3]) * factor,
+        time,
+        labels,
+        {"rate": layout.rate * ratio, "source": layout.path.name, "units_declared": unit},
     )
+    return dataset.assign(reliability=(("time", "segment"), reliability.copy(), {"units": "1"}))
 
 
 def _rotation_ratio(layout: C3dContent) -> int:

@@ -1,4 +1,4 @@
-"""Header and parameter section of a C3D file: reading them from bytes, and making records.
+"""Header and parameter section of a C3D file, read from bytes and held against the file's size.
 
 Everything that a length or a pointer in the file promises is checked against the bytes that are
 there, so that a truncated or foreign file ends in a message.
@@ -10,47 +10,35 @@ The C3D file format user guide (C3D.org), header, parameter and 2019 rotation se
 
 from __future__ import annotations
 
+import dataclasses
 import math
 import struct
-from collections.abc import Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 
-import numpy as np
-
 from sta_prior.checks import FloatArray
 from sta_prior.errors import InputError, message
+from sta_prior.io.c3d_records import (
+    BIG_ENDIAN,
+    BLOCK,
+    BYTE,
+    CHARACTER,
+    DEC,
+    FLOAT,
+    FORMAT_KEY,
+    INTEGER,
+    LITTLE_ENDIAN,
+    SHORT_LIMIT,
+    Parameter,
+    Record,
+    decode_floats,
+    decode_numbers,
+    decode_text,
+    order,
+)
 from sta_prior.io.files import read_content
 
-BLOCK = 512
-FORMAT_KEY = 0x50
-LITTLE_ENDIAN, DEC, BIG_ENDIAN = 84, 85, 86
-CHARACTER, BYTE, INTEGER, FLOAT = -1, 1, 2, 4
-SHORT_LIMIT = 65535  # largest frame number that a 16-bit word holds
-_EXPORT_AGAIN = "Copy or export the file again."
-
-
-@dataclass(frozen=True)
-class Parameter:
-    """One parameter: its type code, its dimensions (fastest first) and its bytes."""
-
-    kind: int
-    dimensions: tuple[int, ...]
-    content: bytes
-
-
-@dataclass(frozen=True)
-class Record:
-    """One record of the parameter section: its bytes and whose it is.
-
-    `group` is the group's number (negative for the group's own record), `length` the bytes that
-    the content needs; `data_at` is where, inside the bytes, a parameter's values start.
-    """
-
-    group: int
-    name: str
-    content: bytes
-    data_at: int
+EXPORT_AGAIN = "Copy or export the file again."
 
 
 @dataclass(frozen=True)
@@ -96,6 +84,17 @@ class C3dContent:
         values = self.numbers(name)
         return None if values is None else float(values[0])
 
+    def whole(self, name: str) -> int | None:
+        """Return the first value as a whole number, or None if absent; InputError if it is none."""
+        value = self.number(name)
+        if value is None:
+            return None
+        if not math.isfinite(value) or value != int(value):
+            raise InputError(
+                message((self.path, name), f"expected a whole number, got {value:g}", EXPORT_AGAIN)
+            )
+        return int(value)
+
     def texts(self, name: str) -> list[str]:
         """Return a text parameter as a list, blanks at the end removed; empty if absent."""
         parameter = self.parameters.get(name)
@@ -105,7 +104,7 @@ class C3dContent:
         if not width:
             return []
         parts = [parameter.content[i : i + width] for i in range(0, len(parameter.content), width)]
-        return [_text(part) for part in parts]
+        return [decode_text(part) for part in parts]
 
     def all_texts(self, name: str) -> list[str]:
         """Return a text parameter with its continuations NAME2, NAME3, … joined."""
@@ -114,104 +113,6 @@ class C3dContent:
             texts += self.texts(f"{name}{number}")
             number += 1
         return texts
-
-
-def _text(content: bytes) -> str:
-    """Decode text of unknown encoding (the standard says ASCII) and drop the padding."""
-    content = content.split(b"\0", 1)[0]
-    try:
-        return content.decode("utf-8").strip()
-    except UnicodeDecodeError:
-        return content.decode("latin-1").strip()
-
-
-def decode_floats(content: bytes, processor: int) -> FloatArray:
-    """Decode 32-bit floats of any of the three byte orders, shape (len / 4,)."""
-    if processor == DEC:
-        # a DEC F-float has its 16-bit halves swapped and an exponent larger by two
-        halves = np.frombuffer(content, "<u2").reshape(-1, 2)[:, ::-1]
-        return np.ascontiguousarray(halves).view("<f4").ravel().astype(np.float64) / 4
-    return np.frombuffer(content, ">f4" if processor == BIG_ENDIAN else "<f4").astype(np.float64)
-
-
-def encode_floats(values: FloatArray, processor: int) -> bytes:
-    """Encode 32-bit floats in any of the three byte orders; DEC has no NaN, which becomes 0."""
-    if processor == DEC:
-        scaled = np.ascontiguousarray(np.nan_to_num(values, nan=0.0) * 4, dtype="<f4")
-        return np.ascontiguousarray(scaled.reshape(-1).view("<u2").reshape(-1, 2)[:, ::-1]).tobytes()
-    return np.ascontiguousarray(values, dtype=">f4" if processor == BIG_ENDIAN else "<f4").tobytes()
-
-
-def decode_numbers(content: bytes, kind: int, processor: int) -> FloatArray:
-    """Decode the values of a numeric parameter; bytes and 16-bit integers are unsigned."""
-    if kind == FLOAT:
-        return decode_floats(content, processor)
-    if kind == BYTE:
-        return np.frombuffer(content, np.uint8).astype(np.float64)
-    return np.frombuffer(content, ">u2" if processor == BIG_ENDIAN else "<u2").astype(np.float64)
-
-
-def order(processor: int) -> str:
-    """Return the byte-order sign of integers for struct."""
-    return ">" if processor == BIG_ENDIAN else "<"
-
-
-def parameter_record(
-    group: int, name: str, kind: int, dimensions: Sequence[int], content: bytes, processor: int
-) -> Record:
-    """Make the record of one parameter.
-
-    Parameters
-    ----------
-    group : number of its group, 1 … 127
-    kind : CHARACTER, BYTE, INTEGER or FLOAT
-    dimensions : sizes, fastest first; empty for a scalar
-    content : the values, already in the byte order of `processor`
-    """
-    label = name.encode("ascii")
-    body = struct.pack("bB", kind, len(dimensions)) + bytes(dimensions) + content + b"\0"
-    head = struct.pack("bb", len(label), group) + label
-    data_at = len(head) + 4 + len(dimensions)
-    return Record(group, name, head + struct.pack(order(processor) + "H", len(body) + 2) + body, data_at)
-
-
-def group_record(group: int, name: str, processor: int) -> Record:
-    """Make the record that names a group."""
-    label = name.encode("ascii")
-    content = struct.pack("bb", len(label), -group) + label + struct.pack(order(processor) + "H", 3) + b"\0"
-    return Record(-group, name, content, len(content))
-
-
-def pack_texts(texts: Sequence[str]) -> tuple[tuple[int, int], bytes]:
-    """Return dimensions and bytes of a list of texts, padded with blanks to one width."""
-    encoded = [text.encode("utf-8") for text in texts]
-    width = max((len(text) for text in encoded), default=0)
-    return (width, len(encoded)), b"".join(text.ljust(width) for text in encoded)
-
-
-def pad(content: bytes) -> bytes:
-    """Fill up with zero bytes to a whole number of blocks."""
-    return content + bytes(-len(content) % BLOCK)
-
-
-def parameter_section(records: Sequence[Record], processor: int, place: object) -> bytes:
-    """Join records to a parameter section of whole blocks.
-
-    Raises
-    ------
-    InputError : more than the 255 blocks that the format allows.
-    """
-    body = b"".join(record.content for record in records) + bytes(2)
-    blocks = -(-(len(body) + 4) // BLOCK)
-    if blocks > 255:
-        raise InputError(
-            message(
-                (place,),
-                f"the parameters need {blocks} blocks, a C3D file holds at most 255",
-                "Write fewer points or shorter labels.",
-            )
-        )
-    return pad(bytes([1, FORMAT_KEY, blocks, processor]) + body)
 
 
 def parse_c3d(path: str | Path) -> C3dContent:
@@ -242,7 +143,7 @@ def parse_content(content: bytes, path: Path) -> C3dContent:
     start = (content[0] - 1) * BLOCK
     if len(content) < start + BLOCK:
         raise InputError(
-            message(path, f"truncated, {len(content)} bytes end before the parameters", _EXPORT_AGAIN)
+            message(path, f"truncated, {len(content)} bytes end before the parameters", EXPORT_AGAIN)
         )
     processor = content[start + 3]
     if processor not in (LITTLE_ENDIAN, DEC, BIG_ENDIAN):
@@ -250,7 +151,7 @@ def parse_content(content: bytes, path: Path) -> C3dContent:
             message(
                 path,
                 f"not a C3D file or damaged, expected processor code 84, 85 or 86, got {processor}",
-                _EXPORT_AGAIN,
+                EXPORT_AGAIN,
             )
         )
     end = start + content[start + 2] * BLOCK
@@ -259,7 +160,7 @@ def parse_content(content: bytes, path: Path) -> C3dContent:
             message(
                 path,
                 f"truncated inside its parameters, expected at least {end} bytes, got {len(content)}",
-                _EXPORT_AGAIN,
+                EXPORT_AGAIN,
             )
         )
     records = _read_records(path, content, start + 4, end, processor)
@@ -268,7 +169,7 @@ def parse_content(content: bytes, path: Path) -> C3dContent:
 
 
 def _damaged(path: Path, name: str, what: str) -> InputError:
-    return InputError(message((path, f"parameter {name}"), what, _EXPORT_AGAIN))
+    return InputError(message((path, f"parameter {name}"), what, EXPORT_AGAIN))
 
 
 def _read_records(path: Path, content: bytes, at: int, end: int, processor: int) -> tuple[Record, ...]:
@@ -279,7 +180,7 @@ def _read_records(path: Path, content: bytes, at: int, end: int, processor: int)
         if length == 0 or group == 0:
             break
         after_name = at + 2 + abs(length)
-        name = _text(content[at + 2 : after_name]).upper()
+        name = decode_text(content[at + 2 : after_name]).upper()
         if after_name + 4 > end:
             raise _damaged(path, name, "runs past the end of the parameter section")
         (offset,) = struct.unpack_from(order(processor) + "H", content, after_name)
@@ -316,9 +217,8 @@ def _name_parameters(records: tuple[Record, ...]) -> dict[str, Parameter]:
     named: dict[str, Parameter] = {}
     for record in records:
         if record.group > 0 and record.group in groups:
-            kind, count = struct.unpack_from(
-                "bB", record.content, 4 + abs(struct.unpack_from("b", record.content)[0])
-            )
+            (length,) = struct.unpack_from("b", record.content)
+            kind, count = struct.unpack_from("bB", record.content, 4 + abs(length))
             dimensions = tuple(record.content[record.data_at - count : record.data_at])
             size = abs(kind) * math.prod(dimensions)
             values = record.content[record.data_at : record.data_at + size]
@@ -337,73 +237,100 @@ def _check_layout(
     """Read the header, hold it against the parameters and both against the file's size."""
     points, analog_words, first, last = struct.unpack_from(order(processor) + "4H", content, 2)
     data_block, samples = struct.unpack_from(order(processor) + "2H", content, 16)
-    scale, rate = (
-        float(decode_floats(content[12:16], processor)[0]),
-        float(decode_floats(content[20:24], processor)[0]),
-    )
     found = C3dContent(path, content, processor, start, records, parameters)
     if not any(name.startswith("POINT:") for name in parameters):
-        raise InputError(message(path, "no POINT group among its parameters", _EXPORT_AGAIN))
-    for name, header in (
-        ("POINT:USED", points),
-        ("POINT:DATA_START", data_block),
-    ):
-        stated = found.number(name)
+        raise InputError(message(path, "no POINT group among its parameters", EXPORT_AGAIN))
+    _check_words(found, points, data_block, analog_words, samples)
+    scale, rate = _scale_and_rate(found)
+    layout = dataclasses.replace(
+        found,
+        points=points,
+        analog_words=analog_words,
+        first_frame=first,
+        frames=_count_frames(found, first, last),
+        scale=scale,
+        rate=rate,
+        data_start=(data_block - 1) * BLOCK,
+    )
+    if points == 0 or layout.frames <= 0:
+        raise InputError(
+            message(path, f"holds {points} points and {layout.frames} frames", "Name a file with 3D points.")
+        )
+    available = len(content) - layout.data_start
+    if available < layout.frames * layout.frame_size:
+        whole = max(available, 0) // layout.frame_size
+        raise InputError(
+            message(path, f"truncated, expected {layout.frames} frames, got {whole}", EXPORT_AGAIN)
+        )
+    return layout
+
+
+def _check_words(found: C3dContent, points: int, data_block: int, analog_words: int, samples: int) -> None:
+    """Refuse a header that the parameters contradict: the frames would be cut at wrong places."""
+    for name, header in (("POINT:USED", points), ("POINT:DATA_START", data_block)):
+        stated = found.whole(name)
         if stated is not None and stated != header:
-            raise InputError(message(path, f"{name} is {stated:g}, the header says {header}", _EXPORT_AGAIN))
-    used = found.number("ANALOG:USED")
+            raise InputError(
+                message(found.path, f"{name} is {stated}, the header says {header}", EXPORT_AGAIN)
+            )
+    used = found.whole("ANALOG:USED")
     if used is not None and used * samples != analog_words:
         raise InputError(
             message(
-                path,
-                f"ANALOG:USED {used:g} × {samples} samples a frame is {used * samples:g}, "
+                found.path,
+                f"ANALOG:USED {used} × {samples} samples a frame is {used * samples}, "
                 f"the header says {analog_words}",
-                _EXPORT_AGAIN,
+                EXPORT_AGAIN,
             )
         )
+    if data_block < 2:
+        raise InputError(
+            message(found.path, f"its data start at block {data_block}, expected at least 2", EXPORT_AGAIN)
+        )
+
+
+def _scale_and_rate(found: C3dContent) -> tuple[float, float]:
+    """Return POINT:SCALE and POINT:RATE (Hz); where the parameter is absent, the header's."""
+    in_header = (decode_floats(found.content[at : at + 4], found.processor)[0] for at in (12, 20))
+    header_scale, header_rate = (float(value) for value in in_header)
     stated_scale, stated_rate = found.number("POINT:SCALE"), found.number("POINT:RATE")
-    scale = scale if stated_scale is None else stated_scale
-    rate = rate if stated_rate is None else stated_rate
+    scale = header_scale if stated_scale is None else stated_scale
+    rate = header_rate if stated_rate is None else stated_rate
     if not math.isfinite(scale) or scale == 0:
         raise InputError(
-            message(path, f"POINT:SCALE is {scale:g}, expected a number other than 0", _EXPORT_AGAIN)
+            message(found.path, f"POINT:SCALE is {scale:g}, expected a number other than 0", EXPORT_AGAIN)
+        )
+    if scale * header_scale < 0:  # the sign tells integers from floats
+        raise InputError(
+            message(found.path, f"POINT:SCALE is {scale:g}, the header says {header_scale:g}", EXPORT_AGAIN)
         )
     if not math.isfinite(rate) or rate <= 0:
         raise InputError(
             message(
-                path, f"POINT:RATE is {rate:g} Hz, expected more than 0", "Export it with its frame rate."
+                found.path, f"POINT:RATE is {rate:g} Hz, expected more than 0", "Export it with its rate."
             )
         )
-    frames = _count_frames(found, first, last)
-    layout = C3dContent(
-        path, content, processor, start, records, parameters,
-        points=points, analog_words=analog_words, first_frame=first, frames=frames,
-        scale=scale, rate=rate, data_start=(data_block - 1) * BLOCK,
-    )  # fmt: skip
-    if points == 0 or frames <= 0:
-        raise InputError(
-            message(path, f"holds {points} points and {max(frames, 0)} frames", "Name a file with 3D points.")
-        )
-    if data_block < 2:
-        raise InputError(
-            message(path, f"its data start at block {data_block}, expected at least 2", _EXPORT_AGAIN)
-        )
-    available = len(content) - layout.data_start
-    if available < frames * layout.frame_size:
-        whole = max(available, 0) // layout.frame_size
-        raise InputError(message(path, f"truncated, expected {frames} frames, got {whole}", _EXPORT_AGAIN))
-    return layout
+    return scale, rate
 
 
 def _count_frames(found: C3dContent, first: int, last: int) -> int:
-    """Return the number of frames; the 16-bit words are believed only below their limit."""
+    """Return the number of frames; 16-bit words are not believed at their limit or where they wrapped."""
     span = last - first + 1
-    stated = found.number("POINT:FRAMES")
-    short = span if stated is None or stated == 0 else int(stated)
-    if short == span and last < SHORT_LIMIT and short < SHORT_LIMIT:
+    short = found.whole("POINT:FRAMES") or span
+    long = _long_frames(found)
+    if long is None:
         return short
+    saturated = short >= SHORT_LIMIT or last >= SHORT_LIMIT
+    wrapped = long > SHORT_LIMIT and long % (SHORT_LIMIT + 1) == short
+    return long if saturated or wrapped else short
+
+
+def _long_frames(found: C3dContent) -> int | None:
+    """Return the number of frames from the parameters for long trials, or None."""
     begin, finish = found.numbers("TRIAL:ACTUAL_START_FIELD"), found.numbers("TRIAL:ACTUAL_END_FIELD")
+    words = (1, SHORT_LIMIT + 1)  # low word first
     if begin is not None and finish is not None and len(begin) == len(finish) == 2:
-        return int(finish @ (1, SHORT_LIMIT + 1) - begin @ (1, SHORT_LIMIT + 1)) + 1
-    long = found.number("POINT:LONG_FRAMES")
-    return int(long) if long is not None and math.isfinite(long) else short
+        span = float(finish @ words - begin @ words)
+        if math.isfinite(span):
+            return int(span) + 1
+    return found.whole("POINT:LONG_FRAMES")

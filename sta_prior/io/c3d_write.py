@@ -9,7 +9,6 @@ The C3D file format user guide (C3D.org): sections on writing, events and the 20
 
 from __future__ import annotations
 
-import dataclasses
 import struct
 from collections.abc import Sequence
 from pathlib import Path
@@ -20,13 +19,30 @@ from numpy.typing import ArrayLike
 
 from sta_prior.checks import FloatArray, check_shape
 from sta_prior.errors import InputError, ShapeError, message
-from sta_prior.io import c3d_format as form
+from sta_prior.io.c3d_format import C3dContent, parse_c3d, parse_content
+from sta_prior.io.c3d_records import (
+    BLOCK,
+    FORMAT_KEY,
+    LITTLE_ENDIAN,
+    SHORT_LIMIT,
+    Record,
+    encode_floats,
+    float_record,
+    group_record,
+    integer_record,
+    order,
+    pad,
+    parameter_section,
+    text_records,
+    with_pointer,
+)
 from sta_prior.io.files import atomic_path
 from sta_prior.io.points import check_unique, metres_per_unit, read_events
 
-LABELS_EACH = 255
+ROTATION_FLOATS = 17
 NO_RESIDUAL_SCALE = 0.1  # file units a step of the residual, where no residual is known
 MISSING_RELIABILITY = -1.0
+MOST_EVENTS = 255
 
 
 def write_c3d(
@@ -41,42 +57,36 @@ def write_c3d(
         time s, evenly spaced; attributes rate (Hz) and events
     rotations : dims time, segment, row, col, axis; `rotation` lab ← segment, `position` m, optionally
         `reliability`; a whole multiple of the points' frames
-    unit : unit of length in the file: mm, cm or m
+    unit : unit of length in the file: mm, cm or m; the standard wants mm
 
     Raises
     ------
     InputError : uneven time, a label twice, no frames, or more than the format holds.
+    ShapeError : the rotations do not fit the frames.
 
     Notes
     -----
     Residuals are stored in 1/255 of the largest one and a known residual never becomes 0, which would say
     calculated; an unknown one is written as 0. More than 65535 frames are declared by
-    TRIAL:ACTUAL_START_FIELD and ACTUAL_END_FIELD and POINT:LONG_FRAMES. The clock starts anew at 0.
+    TRIAL:ACTUAL_START_FIELD, TRIAL:ACTUAL_END_FIELD and POINT:LONG_FRAMES. The clock starts anew at 0.
     """
     path = Path(path)
     factor = metres_per_unit(unit, path)
     position = points["position"].transpose("time", "point", "axis").to_numpy() / factor
-    labels = [str(label) for label in points["point"].to_numpy()]
-    check_unique(labels, path, "label")
-    if not position.size:
-        raise InputError(
-            message(path, f"holds {position.shape[1]} points and {len(position)} frames", "Nothing to write.")
-        )
+    labels = [str(label).strip() for label in points["point"].to_numpy()]
+    _check_points(path, labels, position)
     rate = _even_rate(points, path)
     scale, words = _data_words(points, position, factor)
-    records = _point_records(labels, len(position), rate, scale, unit)
+    records = _point_records(labels, len(position), rate, scale, unit, path)
     records += _event_records(points, path)
-    section = form.parameter_section(records, form.LITTLE_ENDIAN, path)
-    data_block = 2 + len(section) // form.BLOCK
-    records = [_with_data_start(record, data_block, form.LITTLE_ENDIAN) for record in records]
-    section = form.parameter_section(records, form.LITTLE_ENDIAN, path)
-    last = min(len(position), form.SHORT_LIMIT)
-    header = struct.pack(
-        "<BB5HfHHf", 2, form.FORMAT_KEY, len(labels), 0, 1, last, 10, scale, data_block, 0, rate
-    )
-    content = form.pad(header) + section + form.pad(words.astype("<f4").tobytes())
+    section = parameter_section(records, LITTLE_ENDIAN, path)
+    data_block = 2 + len(section) // BLOCK
+    section = parameter_section(with_pointer(records, 1, data_block, LITTLE_ENDIAN), LITTLE_ENDIAN, path)
+    last = min(len(position), SHORT_LIMIT)
+    header = struct.pack("<2B5HfHHf", 2, FORMAT_KEY, len(labels), 0, 1, last, 10, scale, data_block, 0, rate)
+    content = pad(header) + section + pad(words.astype("<f4").tobytes())
     if rotations is not None:
-        content = _add_rotations(form.parse_content(content, path), *_rotation_arrays(rotations), path)
+        content = _add_rotations(parse_content(content, path), *_rotation_arrays(rotations), path)
     with atomic_path(path) as temporary:
         temporary.write_bytes(content)
 
@@ -106,17 +116,27 @@ def copy_with_rotations(
 
     Notes
     -----
-    All but the ROTATION group, the section lengths and the data pointers is the source's, byte by byte;
+    All but the ROTATION group, the section's length and the data pointers is the source's, byte by byte;
     byte order and unit of length are the source's too. An older ROTATION group is replaced. 17 floats a
     pose: the 4×4 matrix column by column, then the reliability (C3D 2019 extension).
     """
     target = Path(target)
-    layout = form.parse_c3d(source)
-    content = _add_rotations(
-        layout, labels, check_shape(poses, (None, None, 4, 4), "poses"), reliability, target
-    )
+    poses = check_shape(poses, (None, None, 4, 4), "poses")
+    content = _add_rotations(parse_c3d(source), labels, poses, reliability, target)
     with atomic_path(target) as temporary:
         temporary.write_bytes(content)
+
+
+def _check_points(path: Path, labels: Sequence[str], position: FloatArray) -> None:
+    """Refuse what the format cannot hold."""
+    check_unique(labels, path, "label")
+    if not position.size:
+        wrong = f"{position.shape[1]} points and {len(position)} frames to write"
+        raise InputError(message(path, wrong, "Give at least one of each."))
+    if "" in labels:
+        raise InputError(message((path, f"point {labels.index('') + 1}"), "a blank label", "Name the point."))
+    if len(labels) > SHORT_LIMIT:
+        raise InputError(message(path, f"{len(labels)} points, a C3D file holds at most {SHORT_LIMIT}"))
 
 
 def _even_rate(points: xr.Dataset, path: Path) -> float:
@@ -127,7 +147,7 @@ def _even_rate(points: xr.Dataset, path: Path) -> float:
         raise InputError(
             message(path, f"frame rate {rate:g} Hz, expected more than 0", "Set the attribute rate.")
         )
-    uneven = np.abs(time - time[0] - np.arange(len(time)) / rate) > 0.5 / rate
+    uneven = ~(np.abs(time - time[0] - np.arange(len(time)) / rate) <= 0.5 / rate)
     if uneven.any():
         frame = int(np.argmax(uneven))
         raise InputError(
@@ -154,104 +174,56 @@ def _data_words(points: xr.Dataset, position: FloatArray, factor: float) -> tupl
     return -float(step), words
 
 
-def _text_record(
-    group: int, name: str, texts: Sequence[str], processor: int = form.LITTLE_ENDIAN
-) -> form.Record:
-    dimensions, content = form.pack_texts(texts)
-    return form.parameter_record(group, name, form.CHARACTER, dimensions, content, processor)
-
-
-def _label_records(
-    group: int, name: str, texts: Sequence[str], processor: int = form.LITTLE_ENDIAN
-) -> list[form.Record]:
-    """Return NAME, NAME2, … with at most 255 texts each."""
-    parts = [texts[i : i + LABELS_EACH] for i in range(0, len(texts), LABELS_EACH)]
-    return [
-        _text_record(group, name + (str(i + 1) if i else ""), part, processor) for i, part in enumerate(parts)
-    ]
-
-
-def _integer_record(
-    group: int, name: str, values: Sequence[int], processor: int = form.LITTLE_ENDIAN
-) -> form.Record:
-    content = struct.pack(f"{form.order(processor)}{len(values)}H", *values)
-    dimensions = () if len(values) == 1 else (len(values),)
-    return form.parameter_record(group, name, form.INTEGER, dimensions, content, processor)
-
-
-def _float_record(
-    group: int,
-    name: str,
-    values: ArrayLike,
-    dimensions: Sequence[int] = (),
-    processor: int = form.LITTLE_ENDIAN,
-) -> form.Record:
-    content = form.encode_floats(np.asarray(values, dtype=np.float64), processor)
-    return form.parameter_record(group, name, form.FLOAT, dimensions, content, processor)
-
-
 def _point_records(
-    labels: Sequence[str], frames: int, rate: float, scale: float, unit: str
-) -> list[form.Record]:
+    labels: Sequence[str], frames: int, rate: float, scale: float, unit: str, path: Path
+) -> list[Record]:
     """Return the groups POINT, ANALOG, FORCE_PLATFORM and, for a long trial, TRIAL."""
-    if len(labels) > form.SHORT_LIMIT:
-        raise InputError(
-            message("points", f"{len(labels)} of them, a C3D file holds at most {form.SHORT_LIMIT}")
-        )
-    short = min(frames, form.SHORT_LIMIT)
+    short = min(frames, SHORT_LIMIT)
     records = [
-        form.group_record(1, "POINT", form.LITTLE_ENDIAN),
-        _integer_record(1, "USED", [len(labels)]),
-        _integer_record(1, "FRAMES", [short]),
-        _integer_record(1, "DATA_START", [0]),
-        _float_record(1, "SCALE", [scale]),
-        _float_record(1, "RATE", [rate]),
-        _text_record(1, "UNITS", [unit]),
-        *_label_records(1, "LABELS", labels),
-        *_label_records(1, "DESCRIPTIONS", [" "] * len(labels)),
-        form.group_record(2, "ANALOG", form.LITTLE_ENDIAN),
-        _integer_record(2, "USED", [0]),
-        _float_record(2, "RATE", [0.0]),
-        _float_record(2, "GEN_SCALE", [1.0]),
-        form.group_record(3, "FORCE_PLATFORM", form.LITTLE_ENDIAN),
-        _integer_record(3, "USED", [0]),
+        group_record(1, "POINT", LITTLE_ENDIAN),
+        integer_record(1, "USED", [len(labels)], LITTLE_ENDIAN),
+        integer_record(1, "FRAMES", [short], LITTLE_ENDIAN),
+        integer_record(1, "DATA_START", [0], LITTLE_ENDIAN),
+        float_record(1, "SCALE", [scale], LITTLE_ENDIAN),
+        float_record(1, "RATE", [rate], LITTLE_ENDIAN),
+        *text_records(1, "UNITS", [unit], LITTLE_ENDIAN, path),
+        *text_records(1, "LABELS", labels, LITTLE_ENDIAN, path),
+        *text_records(1, "DESCRIPTIONS", [" "] * len(labels), LITTLE_ENDIAN, path),
+        group_record(2, "ANALOG", LITTLE_ENDIAN),
+        integer_record(2, "USED", [0], LITTLE_ENDIAN),
+        float_record(2, "RATE", [0.0], LITTLE_ENDIAN),
+        float_record(2, "GEN_SCALE", [1.0], LITTLE_ENDIAN),
+        group_record(3, "FORCE_PLATFORM", LITTLE_ENDIAN),
+        integer_record(3, "USED", [0], LITTLE_ENDIAN),
     ]
     if frames > short:
-        long = [frames % (form.SHORT_LIMIT + 1), frames // (form.SHORT_LIMIT + 1)]
+        high, low = divmod(frames, SHORT_LIMIT + 1)
         records += [
-            _float_record(1, "LONG_FRAMES", [float(frames)]),
-            form.group_record(4, "TRIAL", form.LITTLE_ENDIAN),
-            _integer_record(4, "ACTUAL_START_FIELD", [1, 0]),
-            _integer_record(4, "ACTUAL_END_FIELD", long),
+            float_record(1, "LONG_FRAMES", [float(frames)], LITTLE_ENDIAN),
+            group_record(4, "TRIAL", LITTLE_ENDIAN),
+            integer_record(4, "ACTUAL_START_FIELD", [1, 0], LITTLE_ENDIAN),
+            integer_record(4, "ACTUAL_END_FIELD", [low, high], LITTLE_ENDIAN),
         ]
     return records
 
 
-def _event_records(points: xr.Dataset, path: Path) -> list[form.Record]:
+def _event_records(points: xr.Dataset, path: Path) -> list[Record]:
     """Return the EVENT group; times are minutes and seconds from the first frame."""
     events = read_events(points)
     if not events:
         return []
-    if len(events) > 255:
-        raise InputError(message(path, f"{len(events)} events, a C3D file holds at most 255", "Remove some."))
+    if len(events) > MOST_EVENTS:
+        wrong = f"{len(events)} events, a C3D file holds at most {MOST_EVENTS}"
+        raise InputError(message(path, wrong, "Remove some."))
     start = float(points["time"].to_numpy()[0])
     clock = np.array([[0.0, event.time - start] for event in events])
     return [
-        form.group_record(5, "EVENT", form.LITTLE_ENDIAN),
-        _integer_record(5, "USED", [len(events)]),
-        _float_record(5, "TIMES", clock, (2, len(events))),
-        _text_record(5, "LABELS", [event.label or " " for event in events]),
-        _text_record(5, "CONTEXTS", [event.context or " " for event in events]),
+        group_record(5, "EVENT", LITTLE_ENDIAN),
+        integer_record(5, "USED", [len(events)], LITTLE_ENDIAN),
+        float_record(5, "TIMES", clock, LITTLE_ENDIAN, (2, len(events))),
+        *text_records(5, "LABELS", [event.label or " " for event in events], LITTLE_ENDIAN, path),
+        *text_records(5, "CONTEXTS", [event.context or " " for event in events], LITTLE_ENDIAN, path),
     ]
-
-
-def _with_data_start(record: form.Record, block: int, processor: int, group: int = 1) -> form.Record:
-    """Return the record, with the pointer to the data if it is POINT:DATA_START."""
-    if record.group != group or record.name != "DATA_START":
-        return record
-    content = bytearray(record.content)
-    struct.pack_into(form.order(processor) + "H", content, record.data_at, block)
-    return dataclasses.replace(record, content=bytes(content))
 
 
 def _rotation_arrays(rotations: xr.Dataset) -> tuple[list[str], FloatArray, FloatArray]:
@@ -268,66 +240,62 @@ def _rotation_arrays(rotations: xr.Dataset) -> tuple[list[str], FloatArray, Floa
 
 
 def _add_rotations(
-    layout: form.C3dContent, labels: Sequence[str], poses: FloatArray, reliability: ArrayLike, target: Path
+    layout: C3dContent, labels: Sequence[str], poses: FloatArray, reliability: ArrayLike, target: Path
 ) -> bytes:
     """Return the bytes of the file with a ROTATION group of these poses and their data section."""
     count, segments = poses.shape[:2]
-    if segments != len(labels) or not labels:
-        raise ShapeError(
-            message((target, "poses"), f"expected {len(labels)} segments (at least 1), got {segments}")
-        )
+    if segments != len(labels) or not segments:
+        wrong = f"expected {len(labels)} segments as there are labels (at least 1), got {segments}"
+        raise ShapeError(message((target, "poses"), wrong))
     if count == 0 or count % layout.frames:
-        raise ShapeError(
-            message((target, "poses"), f"expected a whole multiple of {layout.frames} frames, got {count}")
-        )
+        wrong = f"expected a whole multiple of {layout.frames} frames, got {count}"
+        raise ShapeError(message((target, "poses"), wrong))
     check_unique(labels, target, "segment")
-    units = [unit for unit in layout.texts("POINT:UNITS") if unit] or ["mm"]
-    factor = metres_per_unit(units[0], (layout.path, "POINT:UNITS"))
     processor = layout.processor
-    numbers = {-record.group: record.name for record in layout.records if record.group < 0}
-    old = [number for number, name in numbers.items() if name == "ROTATION"]
-    point = next(number for number, name in numbers.items() if name == "POINT")
-    kept = [record for record in layout.records if abs(record.group) not in old]
-    free = next(number for number in range(1, 128) if number not in {abs(r.group) for r in kept})
-    ratio = count // layout.frames
-    added = [
-        form.group_record(free, "ROTATION", processor),
-        _integer_record(free, "USED", [segments], processor),
-        _integer_record(free, "DATA_START", [0], processor),
-        _integer_record(free, "RATIO", [ratio], processor),
-        _float_record(free, "RATE", [layout.rate * ratio], (), processor),
-        *_label_records(free, "LABELS", labels, processor),
-        *_label_records(free, "DESCRIPTIONS", [" "] * segments, processor),
-    ]
-    section = form.parameter_section([*kept, *added], processor, target)
-    data_at = layout.section_start + len(section)
-    data = form.pad(layout.content[layout.data_start : layout.data_start + layout.frames * layout.frame_size])
-    blocks = data_at // form.BLOCK + 1, (data_at + len(data)) // form.BLOCK + 1
-    if blocks[1] > form.SHORT_LIMIT:
-        raise InputError(
-            message(
-                target,
-                f"poses would start at block {blocks[1]}, a C3D file reaches {form.SHORT_LIMIT}",
-                "Cut the trial.",
-            )
-        )
-    records = [_with_data_start(record, blocks[0], processor, point) for record in kept]
-    records += [_with_data_start(record, blocks[1], processor, free) for record in added]
+    groups = {record.name: -record.group for record in layout.records if record.group < 0}
+    kept = [record for record in layout.records if abs(record.group) != groups.get("ROTATION")]
+    new = next(number for number in range(1, 128) if number not in {abs(record.group) for record in kept})
+    added = _rotation_records(new, labels, count // layout.frames, layout, target)
+    section = parameter_section([*kept, *added], processor, target)
+    data = pad(layout.content[layout.data_start : layout.data_start + layout.frames * layout.frame_size])
+    data_block = (layout.section_start + len(section)) // BLOCK + 1
+    rotation_block = data_block + len(data) // BLOCK
+    if rotation_block > SHORT_LIMIT:
+        wrong = f"the poses would start at block {rotation_block}, a C3D file reaches {SHORT_LIMIT}"
+        raise InputError(message(target, wrong, "Cut the trial."))
+    records = with_pointer(kept, groups["POINT"], data_block, processor)
+    records += with_pointer(added, new, rotation_block, processor)
+    section = parameter_section(records, processor, target)
     head = bytearray(layout.content[: layout.section_start])
-    struct.pack_into(form.order(processor) + "H", head, 16, blocks[0])
-    section = form.parameter_section(records, processor, target)
-    words = _rotation_words(poses, reliability, factor)
-    return bytes(head) + section + data + form.pad(form.encode_floats(words, processor))
+    struct.pack_into(order(processor) + "H", head, 16, data_block)
+    words = _rotation_words(poses, reliability, layout)
+    return bytes(head) + section + data + pad(encode_floats(words, processor))
 
 
-def _rotation_words(poses: FloatArray, reliability: ArrayLike, factor: float) -> FloatArray:
+def _rotation_records(
+    group: int, labels: Sequence[str], ratio: int, layout: C3dContent, target: Path
+) -> list[Record]:
+    """Return the ROTATION group, its pointer still 0."""
+    processor = layout.processor
+    return [
+        group_record(group, "ROTATION", processor),
+        integer_record(group, "USED", [len(labels)], processor),
+        integer_record(group, "DATA_START", [0], processor),
+        integer_record(group, "RATIO", [ratio], processor),
+        float_record(group, "RATE", [layout.rate * ratio], processor),
+        *text_records(group, "LABELS", labels, processor, target),
+        *text_records(group, "DESCRIPTIONS", [" "] * len(labels), processor, target),
+    ]
+
+
+def _rotation_words(poses: FloatArray, reliability: ArrayLike, layout: C3dContent) -> FloatArray:
     """Return 17 numbers a pose: the matrix column by column, position in the file's unit; reliability."""
-    count, segments = poses.shape[:2]
+    units = [unit for unit in layout.texts("POINT:UNITS") if unit] or ["mm"]
     matrix = poses.copy()
-    matrix[..., :3, 3] /= factor
+    matrix[..., :3, 3] /= metres_per_unit(units[0], (layout.path, "POINT:UNITS"))
     missing = ~np.isfinite(matrix).all(axis=(-2, -1))
     matrix[missing] = np.nan
-    words = np.empty((count, segments, 17))
-    words[..., :16] = np.swapaxes(matrix, -1, -2).reshape(count, segments, 16)
-    words[..., 16] = np.where(missing, MISSING_RELIABILITY, np.broadcast_to(reliability, (count, segments)))
+    words = np.empty((*missing.shape, ROTATION_FLOATS))
+    words[..., :16] = np.swapaxes(matrix, -1, -2).reshape(*missing.shape, 16)
+    words[..., 16] = np.where(missing, MISSING_RELIABILITY, np.broadcast_to(reliability, missing.shape))
     return words

@@ -5,13 +5,15 @@ Conventions: docs/conventions.md.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 
 import numpy as np
+import xarray as xr
 
 from sta_prior.checks import BoolArray, FloatArray, check_rotation
 from sta_prior.errors import InputError, RotationError
+from sta_prior.io.points import AXES
 
 ROUNDING_TOLERANCE = 1e-3
 
@@ -54,3 +56,40 @@ def check_table_rotations(
             raise InputError(str(error)) from None
     left, _, right = np.linalg.svd(whole)
     return np.where(missing[..., None, None], np.nan, left @ right)
+
+
+def poses_dataset(
+    rotation: FloatArray,
+    position: FloatArray,
+    time: FloatArray,
+    segments: Sequence[str],
+    attributes: Mapping[str, object],
+) -> xr.Dataset:
+    """Put poses into a Dataset.
+
+    Parameters
+    ----------
+    rotation : shape (time, segment, 3, 3), unitless, lab ← bone, NaN where missing
+    position : shape (time, segment, 3), m, lab frame, NaN where missing
+    time : shape (time,), s
+    segments : names
+    attributes : of the Dataset
+
+    Returns
+    -------
+    Dataset with dims time, segment, row, col, axis.
+    """
+    return xr.Dataset(
+        {
+            "rotation": (("time", "segment", "row", "col"), rotation, {"units": "1"}),
+            "position": (("time", "segment", "axis"), position, {"units": "m"}),
+        },
+        coords={
+            "time": ("time", time, {"units": "s"}),
+            "segment": ("segment", np.array(segments, dtype=str)),
+            "row": ("row", list(AXES)),
+            "col": ("col", list(AXES)),
+            "axis": ("axis", list(AXES)),
+        },
+        attrs=dict(attributes),
+    )
