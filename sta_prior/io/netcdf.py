@@ -246,7 +246,7 @@ def dataset_digest(dataset: xr.Dataset) -> str:
 def _plain(values: np.ndarray[Any, Any]) -> np.ndarray[Any, Any]:
     """Return little-endian float64 or int64, one NaN and one zero: equal values become equal bytes."""
     if values.dtype.kind == "f":
-        plain = values.astype("<f8") + 0.0
+        plain = np.asarray(values.astype("<f8") + 0.0)  # adding 0.0 makes −0 into 0; a scalar stays an array
         plain[np.isnan(plain)] = np.nan
         return plain
     return values.astype("<i8")

@@ -10,13 +10,20 @@ import tomllib
 from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import Any
+from typing import Any, TypeVar, overload
 
 from sta_prior.checks import nearest
 from sta_prior.errors import InputError, message
 from sta_prior.io.files import read_text
 
-_REQUIRED: Any = object()
+T = TypeVar("T")
+
+
+class _Required:
+    """Stands where no default is given."""
+
+
+_REQUIRED = _Required()
 _KINDS = {
     bool: "true or false",
     int: "a whole number",
@@ -27,9 +34,29 @@ _KINDS = {
 }
 
 
-def _kind(value: object) -> str:
-    """Return how messages call a value's type."""
-    return _KINDS.get(type(value), "a date or time")
+def _is_text(value: object) -> bool:
+    return isinstance(value, str) and bool(value.strip())
+
+
+def _is_number(value: object) -> bool:
+    """Return whether a value is a number that a float can hold."""
+    if isinstance(value, bool) or not isinstance(value, int | float):
+        return False
+    try:
+        return math.isfinite(float(value))
+    except OverflowError:
+        return False
+
+
+def _shown(value: object) -> str:
+    """Return a value as messages show it: what it is and, if short, itself."""
+    kind = _KINDS.get(type(value), "a date or time")
+    if isinstance(value, bool):
+        return "true" if value else "false"
+    if isinstance(value, str | int | float):
+        text = repr(value)
+        return f"{kind}, {text if len(text) <= 40 else text[:37] + '…'}"
+    return kind
 
 
 @dataclass(frozen=True)
@@ -38,142 +65,173 @@ class Table(Mapping[str, Any]):
 
     Parameters
     ----------
-    values : the table's content
+    content : keys and values
     path : the file
-    dotted : place of the table in the file; empty for the whole file
+    dotted : place of the table in the file, as in segment.thigh or subject[1].trial[2]; empty for the file
+
+    Notes
+    -----
+    It is a mapping; the getters below also check the type and name the place where it is wrong. Each raises
+    InputError for a missing key unless a default is given, and for a value of another type.
     """
 
-    values_: Mapping[str, Any] = field(repr=False)
+    content: Mapping[str, Any] = field(repr=False)
     path: Path
     dotted: str = ""
 
     def __getitem__(self, key: str) -> Any:
-        return self.values_[key]
+        return self.content[key]
 
     def __iter__(self) -> Iterator[str]:
-        return iter(self.values_)
+        return iter(self.content)
 
     def __len__(self) -> int:
-        return len(self.values_)
+        return len(self.content)
 
     def place(self, key: str = "") -> tuple[object, ...]:
-        """Return file and dotted place of a key (or of the table itself), for messages."""
-        dotted = ".".join(part for part in (self.dotted, key) if part)
+        """Return file and dotted place of a key, or of the table itself, for messages."""
+        dotted = self._dotted(key)
         return (self.path, dotted) if dotted else (self.path,)
 
-    def _wrong_type(self, key: str, expected: str, value: object) -> InputError:
-        shown = f"{_kind(value)} ({value!r})" if isinstance(value, bool | int | float | str) else _kind(value)
-        return InputError(message(self.place(key), f"expected {expected}, got {shown}", "Correct the value."))
+    def _dotted(self, key: str) -> str:
+        return ".".join(part for part in (self.dotted, key) if part)
 
-    def _value(self, key: str, default: Any, expected: str) -> Any:
-        if key in self.values_:
-            return self.values_[key]
-        if default is _REQUIRED:
-            close = nearest(key, self.values_)
-            raise InputError(
-                message(self.place(key), f"missing, expected {expected}", close or f"Add {key} = ….")
-            )
-        return default
+    def _wrong(self, key: str, expected: str, value: object) -> InputError:
+        return InputError(message(self.place(key), f"expected {expected}, got {_shown(value)}"))
 
-    def text(self, key: str, default: str | None = _REQUIRED) -> Any:
-        """Return a text that is not blank; the default, where given, if the key is absent."""
-        value = self._value(key, default, "a text")
-        if key in self.values_ and (not isinstance(value, str) or not value.strip()):
-            raise self._wrong_type(key, "a text that is not blank", value)
-        return value
+    def _missing(self, key: str, expected: str) -> InputError:
+        do = nearest(key, self.content) or f"Add {key} = …."
+        return InputError(message(self.place(key), f"missing, expected {expected}", do))
 
+    def _get(self, key: str, default: T | _Required, expected: str) -> tuple[bool, Any]:
+        """Return whether the key is there, and its value or else the default."""
+        if key in self.content:
+            return True, self.content[key]
+        if isinstance(default, _Required):
+            raise self._missing(key, expected)
+        return False, default
+
+    @overload
+    def text(self, key: str) -> str: ...
+    @overload
+    def text(self, key: str, default: T) -> str | T: ...
+    def text(self, key: str, default: T | _Required = _REQUIRED) -> str | T:
+        """Return a text that is not blank, or the default."""
+        expected = "a text that is not blank"
+        found, value = self._get(key, default, expected)
+        if found and not _is_text(value):
+            raise self._wrong(key, expected, value)
+        return value  # type: ignore[no-any-return]
+
+    @overload
+    def number(self, key: str, *, minimum: float = ..., maximum: float = ...) -> float: ...
+    @overload
+    def number(self, key: str, default: T, *, minimum: float = ..., maximum: float = ...) -> float | T: ...
     def number(
         self,
         key: str,
-        default: float | None = _REQUIRED,
+        default: T | _Required = _REQUIRED,
         *,
         minimum: float = -math.inf,
         maximum: float = math.inf,
-    ) -> Any:
-        """Return a finite number within the limits, as float; the default if the key is absent."""
-        value = self._value(key, default, "a number")
-        if key not in self.values_:
-            return value
-        if isinstance(value, bool) or not isinstance(value, int | float) or not math.isfinite(value):
-            raise self._wrong_type(key, "a finite number", value)
+    ) -> float | T:
+        """Return a finite number from minimum to maximum, as float, or the default."""
+        found, value = self._get(key, default, "a number")
+        if not found:
+            return value  # type: ignore[no-any-return]
+        if not _is_number(value):
+            raise self._wrong(key, "a finite number", value)
         if not minimum <= value <= maximum:
-            limits = f"at least {minimum:g}" if maximum == math.inf else f"{minimum:g} … {maximum:g}"
-            limits = f"at most {maximum:g}" if minimum == -math.inf else limits
-            raise InputError(
-                message(self.place(key), f"expected {limits}, got {value:g}", "Correct the value.")
-            )
+            limits = [f"at least {minimum:g}"] if minimum > -math.inf else []
+            limits += [f"at most {maximum:g}"] if maximum < math.inf else []
+            raise InputError(message(self.place(key), f"expected {' and '.join(limits)}, got {value:g}"))
         return float(value)
 
-    def flag(self, key: str, default: bool | None = _REQUIRED) -> Any:
-        """Return true or false; the default if the key is absent."""
-        value = self._value(key, default, "true or false")
-        if key in self.values_ and not isinstance(value, bool):
-            raise self._wrong_type(key, "true or false", value)
+    @overload
+    def flag(self, key: str) -> bool: ...
+    @overload
+    def flag(self, key: str, default: T) -> bool | T: ...
+    def flag(self, key: str, default: T | _Required = _REQUIRED) -> bool | T:
+        """Return true or false, or the default."""
+        found, value = self._get(key, default, "true or false")
+        if found and not isinstance(value, bool):
+            raise self._wrong(key, "true or false", value)
+        return value  # type: ignore[no-any-return]
+
+    def choice(self, key: str, allowed: Iterable[str], default: T | _Required = _REQUIRED) -> Any:
+        """Return a text that is one of the allowed, or the default; typed Any, to pass as a Literal."""
+        allowed = list(allowed)
+        expected = f"one of {', '.join(allowed)}"
+        found, value = self._get(key, default, expected)
+        if found and not isinstance(value, str):
+            raise self._wrong(key, expected, value)
+        if found and value not in allowed:
+            wrong = f"expected {expected}, got {value!r}"
+            raise InputError(message(self.place(key), wrong, nearest(value, allowed)))
         return value
 
-    def texts(self, key: str, default: Iterable[str] | None = _REQUIRED) -> Any:
-        """Return a list of texts, none of them blank; the default if the key is absent."""
-        value = self._value(key, default, "a list of texts")
-        if key not in self.values_:
-            return value if value is None else list(value)
+    @overload
+    def texts(self, key: str) -> list[str]: ...
+    @overload
+    def texts(self, key: str, default: T) -> list[str] | T: ...
+    def texts(self, key: str, default: T | _Required = _REQUIRED) -> list[str] | T:
+        """Return a list of texts, none of them blank, or the default."""
+        found, value = self._get(key, default, "a list of texts")
+        if not found:
+            return value  # type: ignore[no-any-return]
         if not isinstance(value, list):
-            raise self._wrong_type(key, "a list of texts", value)
+            raise self._wrong(key, "a list of texts", value)
         for number, item in enumerate(value, start=1):
-            if not isinstance(item, str) or not item.strip():
-                raise self._wrong_type(f"{key}[{number}]", "a text that is not blank", item)
+            if not _is_text(item):
+                raise self._wrong(f"{key}[{number}]", "a text that is not blank", item)
         return list(value)
 
-    def numbers(self, key: str, default: Iterable[float] | None = _REQUIRED) -> Any:
-        """Return a list of finite numbers, as floats; the default if the key is absent."""
-        value = self._value(key, default, "a list of numbers")
-        if key not in self.values_:
-            return value if value is None else list(value)
+    @overload
+    def numbers(self, key: str) -> list[float]: ...
+    @overload
+    def numbers(self, key: str, default: T) -> list[float] | T: ...
+    def numbers(self, key: str, default: T | _Required = _REQUIRED) -> list[float] | T:
+        """Return a list of finite numbers, as floats, or the default."""
+        found, value = self._get(key, default, "a list of numbers")
+        if not found:
+            return value  # type: ignore[no-any-return]
         if not isinstance(value, list):
-            raise self._wrong_type(key, "a list of numbers", value)
+            raise self._wrong(key, "a list of numbers", value)
         for number, item in enumerate(value, start=1):
-            if isinstance(item, bool) or not isinstance(item, int | float) or not math.isfinite(item):
-                raise self._wrong_type(f"{key}[{number}]", "a finite number", item)
+            if not _is_number(item):
+                raise self._wrong(f"{key}[{number}]", "a finite number", item)
         return [float(item) for item in value]
 
-    def choice(self, key: str, allowed: Iterable[str], default: str | None = _REQUIRED) -> Any:
-        """Return a text that is one of the allowed; the default if the key is absent."""
-        allowed = list(allowed)
-        value = self._value(key, default, f"one of {', '.join(allowed)}")
-        if key not in self.values_:
-            return value
-        if not isinstance(value, str):
-            raise self._wrong_type(key, f"one of {', '.join(allowed)}", value)
-        if value not in allowed:
-            raise InputError(
-                message(
-                    self.place(key),
-                    f"expected one of {', '.join(allowed)}, got {value!r}",
-                    nearest(value, allowed) or "Choose one of them.",
-                )
-            )
-        return value
-
-    def table(self, key: str, default: Mapping[str, Any] | None = _REQUIRED) -> Table:
-        """Return a table; the default, where given, as a table if the key is absent."""
-        value = self._value(key, default, "a table")
+    def table(self, key: str, default: Mapping[str, Any] | _Required = _REQUIRED) -> Table:
+        """Return a table that knows its place; the default too becomes one."""
+        _, value = self._get(key, default, "a table")
         if not isinstance(value, Mapping):
-            raise self._wrong_type(key, "a table", value)
-        return Table(value, self.path, str(self.place(key)[1]))
+            raise self._wrong(key, "a table", value)
+        return Table(value, self.path, self._dotted(key))
 
-    def tables(self, key: str, default: Iterable[Mapping[str, Any]] | None = _REQUIRED) -> list[Table]:
-        """Return an array of tables; its members are numbered from 1 in messages."""
-        value = self._value(key, default, "an array of tables")
-        if not isinstance(value, list | tuple) or not all(isinstance(item, Mapping) for item in value):
-            raise self._wrong_type(key, f"an array of tables ([[{key}]])", value)
-        dotted = str(self.place(key)[1])
-        return [Table(item, self.path, f"{dotted}[{number}]") for number, item in enumerate(value, start=1)]
+    def tables(self, key: str, default: Iterable[Mapping[str, Any]] | _Required = _REQUIRED) -> list[Table]:
+        """Return an array of tables that know their places, numbered from 1; the default too becomes one."""
+        expected = f"an array of tables, [[{self._bare(key)}]]"
+        found, value = self._get(key, default, expected)
+        if found and not isinstance(value, list):
+            raise self._wrong(key, expected, value)
+        tables = list(value)
+        if not all(isinstance(item, Mapping) for item in tables):
+            raise self._wrong(key, expected, value)
+        dotted = self._dotted(key)
+        return [Table(item, self.path, f"{dotted}[{number}]") for number, item in enumerate(tables, start=1)]
+
+    def _bare(self, key: str) -> str:
+        """Return the dotted place as a TOML header writes it, without numbers."""
+        parts = self._dotted(key).split(".")
+        return ".".join(part.split("[")[0] for part in parts)
 
     def refuse_unknown(self, allowed: Iterable[str]) -> None:
         """Raise InputError for the first key that is not allowed, with the nearest right one."""
         allowed = list(allowed)
-        for key in self.values_:
+        for key in self.content:
             if key not in allowed:
-                do = nearest(key, allowed) or f"Known keys: {', '.join(allowed)}."
+                do = nearest(key, allowed) or f"Known here: {', '.join(allowed)}."
                 raise InputError(message(self.place(key), f"unknown key {key!r}", do))
 
 
@@ -197,11 +255,11 @@ def read_toml(path: str | Path) -> Table:
     try:
         return Table(tomllib.loads(text), path)
     except tomllib.TOMLDecodeError as error:
-        what = str(error)
-        wrong, _, where = what.partition(" (at ")
-        where = where.rstrip(")") or "line 1"
-        if where == "end of document":
+        wrong, _, where = str(error).partition(" (at ")
+        where = where.rstrip(")")
+        if not where.startswith("line"):
             where = f"line {len(text.splitlines())}"
-        raise InputError(
-            message((path, where), f"not TOML: {wrong[0].lower()}{wrong[1:]}", "Correct the line.")
-        ) from None
+        wrong = f"not TOML ({wrong[0].lower()}{wrong[1:]})"
+        raise InputError(message((path, where), wrong, "Correct the line.")) from None
+    except RecursionError:
+        raise InputError(message(path, "not TOML (nested too deeply)", "Flatten it.")) from None
