@@ -1,1 +1,18 @@
-"""Placeholder."""
+"""Artifact priors: what they hand the solver, the families, learning and validation."""
+
+from sta_prior.prior.base import Binding, Prior
+from sta_prior.prior.files import load_prior
+from sta_prior.prior.interface import Artifact, IsotropicArtifact, Moments
+from sta_prior.prior.learn import DEFAULT_FAMILY, FAMILIES, learn
+
+__all__ = [
+    "DEFAULT_FAMILY",
+    "FAMILIES",
+    "Artifact",
+    "Binding",
+    "IsotropicArtifact",
+    "Moments",
+    "Prior",
+    "learn",
+    "load_prior",
+]

@@ -1,1 +1,5 @@
-"""Placeholder."""
+"""Estimators: frame-wise least squares and maximum a posteriori, and the trial they are told as."""
+
+from sta_prior.solve.trial import DEFAULT_ESTIMATOR, ESTIMATORS, solve
+
+__all__ = ["DEFAULT_ESTIMATOR", "ESTIMATORS", "solve"]

@@ -64,7 +64,8 @@ def read_study(path: str | Path) -> Study:
     top.refuse_unknown(STUDY_KEYS)
     lab_path = existing_file(top, "lab", "the study", (".toml",))
     lab = read_lab(lab_path)
-    subjects = [_read_subject(table, lab) for table in top.tables("subject")]
+    invented = top.flag("invented_data", False)
+    subjects = [_read_subject(table, lab, invented) for table in top.tables("subject")]
     if not subjects:
         raise InputError(message(top.place("subject"), "no subjects, expected at least one"))
     _refuse_repeated([subject.id for subject in subjects], top, "subject")
@@ -73,12 +74,12 @@ def read_study(path: str | Path) -> Study:
         lab=lab,
         subjects=tuple(subjects),
         path=Path(path),
-        invented=top.flag("invented_data", False),
+        invented=invented,
         title=top.text("title", lab.title),
     )
 
 
-def _read_subject(table: Table, lab: Lab) -> Subject:
+def _read_subject(table: Table, lab: Lab, invented: bool) -> Subject:
     """Read one [[subject]] with its trials."""
     covariates = {
         key: table.number(key)
@@ -117,6 +118,7 @@ def _read_subject(table: Table, lab: Lab) -> Subject:
         bone_static_path=paths["bone_static"],
         reference_points_path=paths["reference_points"],
         study_path=table.path,
+        invented=invented,
     )
     trials = tuple(_read_trial(trial, subject) for trial in table.tables("trial", ()))
     _refuse_repeated([trial.id for trial in trials], table, "trial")

@@ -145,6 +145,7 @@ class Subject:
     trials : in the order of the study file
     static_path, bone_static_path, reference_points_path : files of the reference posture
     study_path : the study file, for messages
+    invented : whether the study declares its data invented
     """
 
     id: str
@@ -155,6 +156,7 @@ class Subject:
     bone_static_path: Path | None
     reference_points_path: Path | None
     study_path: Path
+    invented: bool = False
     trials: tuple[Trial, ...] = field(default=(), repr=False)
     _kept: dict[str, Reference] = field(default_factory=dict, init=False, repr=False)
 

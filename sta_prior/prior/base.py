@@ -1,0 +1,330 @@
+"""A learned prior: what it holds, and how it is bound to a trial.
+
+Shell: holds the labels. Conventions: docs/conventions.md.
+"""
+
+from __future__ import annotations
+
+import warnings
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
+from pathlib import Path
+
+import numpy as np
+import xarray as xr
+
+from sta_prior.checks import FloatArray, nearest
+from sta_prior.errors import MismatchError, StaPriorWarning, message
+from sta_prior.pairs.pairing import segment_side
+from sta_prior.prior.hierarchy import (
+    Hierarchy,
+    TrialStatistics,
+    Weights,
+    new_subject,
+    subject_posterior,
+    trial_posterior,
+    without_subject,
+)
+from sta_prior.prior.interface import Artifact
+from sta_prior.prior.linear import Basis, LinearArtifact, Term
+from sta_prior.prior.statistics import mirror_signs, segment_frames, summarise
+from sta_prior.study import Lab, Trial
+
+
+@dataclass(frozen=True)
+class JointLabel:
+    """A joint as the prior knows it: name, kind, the bones it joins and its degrees of freedom."""
+
+    name: str
+    kind: str
+    proximal: str
+    distal: str
+    dof: tuple[str, ...]
+
+
+@dataclass(frozen=True)
+class LearnedTrial:
+    """A trial that the prior learned from: digest of its skin file, instants used, s."""
+
+    subject: str
+    trial: str
+    activity: str
+    digest: str
+    times: FloatArray
+
+
+@dataclass(frozen=True)
+class SegmentModel:
+    """What was learned of one segment.
+
+    markers: in output order; layout: (m, 3) m, mean reference positions, right side; basis, hierarchy,
+    trials: of the linear family; time_constant: s; inflation: factor on the spread of a new subject's
+    trial-constant weights, from left-out subjects.
+    """
+
+    name: str
+    markers: tuple[str, ...]
+    layout: FloatArray
+    basis: Basis
+    hierarchy: Hierarchy
+    trials: tuple[TrialStatistics, ...]
+    time_constant: float
+    inflation: float = 1.0
+
+    @property
+    def fixed_at_reference(self) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
+        """Features without a population weight: the constant one."""
+        return np.arange(self.basis.size) == 0
+
+
+@dataclass(frozen=True)
+class Binding:
+    """A prior bound to a trial: an artifact per segment of the lab, and what it rests on.
+
+    informed_times: s, instants of this trial whose bone truth informed the weights;
+    basis_of_belief: words.
+    """
+
+    artifacts: dict[str, Artifact]
+    informed_times: FloatArray
+    basis_of_belief: str
+
+
+@dataclass(frozen=True)
+class Prior:
+    """An artifact prior for the segments of one marker set.
+
+    Attributes
+    ----------
+    family : name of the family
+    joints : joints whose angles drive the artifact
+    segments : by name
+    trials : what it learned from
+    covariates : by subject
+    validation : Dataset of left-out figures, see prior.validate
+    notes : what a user should know, in words
+    invented : learned from invented data
+    pairs_digest : content digest of the paired data
+    """
+
+    family: str
+    joints: tuple[JointLabel, ...]
+    segments: Mapping[str, SegmentModel]
+    trials: tuple[LearnedTrial, ...]
+    validation: xr.Dataset
+    notes: tuple[str, ...] = ()
+    invented: bool = False
+    pairs_digest: str = ""
+    covariates: Mapping[str, Mapping[str, float]] = field(default_factory=dict)
+
+    @property
+    def subjects(self) -> tuple[str, ...]:
+        """Subjects it learned from, sorted."""
+        return tuple(sorted({trial.subject for trial in self.trials}))
+
+    @property
+    def is_personal(self) -> bool:
+        """Whether it learned from one subject only."""
+        return len(self.subjects) == 1
+
+    def save(self, path: str | Path) -> None:
+        """Write the prior as NetCDF, atomically; data only, nothing is pickled."""
+        from sta_prior.prior.files import write_prior
+
+        write_prior(Path(path), self)
+
+    @property
+    def digest(self) -> str:
+        """Digest of the content, as stored in solutions."""
+        from sta_prior.prior.files import prior_digest
+
+        return prior_digest(self)
+
+    def bind(self, trial: Trial, personal: xr.Dataset | None = None) -> Binding:
+        """Bind the prior to a trial.
+
+        Parameters
+        ----------
+        trial : the trial to solve
+        personal : paired data that hold the trial's subject; frames that the prior already
+            learned from are recognised by their digest and not counted twice
+
+        Returns
+        -------
+        Binding
+
+        Raises
+        ------
+        MismatchError : the lab's markers or joints do not fit the prior.
+        """
+        lab = trial.subject.lab
+        joint_columns = self._match_joints(lab)
+        own_data = self._personal_pairs(trial, personal)
+        reference = trial.subject.reference()
+        artifacts: dict[str, Artifact] = {}
+        for segment in lab.segments:
+            model = self._match_segment(segment.name, segment.markers, lab)
+            weights = self._weights(model, trial, own_data)
+            outputs = [3 * model.markers.index(marker) + axis for marker in segment.markers for axis in range(3)]
+            artifacts[segment.name] = _select(
+                model,
+                weights,
+                np.array(outputs),
+                joint_columns,
+                reference.angles,
+                segment_side(lab, segment.name),
+            )
+        times, words = self._what_informs(trial, own_data)
+        return Binding(artifacts, times, words)
+
+    def _match_joints(self, lab: Lab) -> list[int]:
+        """Position in the lab of every joint of the prior."""
+        names = [joint.name for joint in lab.joints]
+        columns = []
+        for joint in self.joints:
+            if joint.name not in names:
+                raise MismatchError(
+                    message(
+                        lab.path,
+                        f"prior needs the angles of joint {joint.name}, lab has {', '.join(names) or 'none'}",
+                        f"Add joint.{joint.name} to the lab file. {nearest(joint.name, names)}".strip(),
+                    )
+                )
+            index = names.index(joint.name)
+            if lab.joints[index].convention.kind != joint.kind:
+                raise MismatchError(
+                    message(
+                        (lab.path, f"joint.{joint.name}"),
+                        f"prior expects kind {joint.kind}, lab has {lab.joints[index].convention.kind}",
+                    )
+                )
+            columns.append(index)
+        return columns
+
+    def _match_segment(self, name: str, markers: tuple[str, ...], lab: Lab) -> SegmentModel:
+        if name not in self.segments:
+            known = ", ".join(self.segments)
+            raise MismatchError(
+                message(
+                    (lab.path, f"segment.{name}"),
+                    f"not in the prior, which knows {known}",
+                    f"Learn a prior with it. {nearest(name, self.segments)}".strip(),
+                )
+            )
+        model = self.segments[name]
+        unknown = [marker for marker in markers if marker not in model.markers]
+        if unknown:
+            raise MismatchError(
+                message(
+                    (lab.path, f"segment.{name}"),
+                    f"prior expects {name} markers {' '.join(model.markers)}, lab has {' '.join(markers)}",
+                    f"Rename {unknown[0]} or learn a prior with it.",
+                )
+            )
+        return model
+
+    def _personal_pairs(self, trial: Trial, personal: xr.Dataset | None) -> xr.Dataset | None:
+        """The subject's own trials of the personal pairs that the prior has not learned from."""
+        if personal is None:
+            return None
+        mine = [str(name) == trial.subject.id for name in personal["trial_subject"].values]
+        if not any(mine):
+            warnings.warn(
+                message(
+                    (trial.subject.id, trial.id),
+                    "the personal pairs hold no frames of this subject",
+                    "Solved with the population prior.",
+                ),
+                StaPriorWarning,
+                stacklevel=3,
+            )
+        known = {item.digest for item in self.trials}
+        new = [
+            index
+            for index, is_mine in enumerate(mine)
+            if is_mine and str(personal["trial_digest"].values[index]) not in known
+        ]
+        return personal.isel(trial=new)
+
+    def _weights(self, model: SegmentModel, trial: Trial, own_data: xr.Dataset | None) -> Weights:
+        subject = trial.subject.id
+        wants_own = own_data is not None or (self.is_personal and subject in self.subjects)
+        if not wants_own:
+            return new_subject(model.hierarchy, model.inflation)
+        own = [item for item in model.trials if item.subject == subject]
+        hierarchy = model.hierarchy
+        if own:
+            hierarchy = without_subject(hierarchy, list(model.trials), model.fixed_at_reference, subject)
+        if own_data is not None and own_data.sizes["trial"]:
+            dof = {joint.name: joint.dof for joint in self.joints}
+            frames = segment_frames(own_data, model.name, model.markers, dof)
+            own += [summarise(item, model.basis, model.time_constant) for item in frames]
+        if not own:
+            return new_subject(model.hierarchy, model.inflation)
+        wider = replace(
+            hierarchy,
+            subject_features=model.inflation * hierarchy.subject_features,
+            trial_features=model.inflation * hierarchy.trial_features,
+        )
+        key = self._trial_key(trial, own_data)
+        if key is None:
+            belief = subject_posterior(wider, own)
+            return Weights(belief.mean, belief.covariance + wider.trial_covariance)
+        return trial_posterior(wider, own, key)
+
+    def _trial_key(self, trial: Trial, own_data: xr.Dataset | None) -> str | None:
+        """Name under which this very trial's frames were learned; None if they were not."""
+        digest = trial.digest()
+        for item in self.trials:
+            if item.subject == trial.subject.id and item.digest == digest:
+                return item.trial
+        if own_data is not None:
+            for index, other in enumerate(own_data["trial_digest"].values):
+                if str(other) == digest:
+                    return str(own_data["trial_id"].values[index])
+        return None
+
+    def _what_informs(self, trial: Trial, own_data: xr.Dataset | None) -> tuple[FloatArray, str]:
+        subject, digest = trial.subject.id, trial.digest()
+        times = [item.times for item in self.trials if item.subject == subject and item.digest == digest]
+        own_frames = own_data is not None or (self.is_personal and subject in self.subjects)
+        if own_data is not None:
+            for index, other in enumerate(own_data["trial_digest"].values):
+                if str(other) == digest:
+                    here = (own_data["subject"].values == subject) & (
+                        own_data["trial"].values == own_data["trial_id"].values[index]
+                    )
+                    times.append(own_data["time"].values[here])
+        informed = np.concatenate(times) if times else np.zeros(0)
+        if own_frames and (subject in self.subjects or (own_data is not None and own_data.sizes["trial"])):
+            words = "the subject's own paired frames and the prior"
+        else:
+            words = f"a prior of {len(self.subjects)} other subject(s)"
+            if subject in self.subjects:
+                words = f"a prior of {len(self.subjects)} subject(s), this one among them"
+        return informed, words
+
+
+def _select(
+    model: SegmentModel,
+    weights: Weights,
+    outputs: np.ndarray[tuple[int], np.dtype[np.int64]],
+    joint_columns: list[int],
+    reference_angles: FloatArray,
+    side: str,
+) -> Artifact:
+    """Keep a trial's markers, mirror to its side, and point the basis at the lab's joints."""
+    count, n = weights.mean.shape
+    signs = mirror_signs(len(model.markers)) if side == "left" else np.ones(n)
+    both = np.tile(signs, count)
+    keep = (n * np.arange(count)[:, None] + outputs).reshape(-1)
+    covariance = (weights.covariance * np.outer(both, both))[np.ix_(keep, keep)]
+    residual = (model.hierarchy.residual * np.outer(signs, signs))[np.ix_(outputs, outputs)]
+    terms = tuple(Term(joint_columns[term.joint], term.dof, term.power) for term in model.basis.terms)
+    return LinearArtifact(
+        basis=Basis(terms),
+        weights=Weights((weights.mean * signs)[:, outputs], covariance),
+        residual=residual,
+        time_constant=model.time_constant,
+        reference=reference_angles,
+    )

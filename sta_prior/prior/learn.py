@@ -1,0 +1,205 @@
+"""Learn a prior from paired data.
+
+Shell: holds the labels. Conventions: docs/conventions.md.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import replace
+
+import numpy as np
+import xarray as xr
+
+from sta_prior.checks import FloatArray, nearest
+from sta_prior.errors import InputError, message
+from sta_prior.io.netcdf import dataset_digest
+from sta_prior.prior.base import JointLabel, LearnedTrial, Prior, SegmentModel
+from sta_prior.prior.hierarchy import fit_hierarchy
+from sta_prior.prior.linear import linear_basis
+from sta_prior.prior.statistics import SegmentFrames, estimate_time_constant, segment_frames, summarise
+from sta_prior.prior.validate import calibrate_inflation, leave_one_out, summarise_validation
+
+FAMILIES = ("linear",)
+DEFAULT_FAMILY = "linear"
+
+
+def joint_labels(pairs: xr.Dataset) -> tuple[JointLabel, ...]:
+    """Joints of paired data with their degrees of freedom."""
+    names = [str(name) for name in pairs["dof"].values]
+    known = np.isfinite(pairs["reference_angle"].values).any(axis=0) | np.isfinite(pairs["angle"].values).any(
+        axis=0
+    )
+    labels = []
+    for index, joint in enumerate(pairs["joint"].values):
+        dof = tuple(name for column, name in enumerate(names) if known[index, column])
+        labels.append(
+            JointLabel(
+                name=str(joint),
+                kind=str(pairs["joint_kind"].values[index]),
+                proximal=str(pairs["joint_proximal"].values[index]),
+                distal=str(pairs["joint_distal"].values[index]),
+                dof=dof,
+            )
+        )
+    return tuple(labels)
+
+
+def _without(pairs: xr.Dataset, hold_out: Sequence[str]) -> xr.Dataset:
+    subjects = [str(name) for name in pairs["subject_id"].values]
+    for name in hold_out:
+        if name not in subjects:
+            raise InputError(
+                message(
+                    "--hold-out",
+                    f"subject {name} is not in the paired data, which has {', '.join(subjects)}",
+                    nearest(name, subjects),
+                )
+            )
+    keep = [index for index, name in enumerate(subjects) if name not in hold_out]
+    if not keep:
+        raise InputError(message("--hold-out", "leaves no subject to learn from"))
+    kept = {subjects[index] for index in keep}
+    frames = np.flatnonzero([str(name) in kept for name in pairs["subject"].values])
+    trials = [i for i, name in enumerate(pairs["trial_subject"].values) if str(name) in kept]
+    return pairs.isel(subject=keep, frame=frames, trial=trials)
+
+
+def _layout(pairs: xr.Dataset, segment: str, markers: Sequence[str]) -> FloatArray:
+    """Mean reference position of every marker, (m, 3) m, right side."""
+    columns = [list(pairs["marker"].values).index(marker) for marker in markers]
+    positions = pairs["reference"].values[:, columns].copy()
+    names = [str(name) for name in pairs["segment"].values]
+    left = pairs["segment_side"].values[:, names.index(segment)] == "left"
+    positions[left, :, 2] *= -1.0
+    mean: FloatArray = positions.mean(axis=0)
+    return mean
+
+
+def _learn_segment(pairs: xr.Dataset, segment: str, joints: tuple[JointLabel, ...]) -> SegmentModel:
+    markers = tuple(
+        str(marker)
+        for marker, own in zip(pairs["marker"].values, pairs["marker_segment"].values, strict=True)
+        if str(own) == segment
+    )
+    dof = {joint.name: joint.dof for joint in joints}
+    frames = segment_frames(pairs, segment, markers, dof)
+    if not frames:
+        raise InputError(
+            message(("pairs", segment), "no frame has both a visible marker and all joint angles")
+        )
+    adjacent = tuple(i for i, joint in enumerate(joints) if segment in (joint.proximal, joint.distal))
+    basis = linear_basis(adjacent, len({item.subject for item in frames}))
+    constant = estimate_time_constant(frames, basis)
+    trials = tuple(summarise(item, basis, constant) for item in frames)
+    _refuse_unseen(segment, markers, frames)
+    model = SegmentModel(
+        name=segment,
+        markers=markers,
+        layout=_layout(pairs, segment, markers),
+        basis=basis,
+        hierarchy=fit_hierarchy(list(trials), np.arange(basis.size) == 0),
+        trials=trials,
+        time_constant=constant,
+    )
+    return model
+
+
+def _refuse_unseen(segment: str, markers: tuple[str, ...], frames: list[SegmentFrames]) -> None:
+    seen = np.any([np.isfinite(item.displacement).any(axis=0) for item in frames], axis=0)
+    for index, marker in enumerate(markers):
+        if not seen[3 * index]:
+            raise InputError(
+                message(
+                    ("pairs", segment, f"marker {marker}"),
+                    "never seen together with bone truth",
+                    "Drop it from the lab file or pair a trial that shows it.",
+                )
+            )
+
+
+def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[str] = ()) -> Prior:
+    """Learn an artifact prior and validate it on subjects left out.
+
+    Parameters
+    ----------
+    pairs : paired data, as from `pair`
+    family : "linear"
+    hold_out : subjects that must not be learned from
+
+    Returns
+    -------
+    Prior with its validation inside. With one subject it is a personal prior and its notes say so.
+
+    Raises
+    ------
+    InputError : unknown family or subject, or no usable frame.
+    """
+    if family not in FAMILIES:
+        raise InputError(
+            message(
+                "--family",
+                f"no family {family} here, known: {', '.join(FAMILIES)}",
+                nearest(family, FAMILIES),
+            )
+        )
+    chosen = _without(pairs, hold_out) if hold_out else pairs
+    joints = joint_labels(chosen)
+    if not joints:
+        raise InputError(message("pairs", "no joint, so no angle can drive the artifact", "Add a joint."))
+    dof = {joint.name: joint.dof for joint in joints}
+    segments: dict[str, SegmentModel] = {}
+    figures = []
+    for name in (str(segment) for segment in chosen["segment"].values):
+        model = _learn_segment(chosen, name, joints)
+        frames = segment_frames(chosen, name, model.markers, dof)
+        left_out = leave_one_out(model, frames)
+        model = replace(model, inflation=calibrate_inflation(left_out))
+        segments[name] = model
+        figures.append(summarise_validation(name, left_out, model.inflation))
+    trials = tuple(
+        LearnedTrial(
+            subject=str(chosen["trial_subject"].values[index]),
+            trial=str(chosen["trial_id"].values[index]),
+            activity=str(chosen["trial_activity"].values[index]),
+            digest=str(chosen["trial_digest"].values[index]),
+            times=chosen["time"].values[
+                (chosen["subject"].values == chosen["trial_subject"].values[index])
+                & (chosen["trial"].values == chosen["trial_id"].values[index])
+            ],
+        )
+        for index in range(chosen.sizes["trial"])
+    )
+    return Prior(
+        family=family,
+        joints=joints,
+        segments=segments,
+        trials=trials,
+        validation=xr.concat(figures, dim="segment"),
+        notes=_notes(trials),
+        invented=bool(chosen.attrs.get("invented_data", 0)),
+        pairs_digest=dataset_digest(pairs),
+    )
+
+
+def _notes(trials: tuple[LearnedTrial, ...]) -> tuple[str, ...]:
+    count = len({trial.subject for trial in trials})
+    if count == 1:
+        return (
+            f"Personal prior: it learned from one subject, {trials[0].subject}, and holds for that subject. "
+            "The spread between subjects is assumed, not learned; for anyone else its intervals are wide "
+            "and unverified.",
+            "Artifact follows joint flexion only: regressed on a small range of the other angles, which it "
+            "corrupts itself, it can end up worse than the rigid fit.",
+        )
+    notes = []
+    if count < 9:
+        notes.append(
+            f"{count} subjects: too few to certify a 90 % band without assumptions, which needs at least "
+            "nine (n ≥ 1/α − 1 exchangeable subjects)."
+        )
+    elif count < 19:
+        notes.append(
+            f"{count} subjects cannot certify a 95 % band without assumptions, which needs at least nineteen."
+        )
+    return tuple(notes)

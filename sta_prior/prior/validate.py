@@ -1,0 +1,172 @@
+"""How well a prior predicts the artifact of subjects that it has not learned from.
+
+Shell over arrays. Conventions: docs/conventions.md.
+
+Every subject in turn (with one subject: every trial, labelled so) is left out; the population is
+conditioned on the others with the learned covariances, and the left-out displacement is predicted
+frame by frame.
+
+References
+----------
+Gneiting & Raftery (2007), JASA 102, 359–378 (CRPS).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import xarray as xr
+from scipy.stats import binom, norm
+
+from sta_prior.checks import FloatArray
+from sta_prior.gaussian import crps_normal
+from sta_prior.prior.base import SegmentModel
+from sta_prior.prior.hierarchy import Weights, fit_hierarchy, new_subject, trial_posterior, without_subject
+from sta_prior.prior.linear import LinearArtifact
+from sta_prior.prior.statistics import SegmentFrames, summarise
+
+LEVELS = (0.50, 0.90, 0.95)
+LARGEST_INFLATION = 4.0
+_REFIT_ITERATIONS = 10
+
+
+@dataclass(frozen=True)
+class LeftOut:
+    """Prediction errors of one left-out unit.
+
+    unit: subject (or trial) left out; error: (values,) m, measured minus predicted; constant,
+    rest: (values,) m², variance from trial-constant weights, and from residual and bone truth;
+    size: (values,) m, displacement itself; by_subject: False where only trials could be left out.
+    """
+
+    unit: str
+    error: FloatArray
+    constant: FloatArray
+    rest: FloatArray
+    size: FloatArray
+    by_subject: bool
+
+
+def _predict(model: SegmentModel, frames: SegmentFrames, weights: Weights, unit: str, kind: bool) -> LeftOut:
+    artifact = LinearArtifact(
+        model.basis, weights, model.hierarchy.residual, model.time_constant, frames.reference_angles
+    )
+    moments = artifact.moments(frames.angles)
+    total = np.einsum("faa->fa", moments.covariance)
+    rest = np.diag(model.hierarchy.residual) + np.einsum("faa->fa", frames.noise)
+    seen = np.isfinite(frames.displacement)
+    return LeftOut(
+        unit=unit,
+        error=(frames.displacement - moments.mean)[seen],
+        constant=(total - np.diag(model.hierarchy.residual))[seen],
+        rest=rest[seen],
+        size=frames.displacement[seen],
+        by_subject=kind,
+    )
+
+
+def leave_one_out(model: SegmentModel, frames: list[SegmentFrames]) -> list[LeftOut]:
+    """Predict every subject from the others; with one subject, every trial from its others.
+
+    The covariances are fitted again without the left-out subject, from where they stood.
+    """
+    subjects = sorted({item.subject for item in frames})
+    trials = list(model.trials)
+    fixed = model.fixed_at_reference
+    result = []
+    if len(subjects) > 1:
+        for name in subjects:
+            others = [trial for trial in trials if trial.subject != name]
+            hierarchy = fit_hierarchy(others, fixed, model.hierarchy, _REFIT_ITERATIONS)
+            weights = new_subject(hierarchy)
+            parts = [_predict(model, item, weights, name, True) for item in frames if item.subject == name]
+            result.append(_merge(parts))
+        return result
+    if len(frames) < 2:
+        return []
+    hierarchy = without_subject(model.hierarchy, trials, fixed, subjects[0])
+    for item in frames:
+        own = [
+            summarise(other, model.basis, model.time_constant) for other in frames if other.trial != item.trial
+        ]
+        weights = trial_posterior(hierarchy, own, item.trial)
+        result.append(_predict(model, item, weights, item.trial, False))
+    return result
+
+
+def _merge(parts: list[LeftOut]) -> LeftOut:
+    return LeftOut(
+        parts[0].unit,
+        *(np.concatenate([getattr(part, name) for part in parts]) for name in ("error", "constant", "rest", "size")),
+        by_subject=parts[0].by_subject,
+    )  # fmt: skip
+
+
+def coverage(left_out: LeftOut, level: float, inflation: float = 1.0) -> float:
+    """Share of a unit's values inside their central interval of the given level."""
+    sd = np.sqrt(inflation * left_out.constant + left_out.rest)
+    return float((np.abs(left_out.error) <= norm.ppf(0.5 + 0.5 * level) * sd).mean())
+
+
+def calibrate_inflation(left_out: list[LeftOut]) -> float:
+    """Smallest factor ≥ 1 on the trial-constant variance with which left-out subjects are covered.
+
+    The mean over subjects of the coverage at 90 % is brought to 0.90, at most by the factor
+    LARGEST_INFLATION. With fewer than three subjects there is nothing to calibrate on: 1.
+    """
+    if len(left_out) < 3 or not left_out[0].by_subject:
+        return 1.0
+    for factor in np.linspace(1.0, LARGEST_INFLATION, 61):
+        if np.mean([coverage(item, 0.90, float(factor)) for item in left_out]) >= 0.90:
+            return float(factor)
+    return LARGEST_INFLATION
+
+
+def binomial_bound(units: int, level: float) -> tuple[float, float]:
+    """Central 95 % range of a coverage observed on independent units, were the level true."""
+    low, high = binom.interval(0.95, units, level)
+    return float(low / units), float(high / units)
+
+
+def summarise_validation(segment: str, left_out: list[LeftOut], inflation: float) -> xr.Dataset:
+    """Left-out figures of one segment as a Dataset with dims segment, unit, level.
+
+    Variables: coverage by unit and level (with the inflation in force), rms_error and rms_zero (m,
+    of the prediction and of predicting no artifact), crps and crps_zero (m), units, by_subject,
+    inflation.
+    """
+    units = [item.unit for item in left_out]
+    covered = np.array(
+        [[coverage(item, level, inflation) for level in LEVELS] for item in left_out]
+    ).reshape(1, len(units), len(LEVELS))
+    sd = [np.sqrt(inflation * item.constant + item.rest) for item in left_out]
+    rms = [float(np.sqrt((item.error**2).mean())) for item in left_out]
+    zero = [float(np.sqrt((item.size**2).mean())) for item in left_out]
+    crps = [float(crps_normal(0.0, s, item.error).mean()) for s, item in zip(sd, left_out, strict=True)]
+    crps_zero = [
+        float(crps_normal(0.0, np.full(item.size.size, z), item.size).mean())
+        for z, item in zip(zero, left_out, strict=True)
+    ]
+    metre, one = {"units": "m"}, {"units": "1"}
+    by_subject = int(bool(left_out) and left_out[0].by_subject)
+
+    def row(values: list[float]) -> tuple[tuple[str, str], FloatArray, dict[str, str]]:
+        return ("segment", "unit"), np.array(values, dtype=np.float64).reshape(1, len(units)), metre
+
+    return xr.Dataset(
+        {
+            "coverage": (("segment", "unit", "level"), covered, one),
+            "rms_error": row(rms),
+            "rms_zero": row(zero),
+            "crps": row(crps),
+            "crps_zero": row(crps_zero),
+            "inflation": (("segment",), np.array([inflation]), one),
+            "by_subject": (("segment",), np.array([by_subject]), one),
+        },
+        coords={
+            "segment": [segment],
+            "unit": np.array(units, dtype=str),
+            "level": ("level", np.array(LEVELS), one),
+        },
+    )

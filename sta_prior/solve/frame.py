@@ -1,0 +1,129 @@
+"""Frame-wise estimators: every frame on its own, all frames at once.
+
+Kernel: arrays in, arrays out. Conventions: docs/conventions.md.
+
+The maximum a posteriori poses of one frame minimise, over all segments and joints,
+
+    Σ_s ‖T_s⁻¹y_s − a_s − μ_s(q)‖²_{C_s(q) + σ²}  +  Σ_j ‖travel_j‖²_{travel_sd²},   q = q(T)
+
+by Gauss-Newton with the exact derivative of μ through the angles; C follows the angles from one
+iteration to the next and is not differentiated. Unknown artifact is integrated out, so its
+uncertainty is in the poses' covariance. Nothing ties one frame to the next.
+
+References
+----------
+Lu & O'Connor (1999), J Biomech 32, 129–134 (poses of linked segments by least squares).
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from sta_prior import se3
+from sta_prior.checks import BoolArray, FloatArray
+from sta_prior.rigid import RigidFit, fit_rigid
+from sta_prior.solve.posterior import FrameSolution, describe_posterior, join
+from sta_prior.solve.terms import ANCHOR, JointProblem, SegmentProblem, System, assemble
+
+MARKER_SD = 0.0005
+"""Instrument noise of a marker, m (common practice for optical systems, no source)."""
+
+TOLERANCE = 1e-8
+MAXIMUM_ITERATIONS = 60
+_CHUNK = 1000
+_LARGEST_STEP = np.array([0.2, 0.2, 0.2, 0.05, 0.05, 0.05])
+
+
+def first_look(segments: list[SegmentProblem], count: int) -> tuple[FloatArray, list[RigidFit]]:
+    """Rigid fit of every segment: poses (F, S, 4, 4), NaN where not determined, and the fits."""
+    frames = segments[0].points.shape[0]
+    poses = np.full((frames, count, 4, 4), np.nan)
+    fits = []
+    for segment in segments:
+        fit = fit_rigid(segment.reference, segment.points)
+        poses[:, segment.index] = fit.pose
+        fits.append(fit)
+    return poses, fits
+
+
+def bridge(poses: FloatArray) -> FloatArray:
+    """Fill missing poses from the nearest frame that has one: a start for the iteration only."""
+    filled = poses.copy()
+    for index in range(poses.shape[1]):
+        known = np.flatnonzero(np.isfinite(poses[:, index, 0, 0]))
+        if known.size == 0:
+            filled[:, index] = np.eye(4)
+            continue
+        frames = np.arange(poses.shape[0])
+        right = np.clip(np.searchsorted(known, frames), 0, known.size - 1)
+        left = np.clip(right - 1, 0, known.size - 1)
+        nearer_left = np.abs(frames - known[left]) <= np.abs(known[right] - frames)
+        filled[:, index] = poses[known[np.where(nearer_left, left, right)], index]
+    return filled
+
+
+def _iterate(
+    segments: list[SegmentProblem], joints: list[JointProblem], poses: FloatArray, marker_sd: float
+) -> tuple[FloatArray, System, int, BoolArray]:
+    """Gauss-Newton on all frames at once; returns poses, last system, iterations, converged frames."""
+    frames, count = poses.shape[:2]
+    anchor = ANCHOR * np.eye(6 * count)
+    damping = np.ones(frames)
+    before = np.full(frames, np.inf)
+    limit = np.tile(_LARGEST_STEP, count)
+    moving = np.ones(frames, dtype=bool)
+    iterations = 0
+    while iterations < MAXIMUM_ITERATIONS:
+        iterations += 1
+        active = np.flatnonzero(moving)
+        part = [_take(segment, active) for segment in segments]
+        system = assemble(part, joints, poses[active], marker_sd)
+        step = -np.linalg.solve(system.normal + anchor, system.gradient[..., None])[..., 0]
+        length = np.abs(step / limit).max(axis=1)
+        # A step that does not shrink means that the covariance, which follows the angles, swings.
+        damping[active] = np.where(length > 0.9 * before[active], 0.5 * damping[active], damping[active])
+        damping[active] = np.maximum(damping[active], 0.1)
+        before[active] = length
+        step *= (damping[active] / np.maximum(length, 1.0))[:, None]
+        poses[active] = poses[active] @ se3.exp(step.reshape(active.size, count, 6))
+        moving[active] = np.abs(step).max(axis=1) > TOLERANCE
+        if not moving.any():
+            break
+    return poses, assemble(segments, joints, poses, marker_sd), iterations, ~moving
+
+
+def _take(segment: SegmentProblem, frames: FloatArray) -> SegmentProblem:
+    return SegmentProblem(segment.index, segment.points[frames], segment.reference, segment.artifact)
+
+
+def solve_frames(
+    segments: list[SegmentProblem],
+    joints: list[JointProblem],
+    start: FloatArray,
+    marker_sd: float = MARKER_SD,
+) -> FrameSolution:
+    """Solve every frame by maximum a posteriori, with posterior covariance.
+
+    Parameters
+    ----------
+    segments : all segments, in tree order
+    joints : all joints
+    start : shape (F, S, 4, 4), lab ← bone, finite (see bridge)
+    marker_sd : instrument noise of a marker, m
+
+    Returns
+    -------
+    FrameSolution. A segment whose pose the markers and joints do not fix is NaN there.
+    """
+    pieces = []
+    for first in range(0, start.shape[0], _CHUNK):
+        frames = np.arange(first, min(first + _CHUNK, start.shape[0]))
+        part = [_take(segment, frames) for segment in segments]
+        poses, system, iterations, converged = _iterate(part, joints, start[frames].copy(), marker_sd)
+        reason = (
+            f"step below {TOLERANCE:g} rad and m in every frame"
+            if converged.all()
+            else f"{int((~converged).sum())} frames not converged in {MAXIMUM_ITERATIONS} iterations"
+        )
+        pieces.append(describe_posterior(part, joints, poses, system, converged, iterations, reason))
+    return join(pieces)

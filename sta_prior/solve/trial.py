@@ -1,0 +1,303 @@
+"""Solve one trial: from a Trial and a Prior to the Dataset of docs/files.md, "solution".
+
+Shell: holds the labels. Conventions: docs/conventions.md.
+"""
+
+from __future__ import annotations
+
+import time
+import warnings
+from dataclasses import replace
+from typing import Literal
+
+import numpy as np
+import xarray as xr
+from scipy.stats import chi2
+
+from sta_prior.angles import GIMBAL_WARNING, gimbal_margin
+from sta_prior.checks import FloatArray, nearest
+from sta_prior.errors import InputError, StaPriorWarning, message
+from sta_prior.pairs.belonging import DISTANCE_LIMIT, distance_misfit
+from sta_prior.pairs.pairing import AXES, angles_of_poses, dof_names, spread_over_dof
+from sta_prior.prior.base import Binding, Prior
+from sta_prior.prior.interface import IsotropicArtifact
+from sta_prior.rigid import RigidFit
+from sta_prior.solve.frame import bridge, first_look, solve_frames
+from sta_prior.solve.observability import describe_observability
+from sta_prior.solve.posterior import SOURCES, FrameSolution
+from sta_prior.solve.terms import JointProblem, SegmentProblem
+from sta_prior.study import Reference, Trial
+
+Estimator = Literal["rigid", "linked", "frame-map"]
+ESTIMATORS: tuple[str, ...] = ("rigid", "linked", "frame-map")
+DEFAULT_ESTIMATOR = "frame-map"
+POSE = ("rx", "ry", "rz", "tx", "ty", "tz")
+
+SMALLEST_SPREAD = 0.001
+"""Marker SD that least squares assumes at least, m: shells deform less than skin moves."""
+
+_SAME_INSTANT = 0.5
+
+SCATTER = (
+    "from the scatter of the markers about the fit; says nothing about artifact that a cluster's markers share"
+)
+
+
+def solve(
+    trial: Trial,
+    prior: Prior | None = None,
+    estimator: str = DEFAULT_ESTIMATOR,
+    personal: xr.Dataset | None = None,
+) -> xr.Dataset:
+    """Solve one skin trial. Bone truth in the study, if any, is never read here.
+
+    Parameters
+    ----------
+    trial : from a study
+    prior : needed by ``frame-map``; ``rigid`` and ``linked`` work without
+    estimator : "rigid" (frame-wise least squares), "linked" (least squares with joint
+        constraints) or "frame-map" (frame-wise maximum a posteriori)
+    personal : paired data with frames of the trial's own subject
+
+    Returns
+    -------
+    Dataset of docs/files.md, "solution", SI units.
+
+    Raises
+    ------
+    InputError : unknown estimator, no prior where one is needed, or unusable files.
+    MismatchError : the prior does not fit the lab file.
+    """
+    started = time.perf_counter()
+    if estimator not in ESTIMATORS:
+        raise InputError(
+            message(
+                "--estimator",
+                f"no estimator {estimator} here, known: {', '.join(ESTIMATORS)}",
+                nearest(estimator, ESTIMATORS),
+            )
+        )
+    if estimator == "frame-map" and prior is None:
+        raise InputError(
+            message(
+                "--estimator frame-map",
+                "needs a prior",
+                "Give --prior, or use --estimator rigid or linked.",
+            )
+        )
+    reference = trial.subject.reference()
+    skin = trial.skin()
+    points = skin["position"].values
+    binding = prior.bind(trial, personal) if prior is not None and estimator == "frame-map" else None
+    segments = _segments(trial, points, reference, binding)
+    joints = _joints(trial, reference)
+    count = len(segments)
+    rigid_poses, fits = first_look(segments, count)
+    notes = _reference_notes(trial, points, reference)
+    if estimator == "rigid":
+        result = _rigid_solution(segments, joints, rigid_poses, fits)
+    else:
+        if estimator == "linked":
+            segments = [_with_scatter(segment, fit) for segment, fit in zip(segments, fits, strict=True)]
+        result = solve_frames(segments, joints, bridge(rigid_poses))
+    data = _dataset(trial, skin, result, rigid_poses, estimator)
+    _mark_informed(data, binding)
+    data.attrs.update(
+        {
+            "estimator": estimator,
+            "iterations": result.iterations,
+            "stop_reason": result.stop_reason,
+            "seconds": round(time.perf_counter() - started, 3),
+            "prior_digest": prior.digest if binding is not None and prior is not None else "",
+            "input_digest": trial.digest(),
+            "observability": describe_observability(segments, result.determined, trial.subject.lab),
+            "suspects": "",
+            "reference_notes": "; ".join([*reference.notes, *notes]),
+            "belief": binding.basis_of_belief if binding is not None else "no prior",
+            "covariance": "posterior" if estimator == "frame-map" else SCATTER,
+            "subject": trial.subject.id,
+            "trial": trial.id,
+            "activity": trial.activity,
+        }
+    )
+    if trial.subject.invented or (prior is not None and prior.invented):
+        data.attrs["invented_data"] = 1
+    return data
+
+
+def _segments(
+    trial: Trial, points: FloatArray, reference: Reference, binding: Binding | None
+) -> list[SegmentProblem]:
+    lab = trial.subject.lab
+    problems = []
+    for index, segment in enumerate(lab.segments):
+        own = lab.marker_segment == index
+        artifact = (
+            binding.artifacts[segment.name]
+            if binding is not None
+            else IsotropicArtifact(3 * int(own.sum()), SMALLEST_SPREAD)
+        )
+        problems.append(SegmentProblem(index, points[:, own], reference.markers[own], artifact))
+    return problems
+
+
+def _joints(trial: Trial, reference: Reference) -> list[JointProblem]:
+    lab = trial.subject.lab
+    return [
+        JointProblem(
+            proximal=lab.segment_index(joint.proximal),
+            distal=lab.segment_index(joint.distal),
+            convention=joint.convention,
+            centre_proximal=reference.joint_centres[index, 0],
+            centre_distal=reference.joint_centres[index, 1],
+            travel_sd=joint.travel_sd,
+        )
+        for index, joint in enumerate(lab.joints)
+    ]
+
+
+def _pooled_spread(fit: RigidFit) -> float:
+    """Marker SD from the scatter about the rigid fit, pooled over the trial, m."""
+    spread = fit.spread[np.isfinite(fit.spread)]
+    pooled = float(np.sqrt((spread**2).mean())) if spread.size else SMALLEST_SPREAD
+    return max(pooled, SMALLEST_SPREAD)
+
+
+def _with_scatter(segment: SegmentProblem, fit: RigidFit) -> SegmentProblem:
+    artifact = IsotropicArtifact(3 * segment.reference.shape[0], _pooled_spread(fit))
+    return SegmentProblem(segment.index, segment.points, segment.reference, artifact)
+
+
+def _rigid_solution(
+    segments: list[SegmentProblem], joints: list[JointProblem], poses: FloatArray, fits: list[RigidFit]
+) -> FrameSolution:
+    """The rigid fit itself, told as a solution: every segment alone, closed form, no joint."""
+    free = [
+        JointProblem(j.proximal, j.distal, j.convention, j.centre_proximal, j.centre_distal, np.inf)
+        for j in joints
+    ]
+    scattered = [_with_scatter(segment, fit) for segment, fit in zip(segments, fits, strict=True)]
+    # One solve that starts at the optimum gives covariance, angles and travel; the poses stay as fitted.
+    result = solve_frames(scattered, free, bridge(poses), marker_sd=0.0)
+    return replace(result, poses=poses, determined=np.isfinite(poses[..., 0, 0]), stop_reason="closed form")
+
+
+def _reference_notes(trial: Trial, points: FloatArray, reference: Reference) -> list[str]:
+    """Words where a segment's marker distances do not fit its reference in any frame."""
+    lab = trial.subject.lab
+    notes = []
+    for index, segment in enumerate(lab.segments):
+        own = lab.marker_segment == index
+        misfit = distance_misfit(points[:, own], reference.markers[own])
+        if misfit > DISTANCE_LIMIT:
+            words = (
+                f"{segment.name} marker distances differ from the reference by {1000 * misfit:.1f} mm RMS even "
+                f"in the best frame, expected at most {1000 * DISTANCE_LIMIT:.0f} mm: the reference does not "
+                "belong to this trial"
+            )
+            notes.append(words)
+            warnings.warn(
+                message(
+                    (trial.subject.id, trial.id), words, "Its poses are solved but should not be trusted."
+                ),
+                StaPriorWarning,
+                stacklevel=4,
+            )
+    return notes
+
+
+def _warn_of_gimbal(trial: Trial, poses: FloatArray) -> None:
+    lab = trial.subject.lab
+    for joint in lab.joints:
+        proximal = poses[:, lab.segment_index(joint.proximal), :3, :3]
+        distal = poses[:, lab.segment_index(joint.distal), :3, :3]
+        margin = gimbal_margin(joint.convention, np.swapaxes(proximal, -1, -2) @ distal)
+        near = int((margin < GIMBAL_WARNING).sum())
+        if near:
+            warnings.warn(
+                message(
+                    (trial.subject.id, trial.id, f"joint {joint.name}"),
+                    f"{near} of {margin.size} frames lie within {np.degrees(GIMBAL_WARNING):.0f}° of the posture "
+                    "where its first and third angle cannot be told apart",
+                    "Trust the poses there, not the angles.",
+                ),
+                StaPriorWarning,
+                stacklevel=4,
+            )
+
+
+def _mark_informed(data: xr.Dataset, binding: Binding | None) -> None:
+    times = data["time"].values
+    informed = np.zeros(times.size, dtype=np.int8)
+    if binding is not None and binding.informed_times.size and times.size > 1:
+        step = float(np.median(np.diff(times)))
+        known = np.sort(binding.informed_times)
+        at = np.clip(np.searchsorted(known, times), 1, known.size - 1) if known.size > 1 else np.zeros(1, int)
+        gap = np.minimum(np.abs(known[at] - times), np.abs(known[np.maximum(at - 1, 0)] - times))
+        informed = (gap <= _SAME_INSTANT * step).astype(np.int8)
+    data["informed"] = ("time", informed, {"units": "1", "long_name": "bone truth of this frame informed the prior"})
+
+
+def _dataset(
+    trial: Trial, skin: xr.Dataset, result: FrameSolution, rigid_poses: FloatArray, estimator: str
+) -> xr.Dataset:
+    lab = trial.subject.lab
+    frames, count = result.poses.shape[:2]
+    _warn_of_gimbal(trial, result.poses)
+    blocks = np.stack(
+        [result.covariance[:, 6 * i : 6 * i + 6, 6 * i : 6 * i + 6] for i in range(count)], axis=1
+    )
+    blocks = np.where(result.determined[..., None, None], blocks, np.nan)
+    artifact = np.full((frames, len(lab.markers), 3), np.nan)
+    artifact_sd = np.full_like(artifact, np.nan)
+    for index in range(count):
+        own = np.flatnonzero(lab.marker_segment == index)
+        artifact[:, own] = result.artifact[index].reshape(frames, own.size, 3)
+        artifact_sd[:, own] = result.artifact_sd[index].reshape(frames, own.size, 3)
+    conflict = chi2.sf(result.conflict, np.maximum(result.conflict_freedom, 1.0))
+    metre, radian, one = {"units": "m"}, {"units": "rad"}, {"units": "1"}
+    variables = {
+        "rotation": (("time", "segment", "row", "col"), result.poses[..., :3, :3], one),
+        "position": (("time", "segment", "axis"), result.poses[..., :3, 3], metre),
+        "pose_covariance": (
+            ("time", "segment", "pose", "pose2"),
+            blocks,
+            {"units": "rad2, rad m, m2", "long_name": "blocks of rotation, mixed and translation"},
+        ),
+        "rigid_rotation": (("time", "segment", "row", "col"), rigid_poses[..., :3, :3], one),
+        "rigid_position": (("time", "segment", "axis"), rigid_poses[..., :3, 3], metre),
+        "angle": (("time", "joint", "dof"), spread_over_dof(lab, result.angles), radian),
+        "angle_sd": (("time", "joint", "dof"), spread_over_dof(lab, result.angle_sd), radian),
+        "angle_rigid": (
+            ("time", "joint", "dof"),
+            spread_over_dof(lab, angles_of_poses(lab, rigid_poses)),
+            radian,
+        ),
+        "joint_travel": (("time", "joint", "axis"), result.travel, metre),
+        "joint_travel_sd": (("time", "joint", "axis"), result.travel_sd, metre),
+        "artifact": (("time", "marker", "axis"), artifact, metre),
+        "artifact_sd": (("time", "marker", "axis"), artifact_sd, metre),
+        "information_share": (("time", "segment", "pose", "source"), result.share, one),
+        "marker_seen": (("time", "marker"), np.isfinite(skin["position"].values[..., 0]).astype(np.int8), one),
+    }
+    if estimator == "frame-map":
+        # Least squares has no law for the deformation that a p-value could refer to.
+        variables["conflict_p"] = (("time", "segment"), conflict, one)
+    data = xr.Dataset(
+        variables,
+        coords={
+            "time": ("time", skin["time"].values.astype(np.float64), {"units": "s"}),
+            "segment": list(lab.segment_names),
+            "marker": list(lab.markers),
+            "joint": [joint.name for joint in lab.joints],
+            "dof": dof_names(lab),
+            "axis": list(AXES),
+            "pose": list(POSE),
+            "pose2": list(POSE),
+            "source": list(SOURCES),
+            "marker_segment": ("marker", [lab.segments[index].name for index in lab.marker_segment]),
+            "joint_sequence": ("joint", [joint.convention.sequence for joint in lab.joints]),
+            "joint_side": ("joint", [joint.convention.side for joint in lab.joints]),
+        },
+    )
+    return data
