@@ -6,9 +6,11 @@ Conventions: docs/conventions.md.
 from __future__ import annotations
 
 import contextlib
+import glob
 import hashlib
 import os
-import tempfile
+import secrets
+import socket
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -19,12 +21,13 @@ from sta_prior.errors import InputError, message
 POINT_SUFFIXES = (".c3d", ".csv", ".nc")
 
 
-def read_content(path: str | Path) -> bytes:
+def read_content(path: str | Path, most: int = -1) -> bytes:
     """Return the bytes of a file, or say in one line why there are none.
 
     Parameters
     ----------
     path : the file
+    most : how many bytes from its start; all if negative
 
     Raises
     ------
@@ -34,13 +37,13 @@ def read_content(path: str | Path) -> bytes:
     if path.is_dir():
         raise InputError(message(path, "a folder, expected a file", "Name the file itself."))
     try:
-        content = path.read_bytes()
+        with path.open("rb") as file:
+            content = file.read(most)
     except FileNotFoundError:
         raise InputError(message(path, "no such file", "Check the name and the folder.")) from None
-    except OSError as error:
-        raise InputError(
-            message(path, f"cannot be read ({error.strerror})", "Check its permissions.")
-        ) from None
+    except (OSError, ValueError) as error:
+        wrong = f"cannot be read ({getattr(error, 'strerror', None) or error})"
+        raise InputError(message(path, wrong, "Check its name and permissions.")) from None
     if not content:
         raise InputError(message(path, "the file is empty", "Export or copy it again."))
     return content
@@ -83,8 +86,8 @@ def file_digest(path: str | Path) -> str:
 def atomic_path(path: str | Path) -> Iterator[Path]:
     """Give a temporary name in the target's folder and move it into place on success.
 
-    A reader sees the old file or the new one, never a part; on any failure,
-    interruption included, nothing is left behind.
+    A reader sees the old file or the new one, never a part. On any failure, interruption included,
+    nothing is left behind; what a killed process left for the same target is removed by the next.
 
     Parameters
     ----------
@@ -96,31 +99,43 @@ def atomic_path(path: str | Path) -> Iterator[Path]:
 
     Raises
     ------
-    InputError : the folder does not exist or cannot be written.
+    InputError : a folder, or in a folder that does not exist or cannot be written.
     """
     path = Path(path)
+    if path.is_dir():
+        raise InputError(message(path, "a folder, expected a file name", "Name the file itself."))
+    stem = f".{path.name}.{socket.gethostname()}-"
+    temporary = path.with_name(f"{stem}{os.getpid()}-{secrets.token_hex(4)}{path.suffix}")
     try:
-        handle, name = tempfile.mkstemp(prefix=f".{path.stem}.", suffix=path.suffix, dir=path.parent)
+        temporary.open("xb").close()
     except OSError as error:
-        raise InputError(
-            message(
-                path, f"cannot be written ({error.strerror})", "Name a folder that exists and is writable."
-            )
-        ) from None
-    os.close(handle)
-    temporary = Path(name)
+        wrong = f"cannot be written ({error.strerror})"
+        raise InputError(message(path, wrong, "Name a folder that exists and is writable.")) from None
     try:
+        _remove_orphans(path.parent, stem)
         yield temporary
-        # mkstemp makes the file private; a result has the permissions of any new file
-        mask = os.umask(0)
-        os.umask(mask)
-        temporary.chmod(0o666 & ~mask)
         with temporary.open("rb+") as written:
             os.fsync(written.fileno())
         os.replace(temporary, path)
     except BaseException:
         temporary.unlink(missing_ok=True)
         raise
+
+
+def _remove_orphans(folder: Path, stem: str) -> None:
+    """Remove temporary files of this target whose process, on this computer, has ended."""
+    if os.name != "posix":
+        return
+    for orphan in folder.glob(f"{glob.escape(stem)}*"):
+        number = orphan.name.removeprefix(stem).split("-")[0]
+        if not number.isdecimal():
+            continue
+        try:
+            os.kill(int(number), 0)  # signal 0 only asks whether the process is there
+        except (ProcessLookupError, OverflowError):
+            orphan.unlink(missing_ok=True)
+        except PermissionError:
+            continue
 
 
 def read_points(path: str | Path) -> xr.Dataset:
@@ -140,7 +155,7 @@ def read_points(path: str | Path) -> xr.Dataset:
     ------
     InputError : missing, empty, truncated or foreign file, or another suffix.
     """
-    from sta_prior.io import c3d, netcdf, tables
+    from sta_prior.io import c3d, netcdf, tables  # here, since these readers use this module
 
     path = Path(path)
     suffix = path.suffix.lower()
