@@ -161,8 +161,10 @@ def test_exact_observation_of_a_wide_prior_stays_a_covariance() -> None:
 def test_limits_of_the_prior() -> None:
     design, observed = np.array([[1.0, 0.5], [0.0, 1.0], [1.0, -1.0]]), np.array([1.0, 2.0, 3.0])
     least_squares = np.linalg.lstsq(design, observed, rcond=None)[0]
-    wide = condition(np.array([5.0, -5.0]), 1e10 * np.eye(2), design, observed, np.eye(3))
-    np.testing.assert_allclose(wide.mean, least_squares, rtol=1e-8)
+    wide = condition(np.array([5.0, -5.0]), 1e6 * np.eye(2), design, observed, np.eye(3))
+    np.testing.assert_allclose(wide.mean, least_squares, rtol=1e-4)
+    wider = condition(np.array([5.0, -5.0]), 1e8 * np.eye(2), design, observed, np.eye(3))
+    np.testing.assert_allclose(wider.mean, least_squares, rtol=1e-6)
     narrow = condition(np.array([5.0, -5.0]), 1e-12 * np.eye(2), design, observed, np.eye(3))
     np.testing.assert_allclose(narrow.mean, [5.0, -5.0], rtol=1e-10)
 
@@ -204,13 +206,13 @@ def test_subtraction_does_not_depend_on_the_unit_of_a_coordinate() -> None:
 
 
 def test_subtraction_is_batched_and_takes_singular_noise() -> None:
+    """Rounding grows by observed/floor, here some 1e7."""
     observed, noise = covariance(4, 22, (3,)), covariance(4, 23, (3,), rank=2)
     found = subtract_psd(observed, noise, 1e-6)
     for k in range(3):
-        np.testing.assert_allclose(found[k], subtract_psd(observed[k], noise[k], 1e-6), rtol=1e-9, atol=1e-9)
-    np.testing.assert_allclose(
-        subtract_psd(observed, np.zeros((4, 4)), 1e-6), observed, rtol=1e-9, atol=1e-12
-    )
+        np.testing.assert_allclose(found[k], subtract_psd(observed[k], noise[k], 1e-6), rtol=0, atol=1e-6)
+    silent = subtract_psd(observed, np.zeros((4, 4)), 1e-6)
+    np.testing.assert_allclose(silent, observed, rtol=0, atol=1e-9)
 
 
 @quick
@@ -224,10 +226,8 @@ def test_nearest_psd_is_nearest(seed: int) -> None:
     between = found + 0.3 * (other - found)
     assert np.linalg.norm(matrix - found) <= np.linalg.norm(matrix - between) + 1e-12
     np.testing.assert_allclose(nearest_psd(found), found, atol=1e-13)
-    assert (
-        np.linalg.eigvalsh(nearest_psd(matrix, 0.2))[0] == pytest.approx(0.2, rel=1e-9)
-        or np.linalg.eigvalsh(matrix)[0] > 0.2
-    )
+    raised = np.linalg.eigvalsh(nearest_psd(matrix, 0.2))
+    np.testing.assert_allclose(raised, np.maximum(np.linalg.eigvalsh(matrix), 0.2), rtol=1e-9)
 
 
 def test_symmetrise() -> None:
