@@ -10,13 +10,11 @@ import tomllib
 from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import Any, TypeVar, overload
+from typing import Any
 
 from sta_prior.checks import nearest
 from sta_prior.errors import InputError, message
 from sta_prior.io.files import read_text
-
-T = TypeVar("T")
 
 
 class _Required:
@@ -72,7 +70,7 @@ class Table(Mapping[str, Any]):
     Notes
     -----
     It is a mapping; the getters below also check the type and name the place where it is wrong. Each raises
-    InputError for a missing key unless a default is given, and for a value of another type.
+    InputError for a missing key unless a default (of any type) is given, and for a value of another type.
     """
 
     content: Mapping[str, Any] = field(repr=False)
@@ -97,13 +95,14 @@ class Table(Mapping[str, Any]):
         return ".".join(part for part in (self.dotted, key) if part)
 
     def _wrong(self, key: str, expected: str, value: object) -> InputError:
-        return InputError(message(self.place(key), f"expected {expected}, got {_shown(value)}"))
+        wrong = f"expected {expected}, got {_shown(value)}"
+        return InputError(message(self.place(key), wrong, "Correct the value."))
 
     def _missing(self, key: str, expected: str) -> InputError:
         do = nearest(key, self.content) or f"Add {key} = …."
         return InputError(message(self.place(key), f"missing, expected {expected}", do))
 
-    def _get(self, key: str, default: T | _Required, expected: str) -> tuple[bool, Any]:
+    def _get(self, key: str, default: object, expected: str) -> tuple[bool, Any]:
         """Return whether the key is there, and its value or else the default."""
         if key in self.content:
             return True, self.content[key]
@@ -111,55 +110,44 @@ class Table(Mapping[str, Any]):
             raise self._missing(key, expected)
         return False, default
 
-    @overload
-    def text(self, key: str) -> str: ...
-    @overload
-    def text(self, key: str, default: T) -> str | T: ...
-    def text(self, key: str, default: T | _Required = _REQUIRED) -> str | T:
+    def text(self, key: str, default: object = _REQUIRED) -> Any:
         """Return a text that is not blank, or the default."""
         expected = "a text that is not blank"
         found, value = self._get(key, default, expected)
         if found and not _is_text(value):
             raise self._wrong(key, expected, value)
-        return value  # type: ignore[no-any-return]
+        return value
 
-    @overload
-    def number(self, key: str, *, minimum: float = ..., maximum: float = ...) -> float: ...
-    @overload
-    def number(self, key: str, default: T, *, minimum: float = ..., maximum: float = ...) -> float | T: ...
     def number(
         self,
         key: str,
-        default: T | _Required = _REQUIRED,
+        default: object = _REQUIRED,
         *,
         minimum: float = -math.inf,
         maximum: float = math.inf,
-    ) -> float | T:
+    ) -> Any:
         """Return a finite number from minimum to maximum, as float, or the default."""
         found, value = self._get(key, default, "a number")
         if not found:
-            return value  # type: ignore[no-any-return]
+            return value
         if not _is_number(value):
             raise self._wrong(key, "a finite number", value)
         if not minimum <= value <= maximum:
             limits = [f"at least {minimum:g}"] if minimum > -math.inf else []
             limits += [f"at most {maximum:g}"] if maximum < math.inf else []
-            raise InputError(message(self.place(key), f"expected {' and '.join(limits)}, got {value:g}"))
+            wrong = f"expected {' and '.join(limits)}, got {value:g}"
+            raise InputError(message(self.place(key), wrong, "Correct the value."))
         return float(value)
 
-    @overload
-    def flag(self, key: str) -> bool: ...
-    @overload
-    def flag(self, key: str, default: T) -> bool | T: ...
-    def flag(self, key: str, default: T | _Required = _REQUIRED) -> bool | T:
+    def flag(self, key: str, default: object = _REQUIRED) -> Any:
         """Return true or false, or the default."""
         found, value = self._get(key, default, "true or false")
         if found and not isinstance(value, bool):
             raise self._wrong(key, "true or false", value)
-        return value  # type: ignore[no-any-return]
+        return value
 
-    def choice(self, key: str, allowed: Iterable[str], default: T | _Required = _REQUIRED) -> Any:
-        """Return a text that is one of the allowed, or the default; typed Any, to pass as a Literal."""
+    def choice(self, key: str, allowed: Iterable[str], default: object = _REQUIRED) -> Any:
+        """Return a text that is one of the allowed, or the default."""
         allowed = list(allowed)
         expected = f"one of {', '.join(allowed)}"
         found, value = self._get(key, default, expected)
@@ -167,18 +155,16 @@ class Table(Mapping[str, Any]):
             raise self._wrong(key, expected, value)
         if found and value not in allowed:
             wrong = f"expected {expected}, got {value!r}"
-            raise InputError(message(self.place(key), wrong, nearest(value, allowed)))
+            raise InputError(
+                message(self.place(key), wrong, nearest(value, allowed) or "Choose one of them.")
+            )
         return value
 
-    @overload
-    def texts(self, key: str) -> list[str]: ...
-    @overload
-    def texts(self, key: str, default: T) -> list[str] | T: ...
-    def texts(self, key: str, default: T | _Required = _REQUIRED) -> list[str] | T:
+    def texts(self, key: str, default: object = _REQUIRED) -> Any:
         """Return a list of texts, none of them blank, or the default."""
         found, value = self._get(key, default, "a list of texts")
         if not found:
-            return value  # type: ignore[no-any-return]
+            return value
         if not isinstance(value, list):
             raise self._wrong(key, "a list of texts", value)
         for number, item in enumerate(value, start=1):
@@ -186,15 +172,11 @@ class Table(Mapping[str, Any]):
                 raise self._wrong(f"{key}[{number}]", "a text that is not blank", item)
         return list(value)
 
-    @overload
-    def numbers(self, key: str) -> list[float]: ...
-    @overload
-    def numbers(self, key: str, default: T) -> list[float] | T: ...
-    def numbers(self, key: str, default: T | _Required = _REQUIRED) -> list[float] | T:
+    def numbers(self, key: str, default: object = _REQUIRED) -> Any:
         """Return a list of finite numbers, as floats, or the default."""
         found, value = self._get(key, default, "a list of numbers")
         if not found:
-            return value  # type: ignore[no-any-return]
+            return value
         if not isinstance(value, list):
             raise self._wrong(key, "a list of numbers", value)
         for number, item in enumerate(value, start=1):
