@@ -27,7 +27,7 @@ from sta_prior.compare import (
     bone_truth,
     compare_solutions,
 )
-from sta_prior.se3 import exp
+from sta_prior.se3 import adjoint, exp, make_pose
 from sta_prior.study import read_study
 
 
@@ -122,6 +122,31 @@ def test_coverage_tells_right_intervals_from_narrow_ones(tmp_path: Path, stated:
             else:
                 assert score.coverage[1] < low
                 assert score.normalised_error > 1.5
+
+
+def test_a_pose_known_best_at_the_joint_is_judged_there(tmp_path: Path) -> None:
+    # Drawn at the knee centre, where the position is sharp; rotation and origin are then correlated.
+    times = np.arange(0.0, 8.0, 0.01)
+    sd = np.array([0.06, 0.02, 0.05, 0.001, 0.002, 0.0015])
+    to_centre = make_pose(np.eye(3), CENTRE["thigh"])
+    transport = adjoint(to_centre)
+    draws = posterior_draws(sd, len(times), 11) @ transport.T
+    solution = made_solution(times, walking_poses(times), error=draws)
+    solution["pose_covariance"][:] = transport @ np.diag(sd**2) @ transport.T
+    comparison = one_trial(tmp_path, solution, bone_times=times, mm=1e-3, deg=1e-3)
+    low, high = binomial_range(len(times), 0.90, 0.999)
+    centre, origin = (score_of(comparison, "thigh", name) for name in ("knee centre", "origin"))
+    assert low <= centre.coverage[1] <= high
+    assert low <= origin.coverage[1] <= high
+    assert centre.predicted_sd == pytest.approx(math.sqrt(np.sum(sd[3:] ** 2)), rel=1e-3)
+    assert origin.predicted_sd > 5 * centre.predicted_sd
+
+
+def test_the_interval_of_an_angle_holds_both_variances(tmp_path: Path) -> None:
+    solution = made_solution(TIMES, walking_poses(TIMES), angle_sd=0.01)
+    comparison = one_trial(tmp_path, solution, deg=1.2)
+    expected = math.hypot(0.01, math.radians(1.2) * math.sqrt(2))
+    assert score_of(comparison, "knee", "adduction").predicted_sd == pytest.approx(expected, rel=1e-6)
 
 
 def test_truth_noise_of_both_bones_enters_the_angle(tmp_path: Path) -> None:

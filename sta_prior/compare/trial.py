@@ -42,6 +42,8 @@ class _Series:
     rigid_error: FloatArray
     values: tuple[FloatArray, FloatArray, FloatArray] | None = None
     """Estimate, truth and rigid fit themselves, shape (n,), where a range of motion has a meaning."""
+    judged: FloatArray | None = None
+    """The error in the coordinates of the covariance, (n, k), where ``error`` is not."""
 
 
 def score_trial(solution: xr.Dataset, trial: Trial, truth: BoneTruth, frames: FrameSet) -> list[Score]:
@@ -115,9 +117,11 @@ def _segment_series(solution: xr.Dataset, trial: Trial, truth: BoneTruth) -> Ite
         for label, point in points.items():
             lever = np.concatenate([-skew(point), np.eye(3)], axis=1)
             spread = lever @ covariance @ lever.T
-            yield _Series(
-                name, label, "m", _point_error(pose, true, point), spread, _point_error(rigid, true, point)
-            )
+            apart, rigid_apart = _point_error(pose, true, point), _point_error(rigid, true, point)
+            # The covariance is that of the tangent vector: its image is judged, not
+            # the chord, which differs by the square of the rotation times the lever.
+            judged = error @ lever.T
+            yield _Series(name, label, "m", apart, spread, rigid_apart, judged=judged)
         for column, label in enumerate(POSE_NAMES):
             one = slice(column, column + 1)
             unit: Unit = "rad" if column < 3 else "m"
@@ -162,7 +166,7 @@ def _score(series: _Series, trial: Trial, chosen: BoolArray, informed: BoolArray
     seen = known & chosen
     error, rigid_error = series.error[seen], series.rigid_error[seen]
     covariance = series.covariance[seen]
-    square = normalised_square(error, covariance)
+    square = normalised_square(error if series.judged is None else series.judged[seen], covariance)
     size = error.shape[-1]
     values = None if series.values is None else [value[seen] for value in series.values]
     whole_pose = series.unit == "1"
