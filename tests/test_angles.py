@@ -207,6 +207,9 @@ def test_leading_axes_and_missing_poses() -> None:
                 assert np.isnan(result).any() == missing
             single = joint_angles(convention, rotations[index])
             np.testing.assert_allclose(angles[index], single, rtol=0, atol=1e-15)
+        # One unknown angle makes the whole rotation unknown.
+        for unknown in np.where(np.eye(3) > 0, np.nan, 0.2):
+            assert np.isnan(rotation_from_angles(convention, unknown)).all()
         assert joint_angles(convention, np.empty((4, 0, 3, 3))).shape == (4, 0, 3)
         assert angle_jacobian(convention, np.empty((0, 3, 3))).shape == (0, 3, 3)
 
@@ -224,6 +227,13 @@ def test_singular_posture_keeps_the_rotation(sequence: str) -> None:
         angles = joint_angles(convention, rotation)
         np.testing.assert_allclose(rotation_from_angles(convention, angles), rotation, atol=1e-14)
         assert gimbal_margin(convention, rotation) <= 2e-6
+
+
+def test_neutral_posture_of_a_repeated_axis_reads_zero() -> None:
+    """Without a choice of the first angle, signs of zero would make it ±π."""
+    for sequence in ("yxy", "zxz", "xyx"):
+        convention = JointConvention("cardan", "right", sequence)
+        np.testing.assert_array_equal(joint_angles(convention, np.eye(3)), [0.0, 0.0, 0.0])
 
 
 def test_jacobian_of_the_singular_posture_is_not_determined() -> None:

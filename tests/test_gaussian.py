@@ -151,11 +151,11 @@ def test_observations_one_after_another_equal_all_at_once() -> None:
 
 
 def test_exact_observation_of_a_wide_prior_stays_a_covariance() -> None:
-    """A prior 1e12 times wider than the noise: the short update form loses positivity, Joseph's does not."""
-    prior = 1e6 * covariance(6, 16)
-    found = condition(np.zeros(6), prior, np.eye(6)[:4], np.arange(4.0), 1e-6 * np.eye(4))
-    assert np.linalg.eigvalsh(found.covariance)[0] > 0
-    np.testing.assert_allclose(found.mean[:4], np.arange(4.0), atol=1e-4)
+    """A prior 1e16 times wider than the noise: (I − KH) P turns negative, Joseph's form gives the noise."""
+    prior, noise = 1e6 * covariance(6, 16), 1e-10 * np.eye(6)
+    found = condition(np.zeros(6), prior, np.eye(6), np.arange(6.0), noise)
+    np.testing.assert_allclose(found.covariance, noise, rtol=0, atol=1e-12)
+    np.testing.assert_allclose(found.mean, np.arange(6.0), atol=1e-4)
 
 
 def test_limits_of_the_prior() -> None:

@@ -227,6 +227,7 @@ def test_too_few_markers_determine_nothing(seen: int) -> None:
     assert fit.line_ratio[1] < 1e-6
     two = fit_rigid(THIGH[:seen], THIGH[:seen])
     assert not two.determined
+    assert not fit_rigid(THIGH[:seen], THIGH[:seen], minimum_line_ratio=0.0).determined
 
 
 @pytest.mark.parametrize(("offset", "determined"), [(0.0, False), (0.0015, False), (0.0040, True)])
