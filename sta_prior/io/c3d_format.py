@@ -142,9 +142,8 @@ def parse_content(content: bytes, path: Path) -> C3dContent:
         )
     start = (content[0] - 1) * BLOCK
     if len(content) < start + BLOCK:
-        raise InputError(
-            message(path, f"truncated, {len(content)} bytes end before the parameters", EXPORT_AGAIN)
-        )
+        wrong = f"not a C3D file or truncated, its parameters would end after byte {start + BLOCK}"
+        raise InputError(message(path, f"{wrong}, it has {len(content)} bytes", EXPORT_AGAIN))
     processor = content[start + 3]
     if processor not in (LITTLE_ENDIAN, DEC, BIG_ENDIAN):
         raise InputError(

@@ -257,19 +257,24 @@ def _add_rotations(
     new = next(number for number in range(1, 128) if number not in {abs(record.group) for record in kept})
     added = _rotation_records(new, labels, count // layout.frames, layout, target)
     section = parameter_section([*kept, *added], processor, target)
-    data = pad(layout.content[layout.data_start : layout.data_start + layout.frames * layout.frame_size])
-    data_block = (layout.section_start + len(section)) // BLOCK + 1
-    rotation_block = data_block + len(data) // BLOCK
-    if rotation_block > SHORT_LIMIT:
-        wrong = f"the poses would start at block {rotation_block}, a C3D file reaches {SHORT_LIMIT}"
+    size = layout.frames * layout.frame_size
+    data = pad(layout.content[layout.data_start : layout.data_start + size])
+    rotations = pad(encode_floats(_rotation_words(poses, reliability, layout), processor))
+    first = (layout.section_start + len(section)) // BLOCK + 1
+    data_block, rotation_block = first, first + len(data) // BLOCK
+    if rotation_block > SHORT_LIMIT:  # the pointers have 16 bits: the shorter section goes first
+        data_block, rotation_block = first + len(rotations) // BLOCK, first
+    if data_block > SHORT_LIMIT:
+        wrong = (
+            f"points and poses are longer than {SHORT_LIMIT} blocks each, more than a C3D file can point to"
+        )
         raise InputError(message(target, wrong, "Cut the trial."))
     records = with_pointer(kept, groups["POINT"], data_block, processor)
     records += with_pointer(added, new, rotation_block, processor)
-    section = parameter_section(records, processor, target)
     head = bytearray(layout.content[: layout.section_start])
     struct.pack_into(order(processor) + "H", head, 16, data_block)
-    words = _rotation_words(poses, reliability, layout)
-    return bytes(head) + section + data + pad(encode_floats(words, processor))
+    blocks = [data, rotations] if data_block < rotation_block else [rotations, data]
+    return b"".join([bytes(head), parameter_section(records, processor, target), *blocks])
 
 
 def _rotation_records(
