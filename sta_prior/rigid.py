@@ -13,6 +13,7 @@ from numpy.typing import ArrayLike
 
 from sta_prior.checks import BoolArray, FloatArray, check_finite, check_shape
 from sta_prior.errors import NotDeterminedError, ShapeError, message
+from sta_prior.gaussian import symmetrise
 from sta_prior.se3 import make_pose, skew
 
 # Common practice, no source: below this, a turn about the line through the markers is
@@ -84,7 +85,7 @@ def _unit_covariance(
     outer = np.swapaxes(centred, -1, -2) @ centred
     information = np.trace(outer, axis1=-2, axis2=-1)[..., None, None] * np.eye(3) - outer
     information = np.where(determined[..., None, None], information, np.eye(3))
-    rotation = np.linalg.solve(information, np.broadcast_to(np.eye(3), information.shape))
+    rotation = symmetrise(np.linalg.solve(information, np.eye(3)))
     # The origin moves by the centroid's error plus the turn about the centroid: t = c + [p̄]× θ.
     lever = skew(mean)
     count = np.maximum(weight.sum(axis=-1), 1.0)[..., None, None]
@@ -93,9 +94,9 @@ def _unit_covariance(
     covariance[..., :3, :3] = rotation
     covariance[..., 3:, :3] = cross
     covariance[..., :3, 3:] = np.swapaxes(cross, -1, -2)
-    covariance[..., 3:, 3:] = np.eye(3) / count + cross @ np.swapaxes(lever, -1, -2)
-    covariance = 0.5 * (covariance + np.swapaxes(covariance, -1, -2))
-    return np.where(determined[..., None, None], covariance, np.nan)
+    covariance[..., 3:, 3:] = symmetrise(np.eye(3) / count + cross @ np.swapaxes(lever, -1, -2))
+    covariance[~determined] = np.nan
+    return covariance
 
 
 def _line_ratio(singular: FloatArray, sign: FloatArray | float = 1.0) -> FloatArray:
@@ -168,10 +169,12 @@ def fit_rigid(
     fitted = source_centred @ np.swapaxes(rotation, -1, -2)
     error = target_centred - fitted
     spread = np.sqrt(np.einsum("...ij,...ij->...", error, error) / np.maximum(3 * count - 6, 1.0))
-    known = determined[..., None, None]
+    pose = make_pose(rotation, position)
+    pose[~determined] = np.nan
+    error[~(determined[..., None] & (weight > 0))] = np.nan
     return RigidFit(
-        pose=np.where(known, make_pose(rotation, position), np.nan),
-        residual=np.where(known & (weight[..., None] > 0), error, np.nan),
+        pose=pose,
+        residual=error,
         unit_covariance=_unit_covariance(source_mean, source_centred, weight, determined),
         spread=np.where(determined, spread, np.nan),
         determined=determined,
