@@ -19,7 +19,7 @@ from sta_prior.checks import FloatArray, IntArray, nearest
 from sta_prior.errors import InputError, message
 from sta_prior.io.text import Table, read_toml
 from sta_prior.study.frames import Frame, FrameRecipe, Side
-from sta_prior.study.recipes import frame_sides, read_frame
+from sta_prior.study.recipes import frame_sides, read_frame, read_side
 
 UpAxis = Literal["x", "y", "z"]
 
@@ -155,7 +155,7 @@ class Lab:
             raise InputError(
                 message(
                     self.path,
-                    f"has joints or frames of both sides, a subject's side {side!r} cannot replace them",
+                    f"has joints or frames of both sides, side = {side!r} cannot replace them",
                     "Leave out the subject's side.",
                 )
             )
@@ -269,15 +269,25 @@ def _convention(table: Table) -> JointConvention:
                         f'Remove {key}, or use kind = "cardan".',
                     )
                 )
-        return JointConvention(kind, table.choice("side", ("right", "left")))
-    side = table.choice("side", ("right", "left"), "right")
+        return JointConvention(kind, read_side(table))
+    side = read_side(table) if "side" in table else "right"
     sequence = table.text("sequence")
-    signs = table.numbers("signs", (1.0, 1.0, 1.0))
+    first, second, third = _signs(table)
     try:
-        return JointConvention("cardan", side, sequence, tuple(signs))
+        return JointConvention("cardan", side, sequence, (first, second, third))
     except InputError as error:
         place = ", ".join(str(part) for part in table.place())
         raise InputError(f"{place}, {error}") from None
+
+
+def _signs(table: Table) -> list[float]:
+    """Read the three signs of a cardan joint, +1 where none are given."""
+    signs: list[float] = table.numbers("signs", [1.0, 1.0, 1.0])
+    if len(signs) != 3:
+        raise InputError(
+            message(table.place("signs"), f"expected 3 signs, got {len(signs)}", "Write [1, 1, -1].")
+        )
+    return signs
 
 
 def _travel_sd(table: Table) -> float:

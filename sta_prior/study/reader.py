@@ -12,6 +12,7 @@ from typing import Any
 
 import numpy as np
 
+from sta_prior.checks import nearest
 from sta_prior.errors import InputError, StaPriorWarning, message
 from sta_prior.io.files import POINT_SUFFIXES
 from sta_prior.io.text import Table, read_toml
@@ -67,7 +68,9 @@ def read_study(path: str | Path) -> Study:
     invented = top.flag("invented_data", False)
     subjects = [_read_subject(table, lab, invented) for table in top.tables("subject")]
     if not subjects:
-        raise InputError(message(top.place("subject"), "no subjects, expected at least one"))
+        raise InputError(
+            message(top.place("subject"), "no subjects, expected at least one", "Add [[subject]].")
+        )
     _refuse_repeated([subject.id for subject in subjects], top, "subject")
     _warn_shared_skin(subjects, top)
     return Study(
@@ -86,8 +89,14 @@ def _read_subject(table: Table, lab: Lab, invented: bool) -> Subject:
         for key, value in table.items()
         if key not in SUBJECT_KEYS and isinstance(value, int | float) and not isinstance(value, bool)
     }
-    others = {key: value for key, value in table.items() if key not in covariates}
-    Table(others, table.path, table.dotted).refuse_unknown(SUBJECT_KEYS)
+    for key, value in table.items():
+        if key not in covariates and key not in SUBJECT_KEYS:
+            close = nearest(key, SUBJECT_KEYS)
+            wrong = f"expected a number, as every covariate is, got {value!r}"
+            do = f"Write a number, or one of the keys {', '.join(SUBJECT_KEYS)}."
+            raise InputError(
+                message(table.place(key), f"unknown key {key!r}" if close else wrong, close or do)
+            )
     name = _read_id(table)
     whose = f"subject {name}"
     side: Side | None = table.choice("side", ("right", "left"), None)

@@ -56,6 +56,21 @@ def read_frame(segment: Table) -> Frame:
     return _read_standard(table) if "standard" in table else _read_recipe(table)
 
 
+def read_side(table: Table) -> Side:
+    """Read the side of the body a joint or a standard frame is declared for.
+
+    Raises
+    ------
+    InputError : missing, or neither right nor left.
+    """
+    if "side" not in table:
+        raise InputError(
+            message(table.place("side"), "missing, expected right or left", 'Write side = "right".')
+        )
+    side: Side = table.choice("side", ("right", "left"))
+    return side
+
+
 def frame_sides(frames: Iterable[Frame]) -> set[Side]:
     """Return the sides of the body that standard frames are declared for."""
     return {frame.side for frame in frames if isinstance(frame, StandardFrame) and frame.side is not None}
@@ -68,12 +83,18 @@ def _read_standard(table: Table) -> StandardFrame:
     needed = STANDARD_LANDMARKS[standard]
     optional = OPTIONAL_LANDMARKS.get(standard, ())
     # A pelvis has right and left landmarks and needs no side.
-    pelvis = standard == "isb-pelvis"
-    side = (
-        table.choice("side", ("right", "left"), None) if pelvis else table.choice("side", ("right", "left"))
-    )
+    side = read_side(table) if "side" in table or standard != "isb-pelvis" else None
     points = table.table("points")
     points.refuse_unknown((*needed, *optional))
+    absent = [name for name in needed if name not in points]
+    if absent:
+        raise InputError(
+            message(
+                points.place(),
+                f"{standard} needs {' '.join(needed)}, {' '.join(absent)} missing",
+                "Name the point that shows it.",
+            )
+        )
     landmarks = [(name, points.text(name)) for name in needed]
     landmarks += [(name, points.text(name)) for name in optional if name in points]
     return StandardFrame(standard, side, tuple(landmarks))

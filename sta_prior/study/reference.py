@@ -27,6 +27,7 @@ Place = tuple[object, ...]
 # Limits below: common practice, no source.
 SMALLEST_DISTANCE = 0.005  # m, between two markers of a segment
 SMALLEST_LINE_RATIO = 0.05  # extent of a cluster across its longest line over the extent along it
+DOWNWARD, LYING = 120.0, 60.0  # degrees, of a bone's y axis from up
 LARGEST_DISTANCE = 1.0  # m, of a marker from the origin of its bone
 
 
@@ -204,6 +205,7 @@ def reference_from_points(
         frame_offset=offset,
     )
     check_layout(lab, reference, place)
+    check_axes(lab, reference, place)
     return reference
 
 
@@ -272,7 +274,8 @@ def check_axes(lab: Lab, reference: Reference, place: Place) -> None:
     Warns
     -----
     StaPriorWarning : the z axes of the two bones of a knee, hip or ankle point to
-        opposite sides; the y axis of a landmark frame points down in a lab that declares `up`.
+        opposite sides; in a lab that declares `up`, the y axis of a landmark frame points
+        down, or none stands up.
     """
     rotations = rotation_of(reference.poses)
     for joint in lab.joints:
@@ -285,15 +288,26 @@ def check_axes(lab: Lab, reference: Reference, place: Place) -> None:
                 "posture, expected both to point to the right of the body",
                 "Check the side, and from and to of z.",
             )
-    for index, segment in enumerate(lab.segments):
-        tilt = np.rad2deg(np.arccos(np.clip(rotations[index][:, 1] @ lab.up_vector, -1, 1)))
-        if lab.up_declared and segment.frame is not None and tilt > 120:
+    if not lab.up_declared:
+        return
+    tilts = np.rad2deg(np.arccos(np.clip(rotations[:, :, 1] @ lab.up_vector, -1, 1)))
+    landmark = {s.name: tilt for s, tilt in zip(lab.segments, tilts, strict=True) if s.frame is not None}
+    for name, tilt in landmark.items():
+        if tilt > DOWNWARD:
             _warn(
-                (*place, f"segment {segment.name}"),
+                (*place, f"segment {name}"),
                 f"the y axis is {tilt:.0f}° from the lab's {lab.up} axis in the reference posture, "
                 "expected y to point up",
                 "Check up, and from and to of y.",
             )
+    if landmark and all(LYING < tilt <= DOWNWARD for tilt in landmark.values()):
+        angles = " ".join(f"{name} {tilt:.0f}°" for name, tilt in landmark.items())
+        _warn(
+            place,
+            f"no bone stands along the lab's {lab.up} axis in the reference posture, "
+            f"y axes are off by {angles}",
+            "Check up, unless the subject lay or sat.",
+        )
 
 
 def _frame_mean(values: FloatArray) -> FloatArray:

@@ -197,9 +197,9 @@ class Subject:
                 return reference_from_frames(
                     self.lab, frames.points, frames.spread, frames.imaging, (path,), frames.notes
                 )
-        average = average_static(points, names, (path,))
         imaging = self._bone_static()
         self._check_imaging(imaging)
+        average = average_static(points, names, (path,))
         return reference_from_frames(
             self.lab, average.points, average.spread, imaging[None], (path,), average.notes
         )
