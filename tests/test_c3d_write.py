@@ -345,9 +345,9 @@ def test_poses_go_before_the_points_where_a_16_bit_pointer_would_not_reach_behin
 
 def test_more_than_the_pointers_reach_is_refused(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     source, target = make_c3d(tmp_path / "a.c3d", cloud(frames=40)), tmp_path / "b.c3d"
-    monkeypatch.setattr("sta_prior.io.c3d_write.SHORT_LIMIT", 9)
+    monkeypatch.setattr("sta_prior.io.c3d_write.SHORT_LIMIT", 5)
     assert refusal(copy_with_rotations, source, target, ["a", "b", "c"], made_poses(40, 3)) == (
-        f"{target}: points and poses are longer than 9 blocks each, more than a C3D file can point to. "
+        f"{target}: points and poses are longer than 5 blocks each, more than a C3D file can point to. "
         "Cut the trial."
     )
 
