@@ -70,7 +70,7 @@ def check_rotation(
     missing = np.isnan(clean).all(axis=(-2, -1))
     gram = np.einsum("...ji,...jk->...ik", clean, clean) - np.eye(3)
     worst = np.abs(gram).max(axis=(-2, -1))
-    bad = ~missing & ~(worst <= tolerance)
+    bad = np.asarray(~missing & ~(worst <= tolerance))
     if bad.any():
         where = tuple(int(i) for i in np.argwhere(bad)[0]) if bad.ndim else ()
         raise RotationError(

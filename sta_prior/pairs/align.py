@@ -14,9 +14,7 @@ SAME_INSTANT = 0.02
 """Part of the skin period within which a bone frame and a skin frame are the same instant."""
 
 
-def skin_at(
-    skin_time: FloatArray, points: FloatArray, bone_time: FloatArray
-) -> tuple[FloatArray, BoolArray]:
+def skin_at(skin_time: FloatArray, points: FloatArray, bone_time: FloatArray) -> tuple[FloatArray, BoolArray]:
     """Marker positions at the instants of bone truth.
 
     Parameters

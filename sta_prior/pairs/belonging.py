@@ -117,6 +117,4 @@ def check_belonging(
     centroid = reference.mean(axis=0)
     moved = bone_from_cluster[:, :3, :3] @ centroid + bone_from_cluster[:, :3, 3] - centroid
     turned = np.median(rotation_log(bone_from_cluster[:, :3, :3]), axis=0)
-    return Belonging(
-        misfit, float(np.linalg.norm(np.median(moved, axis=0))), float(np.linalg.norm(turned))
-    )
+    return Belonging(misfit, float(np.linalg.norm(np.median(moved, axis=0))), float(np.linalg.norm(turned)))

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import warnings
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import xarray as xr
@@ -16,7 +16,7 @@ from sta_prior.angles import joint_angles
 from sta_prior.checks import FloatArray
 from sta_prior.errors import InputError, StaPriorWarning, message
 from sta_prior.pairs.align import skin_at
-from sta_prior.pairs.belonging import Belonging, check_belonging
+from sta_prior.pairs.belonging import Belonging, check_belonging, distance_misfit
 from sta_prior.se3 import inverse, transform_points
 from sta_prior.study import Lab, Reference, Study, Subject, Trial
 
@@ -159,12 +159,13 @@ def _pair_trial(trial: Trial, reference: Reference) -> _PairedTrial:
         displacement[:, own] = bone_points - reference.markers[own]
     angle = angles_of_poses(lab, pose)
     away = posture_distance(angle, reference.angles)
-    fits = [
-        check_belonging(
-            points[:, segment_of == index], reference.markers[segment_of == index], pose[:, index], away
-        )
-        for index in range(len(lab.segments))
-    ]
+    whole = skin["position"].values
+    fits = []
+    for index in range(len(lab.segments)):
+        own = segment_of == index
+        fit = check_belonging(points[:, own], reference.markers[own], pose[:, index], away)
+        # Distances need no bone truth: the best frame is sought in the whole trial.
+        fits.append(replace(fit, distance_misfit=distance_misfit(whole[:, own], reference.markers[own])))
     share = np.isfinite(points[..., 0]).mean(axis=0)
     return _PairedTrial(trial, time, displacement, pose, angle, fits, share)
 

@@ -3,7 +3,7 @@
 from sta_prior.prior.base import Binding, Prior
 from sta_prior.prior.files import load_prior
 from sta_prior.prior.interface import Artifact, IsotropicArtifact, Moments
-from sta_prior.prior.learn import DEFAULT_FAMILY, FAMILIES, learn
+from sta_prior.prior.learning import DEFAULT_FAMILY, FAMILIES, learn
 
 __all__ = [
     "DEFAULT_FAMILY",

@@ -13,7 +13,7 @@ from pathlib import Path
 import numpy as np
 import xarray as xr
 
-from sta_prior.checks import FloatArray, nearest
+from sta_prior.checks import BoolArray, FloatArray, IntArray, nearest
 from sta_prior.errors import MismatchError, StaPriorWarning, message
 from sta_prior.pairs.pairing import segment_side
 from sta_prior.prior.hierarchy import (
@@ -72,9 +72,9 @@ class SegmentModel:
     inflation: float = 1.0
 
     @property
-    def fixed_at_reference(self) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
+    def fixed_at_reference(self) -> BoolArray:
         """Features without a population weight: the constant one."""
-        return np.arange(self.basis.size) == 0
+        return np.asarray(np.arange(self.basis.size) == 0)
 
 
 @dataclass(frozen=True)
@@ -165,11 +165,12 @@ class Prior:
         for segment in lab.segments:
             model = self._match_segment(segment.name, segment.markers, lab)
             weights = self._weights(model, trial, own_data)
-            outputs = [3 * model.markers.index(marker) + axis for marker in segment.markers for axis in range(3)]
+            first = [3 * model.markers.index(marker) for marker in segment.markers]
+            outputs = (np.array(first)[:, None] + np.arange(3)).reshape(-1)
             artifacts[segment.name] = _select(
                 model,
                 weights,
-                np.array(outputs),
+                outputs,
                 joint_columns,
                 reference.angles,
                 segment_side(lab, segment.name),
@@ -308,7 +309,7 @@ class Prior:
 def _select(
     model: SegmentModel,
     weights: Weights,
-    outputs: np.ndarray[tuple[int], np.dtype[np.int64]],
+    outputs: IntArray,
     joint_columns: list[int],
     reference_angles: FloatArray,
     side: str,
@@ -322,7 +323,7 @@ def _select(
     residual = (model.hierarchy.residual * np.outer(signs, signs))[np.ix_(outputs, outputs)]
     terms = tuple(Term(joint_columns[term.joint], term.dof, term.power) for term in model.basis.terms)
     return LinearArtifact(
-        basis=Basis(terms),
+        basis=Basis(terms, model.basis.mixing),
         weights=Weights((weights.mean * signs)[:, outputs], covariance),
         residual=residual,
         time_constant=model.time_constant,

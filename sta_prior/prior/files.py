@@ -37,6 +37,7 @@ def _segment_variables(name: str, model: SegmentModel) -> Variables:
         "term_joint": ((term,), np.array([t.joint for t in terms], dtype=np.int64), _ONE),
         "term_dof": ((term,), np.array([t.dof for t in terms], dtype=np.int64), _ONE),
         "term_power": ((term,), np.array([t.power for t in terms], dtype=np.int64), _ONE),
+        "term_mixing": ((term, f"term2_{name}"), model.basis.mixing, _ONE),
         "population_mean": ((feature, output), fit.population.mean, _METRE),
         "population_covariance": ((weight, weight2), fit.population.covariance, _SQUARE),
         "subject_features": ((feature, feature2), fit.subject_features, _SQUARE),
@@ -75,10 +76,9 @@ def prior_to_dataset(prior: Prior) -> xr.Dataset:
         values = np.array([getattr(trial, field) for trial in prior.trials])
         variables[f"learned_{field}"] = (("learned_trial",), values, _ONE)
     data = xr.Dataset(variables)
-    for name in prior.validation.data_vars:
-        data[f"validation_{name}"] = prior.validation[name].rename(
-            {dim: f"validation_{dim}" for dim in prior.validation[name].dims}
-        )
+    for figure in prior.validation.data_vars:
+        array = prior.validation[figure]
+        data[f"validation_{figure}"] = array.rename({dim: f"validation_{dim}" for dim in array.dims})
     data["segment_names"] = (("segment",), np.array(list(prior.segments)), _ONE)
     data.attrs = {
         "family": prior.family,
@@ -132,7 +132,9 @@ def _read_segment(data: xr.Dataset, name: str, stop_reason: str) -> SegmentModel
         name=name,
         markers=tuple(texts("markers")),
         layout=get("layout"),
-        basis=Basis(tuple(Term(int(joint), int(dof), int(power)) for joint, dof, power in terms)),
+        basis=Basis(
+            tuple(Term(int(joint), int(dof), int(power)) for joint, dof, power in terms), get("term_mixing")
+        ),
         hierarchy=Hierarchy(
             population=Weights(get("population_mean"), get("population_covariance")),
             subject_features=get("subject_features"),
@@ -176,11 +178,11 @@ def _from_dataset(data: xr.Dataset) -> Prior:
     }
     ends = np.cumsum(data["learned_frames"].values)
     times = np.split(np.asarray(data["learned_time"].values, dtype=np.float64), ends[:-1])
-    trials = tuple(
-        LearnedTrial(*(str(data[f"learned_{field}"].values[index]) for field in fields), times=times[index])
-        for fields in [("subject", "trial", "activity", "digest")]
-        for index in range(data.sizes["learned_trial"])
-    )
+    columns = [
+        [str(value) for value in data[f"learned_{field}"].values]
+        for field in ("subject", "trial", "activity", "digest")
+    ]
+    trials = tuple(LearnedTrial(*row) for row in zip(*columns, times, strict=True))
     names = [name for name in data.variables if str(name).startswith("validation_")]
     validation = data[names].rename(
         {name: str(name).removeprefix("validation_") for name in {*names, *data[names].dims}}

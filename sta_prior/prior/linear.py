@@ -25,7 +25,8 @@ from sta_prior.prior.hierarchy import Weights
 from sta_prior.prior.interface import Moments
 
 FLEXION = 0
-MANY_SUBJECTS = 3
+SMALLEST_POWER = 0.02
+"""Angles that move less than this about the reference, rad, say little about the artifact."""
 
 
 @dataclass(frozen=True)
@@ -39,14 +40,33 @@ class Term:
 
 @dataclass(frozen=True)
 class Basis:
-    """The constant followed by powers of joint angles as differences to the reference posture."""
+    """The constant, and mixtures of powers of joint angles as differences to the reference posture.
+
+    Attributes
+    ----------
+    terms : powers of joint angles
+    mixing : shape (terms, terms), unit rad^−power by column
+        Features after the constant are mixing · raw terms. The mixing of a learned basis makes
+        them orthonormal over the training frames, so that shrinking a covariance between features
+        towards its diagonal means what it says: flexion and its square by themselves are nearly
+        one and the same.
+    """
 
     terms: tuple[Term, ...]
+    mixing: FloatArray
 
     @property
     def size(self) -> int:
         """Number of features, the constant included."""
         return len(self.terms) + 1
+
+    def raw(self, angles: FloatArray, reference: FloatArray) -> FloatArray:
+        """Differences of the powers to the reference, shape (frames, terms), rad^power."""
+        columns = [
+            angles[:, term.joint, term.dof] ** term.power - reference[term.joint, term.dof] ** term.power
+            for term in self.terms
+        ]
+        return np.stack(columns, axis=-1)
 
     def values(self, angles: FloatArray, reference: FloatArray) -> FloatArray:
         """Features at the given angles.
@@ -58,42 +78,59 @@ class Basis:
 
         Returns
         -------
-        shape (frames, features), rad^power
+        shape (frames, features), unitless
         """
-        result = np.ones((angles.shape[0], self.size))
-        for column, term in enumerate(self.terms, start=1):
-            here = angles[:, term.joint, term.dof]
-            result[:, column] = here**term.power - reference[term.joint, term.dof] ** term.power
-        return result
+        mixed = self.raw(angles, reference) @ self.mixing.T
+        return np.concatenate([np.ones((angles.shape[0], 1)), mixed], axis=1)
 
     def derivatives(self, angles: FloatArray) -> FloatArray:
-        """Derivative of the features in the angles, shape (frames, features, joints, 3)."""
+        """Derivative of the features in the angles, shape (frames, features, joints, 3), 1/rad."""
         frames, joints, _ = angles.shape
-        result = np.zeros((frames, self.size, joints, 3))
-        for column, term in enumerate(self.terms, start=1):
+        raw = np.zeros((frames, len(self.terms), joints, 3))
+        for column, term in enumerate(self.terms):
             here = angles[:, term.joint, term.dof]
-            result[:, column, term.joint, term.dof] = term.power * here ** (term.power - 1)
+            raw[:, column, term.joint, term.dof] = term.power * here ** (term.power - 1)
+        result = np.zeros((frames, self.size, joints, 3))
+        result[:, 1:] = np.einsum("kt,ftjd->fkjd", self.mixing, raw)
         return result
 
 
-def linear_basis(adjacent_joints: tuple[int, ...], subjects: int) -> Basis:
-    """Terms of the ``linear`` family for one segment.
+def orthonormal(basis: Basis, angles: list[FloatArray], references: list[FloatArray]) -> Basis:
+    """The same terms, mixed to be orthonormal over training frames.
 
-    Flexion and its square at every adjacent joint; the two other angles from three subjects on.
-    With fewer, the prior is one subject's own, and artifact regressed on a small range of the
-    very angles that it corrupts can end up worse than the rigid fit, so they are left out.
+    Parameters
+    ----------
+    basis : terms; its mixing is replaced
+    angles : of each trial, shape (frames, joints, 3), rad
+    references : of each trial, shape (joints, 3), rad
+
+    Notes
+    -----
+    Gram-Schmidt in the order of the terms, through the Cholesky factor of their Gram matrix; the
+    constant stays out, for it has no population weight. A term that hardly moves is kept at the
+    scale of SMALLEST_POWER instead of being blown up.
+    """
+    raw = np.concatenate([basis.raw(q, q0) for q, q0 in zip(angles, references, strict=True)])
+    gram = raw.T @ raw / raw.shape[0]
+    gram = gram + SMALLEST_POWER**2 * np.eye(gram.shape[0])
+    factor = np.linalg.cholesky(gram)
+    mixing: FloatArray = np.asarray(np.linalg.solve(factor, np.eye(gram.shape[0])), dtype=np.float64)
+    return Basis(basis.terms, mixing)
+
+
+def linear_basis(adjacent_joints: tuple[int, ...]) -> Basis:
+    """Terms of the ``linear`` family for one segment: flexion and its square at every adjacent joint.
+
+    The two other angles of a joint are left out on purpose. Skin markers corrupt them most, they move
+    little, and artifact regressed on the very angle that it corrupts can end up worse than the
+    rigid fit; what depends on them stays in the residual.
 
     Parameters
     ----------
     adjacent_joints : positions of the joints that touch the segment
-    subjects : how many subjects the prior learns from
     """
-    terms = []
-    for joint in adjacent_joints:
-        terms += [Term(joint, FLEXION, 1), Term(joint, FLEXION, 2)]
-        if subjects >= MANY_SUBJECTS:
-            terms += [Term(joint, 1, 1), Term(joint, 2, 1)]
-    return Basis(tuple(terms))
+    terms = tuple(Term(joint, FLEXION, power) for joint in adjacent_joints for power in (1, 2))
+    return Basis(terms, np.eye(len(terms)))
 
 
 @dataclass(frozen=True)

@@ -160,9 +160,7 @@ def summarise(frames: SegmentFrames, basis: Basis, time_constant: float) -> Tria
     for pattern in np.unique(seen, axis=0):
         here = (seen == pattern).all(axis=1)
         blocks.append(
-            make_block(
-                features[here], frames.displacement[here], frames.noise[here], weights[here], pattern
-            )
+            make_block(features[here], frames.displacement[here], frames.noise[here], weights[here], pattern)
         )
     return TrialStatistics(frames.subject, frames.trial, tuple(blocks))
 
@@ -173,21 +171,26 @@ def estimate_time_constant(trials: list[SegmentFrames], basis: Basis) -> float:
     Each trial is fitted by itself with a weak ridge; the lag-one correlation of the residuals,
     pooled over trials and outputs, gives the constant. Capped at LONGEST_TIME_CONSTANT.
     """
-    product, power, steps = 0.0, 0.0, []
+    product, power, noise, steps = 0.0, 0.0, 0.0, []
     for frames in trials:
         features = basis.values(frames.angles, frames.reference_angles)
         outputs = np.where(np.isfinite(frames.displacement), frames.displacement, 0.0)
         seen: BoolArray = np.isfinite(frames.displacement)
         gram = features.T @ features
         ridge = 1e-3 * np.trace(gram) / gram.shape[0] * np.eye(gram.shape[0])
-        residual = np.where(seen, outputs - features @ np.linalg.solve(gram + ridge, features.T @ outputs), 0.0)
+        residual = np.where(
+            seen, outputs - features @ np.linalg.solve(gram + ridge, features.T @ outputs), 0.0
+        )
         same = np.diff(frames.window) == 0
         both = seen[1:] & seen[:-1] & same[:, None]
         product += float((residual[1:] * residual[:-1])[both].sum())
         power += float((0.5 * (residual[1:] ** 2 + residual[:-1] ** 2))[both].sum())
+        # Bone-truth noise is white: it adds to the variance, not to the product of neighbours.
+        noise += float(np.einsum("faa->fa", frames.noise)[1:][both].sum())
         steps.append(frames.step)
+    power -= noise
     if power <= 0.0 or product <= 0.0:
-        return float(np.clip(np.median(steps) if steps else 0.0, 1e-3, LONGEST_TIME_CONSTANT))
+        return LONGEST_TIME_CONSTANT
     correlation = min(product / power, 0.999)
     constant = -float(np.median(steps)) / np.log(correlation)
     return float(np.clip(constant, 1e-3, LONGEST_TIME_CONSTANT))

@@ -20,7 +20,7 @@ from __future__ import annotations
 import numpy as np
 
 from sta_prior import se3
-from sta_prior.checks import BoolArray, FloatArray
+from sta_prior.checks import BoolArray, FloatArray, IntArray
 from sta_prior.rigid import RigidFit, fit_rigid
 from sta_prior.solve.posterior import FrameSolution, describe_posterior, join
 from sta_prior.solve.terms import ANCHOR, JointProblem, SegmentProblem, System, assemble
@@ -92,7 +92,7 @@ def _iterate(
     return poses, assemble(segments, joints, poses, marker_sd), iterations, ~moving
 
 
-def _take(segment: SegmentProblem, frames: FloatArray) -> SegmentProblem:
+def _take(segment: SegmentProblem, frames: IntArray) -> SegmentProblem:
     return SegmentProblem(segment.index, segment.points[frames], segment.reference, segment.artifact)
 
 

@@ -44,7 +44,8 @@ def describe_observability(segments: list[SegmentProblem], determined: BoolArray
             frames = int((two & (seen == pair).all(axis=1)).sum())
             line = "–".join(markers[pair])
             sentences.append(
-                f"{name}: not determined in {frames} of {total} frames, rotation about the line {line} is open"
+                f"{name}: not determined in {frames} of {total} frames, "
+                f"rotation about the line {line} is open"
             )
         more = int((missing & (count > 2)).sum())
         if more:

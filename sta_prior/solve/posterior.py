@@ -70,7 +70,8 @@ def _variance(jacobian: FloatArray, covariance: FloatArray) -> FloatArray:
     """Diagonal of J P Jᵀ: jacobian (F, ..., 6S), covariance (F, 6S, 6S)."""
     flat = jacobian.reshape(jacobian.shape[0], -1, jacobian.shape[-1])
     variance = np.einsum("fax,fax->fa", flat @ covariance, flat)
-    return np.maximum(variance, 0.0).reshape(jacobian.shape[:-1])
+    result: FloatArray = np.maximum(variance, 0.0).reshape(jacobian.shape[:-1])
+    return result
 
 
 def _artifact(term: Linearised, covariance: FloatArray) -> tuple[FloatArray, FloatArray]:

@@ -38,9 +38,7 @@ SMALLEST_SPREAD = 0.001
 
 _SAME_INSTANT = 0.5
 
-SCATTER = (
-    "from the scatter of the markers about the fit; says nothing about artifact that a cluster's markers share"
-)
+SCATTER = "scatter of the markers about the fit; silent about artifact that a cluster's markers share"
 
 
 def solve(
@@ -191,8 +189,8 @@ def _reference_notes(trial: Trial, points: FloatArray, reference: Reference) -> 
         misfit = distance_misfit(points[:, own], reference.markers[own])
         if misfit > DISTANCE_LIMIT:
             words = (
-                f"{segment.name} marker distances differ from the reference by {1000 * misfit:.1f} mm RMS even "
-                f"in the best frame, expected at most {1000 * DISTANCE_LIMIT:.0f} mm: the reference does not "
+                f"{segment.name} marker distances differ from the reference by {1000 * misfit:.1f} mm RMS "
+                f"even in the best frame, expected at most {1000 * DISTANCE_LIMIT:.0f} mm: the reference does not "
                 "belong to this trial"
             )
             notes.append(words)
@@ -217,8 +215,8 @@ def _warn_of_gimbal(trial: Trial, poses: FloatArray) -> None:
             warnings.warn(
                 message(
                     (trial.subject.id, trial.id, f"joint {joint.name}"),
-                    f"{near} of {margin.size} frames lie within {np.degrees(GIMBAL_WARNING):.0f}° of the posture "
-                    "where its first and third angle cannot be told apart",
+                    f"{near} of {margin.size} frames lie within {np.degrees(GIMBAL_WARNING):.0f}° of the "
+                    "posture where its first and third angle cannot be told apart",
                     "Trust the poses there, not the angles.",
                 ),
                 StaPriorWarning,
@@ -235,7 +233,11 @@ def _mark_informed(data: xr.Dataset, binding: Binding | None) -> None:
         at = np.clip(np.searchsorted(known, times), 1, known.size - 1) if known.size > 1 else np.zeros(1, int)
         gap = np.minimum(np.abs(known[at] - times), np.abs(known[np.maximum(at - 1, 0)] - times))
         informed = (gap <= _SAME_INSTANT * step).astype(np.int8)
-    data["informed"] = ("time", informed, {"units": "1", "long_name": "bone truth of this frame informed the prior"})
+    data["informed"] = (
+        "time",
+        informed,
+        {"units": "1", "long_name": "bone truth of this frame informed the prior"},
+    )
 
 
 def _dataset(
@@ -278,7 +280,11 @@ def _dataset(
         "artifact": (("time", "marker", "axis"), artifact, metre),
         "artifact_sd": (("time", "marker", "axis"), artifact_sd, metre),
         "information_share": (("time", "segment", "pose", "source"), result.share, one),
-        "marker_seen": (("time", "marker"), np.isfinite(skin["position"].values[..., 0]).astype(np.int8), one),
+        "marker_seen": (
+            ("time", "marker"),
+            np.isfinite(skin["position"].values[..., 0]).astype(np.int8),
+            one,
+        ),
     }
     if estimator == "frame-map":
         # Least squares has no law for the deformation that a p-value could refer to.

@@ -15,8 +15,8 @@ from sta_prior.checks import FloatArray, nearest
 from sta_prior.errors import InputError, message
 from sta_prior.io.netcdf import dataset_digest
 from sta_prior.prior.base import JointLabel, LearnedTrial, Prior, SegmentModel
-from sta_prior.prior.hierarchy import fit_hierarchy
-from sta_prior.prior.linear import linear_basis
+from sta_prior.prior.fitting import fit_hierarchy
+from sta_prior.prior.linear import linear_basis, orthonormal
 from sta_prior.prior.statistics import SegmentFrames, estimate_time_constant, segment_frames, summarise
 from sta_prior.prior.validate import calibrate_inflation, leave_one_out, summarise_validation
 
@@ -89,7 +89,11 @@ def _learn_segment(pairs: xr.Dataset, segment: str, joints: tuple[JointLabel, ..
             message(("pairs", segment), "no frame has both a visible marker and all joint angles")
         )
     adjacent = tuple(i for i, joint in enumerate(joints) if segment in (joint.proximal, joint.distal))
-    basis = linear_basis(adjacent, len({item.subject for item in frames}))
+    basis = orthonormal(
+        linear_basis(adjacent),
+        [item.angles for item in frames],
+        [item.reference_angles for item in frames],
+    )
     constant = estimate_time_constant(frames, basis)
     trials = tuple(summarise(item, basis, constant) for item in frames)
     _refuse_unseen(segment, markers, frames)
@@ -189,8 +193,6 @@ def _notes(trials: tuple[LearnedTrial, ...]) -> tuple[str, ...]:
             f"Personal prior: it learned from one subject, {trials[0].subject}, and holds for that subject. "
             "The spread between subjects is assumed, not learned; for anyone else its intervals are wide "
             "and unverified.",
-            "Artifact follows joint flexion only: regressed on a small range of the other angles, which it "
-            "corrupts itself, it can end up worse than the rigid fit.",
         )
     notes = []
     if count < 9:
