@@ -222,18 +222,27 @@ def comparison_rms(comparison: Comparison) -> float:
     ).estimate.rms
 
 
+def table_numbers(score: Score) -> list[float]:
+    errors = (score.estimate.bias, score.estimate.spread, score.estimate.rms, score.rigid.rms)
+    return [*(math.degrees(error) for error in errors), score.ratio]
+
+
 def test_terminal_tables_show_every_level_and_take_names_literally(tmp_path: Path) -> None:
     comparison = two_subjects(tmp_path)
     stream = io.StringIO()
-    console = Console(file=stream, width=200)
+    console = Console(file=stream, width=80)
     for part in format_comparison(comparison):
         console.print(part)
     text = stream.getvalue()
     assert "INVENTED DATA. Overall: mean over trials within a subject, then over 2 subjects" in text
-    for title in ("Activity stairs", "Activity walk", "Subject K01", "Subject K02"):
+    for title in ("By activity", "By subject", "stairs", "walk", "K01", "K02", "internal"):
         assert title in text
     assert "Frames are no independent sample" in text
     assert "nan" not in text
+    assert "…" not in text  # nothing is cut at 80 columns
+    overall = comparison.summary[0]
+    line = next(line for line in text.splitlines() if line.strip().startswith("thigh rotation °"))
+    assert line.split()[3:] == ["300", *(f"{x:.2f}" for x in table_numbers(overall)), "100", "0.05"]
     odd = Score(level="overall", part="[red]thigh[/red]", component="rx", unit="rad")
     named = Comparison(tmp_path, "hidden", (odd,), (odd,), ("[bold]note",), (), False)
     for part in format_comparison(named):

@@ -19,7 +19,15 @@ from sta_prior.compare.scores import Errors, Score
 from sta_prior.compare.tables import write_csv
 from sta_prior.errors import InputError
 from sta_prior.report import build_report
-from sta_prior.report.content import DASH, angle_table, number, percent, segment_table, share_table
+from sta_prior.report.content import (
+    DASH,
+    angle_table,
+    marker_table,
+    number,
+    percent,
+    segment_table,
+    share_table,
+)
 from sta_prior.report.figures import (
     ESTIMATE,
     SHADE,
@@ -228,6 +236,11 @@ def test_tables_hold_the_solution_s_own_numbers() -> None:
     assert row[0] == "knee flexion"
     assert row[1] == f"{number(angles[:, 0].min())} to {number(angles[:, 0].max())}"
     assert row[3] == "2.7"  # 1.645 · √2 · 0.02 rad
+    seen = np.ones((60, len(MARKERS)), dtype=np.int8)
+    seen[:15, 2] = 0
+    solution["marker_seen"] = (("time", "marker"), seen)
+    assert [row[4] for row in marker_table(solution).rows[:3]] == ["0 %", "0 %", "25 %"]
+    assert marker_table(solution).rows[0][3] == "4.9"  # 1.645 · 3 mm
     solution["rigid_position"][10:14, 1] = np.nan
     solution["conflict_p"][:, 1] = np.where(np.arange(60) < 15, 0.01, 0.5)
     shank = segment_table(solution).rows[1]
@@ -261,7 +274,7 @@ def test_comparison_table_shows_levels_but_not_single_trials(tmp_path: Path) -> 
     ]
     write_csv(tmp_path / "compare.csv", rows)
     page = page_of(tmp_path)
-    assert "knee flexion (deg) 90 −2.00 0.00 2.50 5.73 – 5.00 0.50 – – – –" in page.text
+    assert "knee flexion (deg) 1 90 – −2.00 0.00 2.50 5.73 – 5.00 0.50 – – – –" in page.text
     assert "Subject K01" in page.text
     assert "7777" not in page.text
 

@@ -4,12 +4,13 @@ from __future__ import annotations
 
 import csv
 import math
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import fields
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 import numpy as np
+from rich import box
 from rich.console import Group, RenderableType
 from rich.table import Table
 from rich.text import Text
@@ -22,6 +23,7 @@ if TYPE_CHECKING:
 
 Cell = str | int | float | None
 _SCALE = {"rad": ("deg", 180.0 / np.pi), "m": ("mm", 1000.0)}
+_DETAILS = ("rx", "ry", "rz", "tx", "ty", "tz", "pose")
 _SIZES = tuple(field.name for field in fields(Errors) if field.name != "frames")
 
 
@@ -90,55 +92,63 @@ def format_comparison(comparison: Comparison) -> list[RenderableType]:
 
     Returns
     -------
-    Rich renderables, in order: overall, per activity where there are several, per
-    subject (joint angles, and size of each segment's pose error), then notes and
-    refused trials.
+    Rich renderables, in order: overall, by activity where there are several, by
+    subject (joint angles, and the size of each segment's pose error), then notes and
+    refused trials. Peak, range error and the other intervals stand in the CSV:
+    the tables fit 80 columns.
     """
-    groups: dict[tuple[str, str], list[Score]] = {}
+    levels: dict[str, list[Score]] = {}
     for score in comparison.summary:
-        groups.setdefault((score.level, score.subject or score.activity), []).append(score)
+        levels.setdefault(score.level, []).append(score)
     shown: list[RenderableType] = []
-    for (level, name), scores in groups.items():
+    for level, scores in levels.items():
         if level == "overall":
-            count = f"{max(score.subjects for score in scores)} subjects"
-            title = f"Overall: mean over trials within a subject, then over {count}"
+            count = max(score.subjects for score in scores)
+            title = (
+                f"Overall: mean over trials within a subject, then over {count} "
+                f"{'subject' if count == 1 else 'subjects'}"
+            )
             if comparison.invented:
                 title = f"INVENTED DATA. {title}"
             shown.append(_table(title, scores))
         else:
-            brief = [score for score in scores if score.component not in ("rx", "ry", "rz", "tx", "ty", "tz")]
-            shown.append(_table(f"{level.capitalize()} {name}", brief))
+            brief = [score for score in scores if score.component not in _DETAILS]
+            shown.append(_table(f"By {level}", brief, level))
     lines = [*comparison.notes, *(f"Not compared. {text}" for text in comparison.refused)]
     shown.append(Group(*(Text(f"· {line}") for line in lines)))
     return shown
 
 
-def _table(title: str, scores: Sequence[Score]) -> Table:
-    table = Table(title=Text(title), title_justify="left")
-    table.add_column("part")
-    table.add_column("component")
-    for heading in ("frames", "bias", "spread", "RMS", "peak", "range error", "rigid RMS", "ratio"):
-        table.add_column(heading, justify="right")
-    table.add_column("covered %, at 50 / 90 / 95", justify="right")
-    table.add_column("normalised error", justify="right")
+def _table(title: str, scores: Sequence[Score], level: str = "") -> Table:
+    """One line a score; a level other than overall gets a column of names and drops the last one."""
+    table = Table(title=Text(title), title_justify="left", box=box.SIMPLE_HEAD, padding=(0, 1, 0, 0))
+    for heading in (*((level,) if level else ()), "part and component"):
+        table.add_column(heading)
+    headings = ("frames", "bias", "spread", "RMS", "rigid\nRMS", "ratio", "cover\n90 %", "norm.\nerror")
+    for heading in headings[:-1] if level else headings:
+        table.add_column(heading, justify="right", no_wrap=True)
+    before = ""
     for score in scores:
-        table.add_row(*(Text(cell) for cell in _cells(score)))
+        name = score.subject or score.activity
+        cells = _cells(score)
+        line = ("" if name == before else name, *cells[:-1]) if level else cells
+        table.add_row(*(Text(cell) for cell in line))
+        before = name
     return table
 
 
-def _cells(score: Score) -> Iterator[str]:
+def _cells(score: Score) -> tuple[str, ...]:
     suffix, scale = _SCALE.get(score.unit, ("", math.nan))
-    suffix = "°" if suffix == "deg" else f" {suffix}"
     errors = score.estimate
-    yield score.part
-    yield score.component
-    yield str(score.frames)
-    for value in (errors.bias, errors.spread, errors.rms, errors.peak, errors.range_error, score.rigid.rms):
-        yield _number(value * scale, 2, suffix)
-    yield _number(score.ratio, 2)
-    yield " / ".join(_number(100 * share, 0) for share in score.coverage)
-    yield _number(score.normalised_error, 2)
+    return (
+        f"{score.part} {score.component.replace('_', ' ')} {'°' if suffix == 'deg' else suffix}".rstrip(),
+        str(score.frames),
+        *(_number(value * scale, 2) for value in (errors.bias, errors.spread, errors.rms, score.rigid.rms)),
+        _number(score.ratio, 2),
+        _number(100 * score.coverage[LEVELS.index(0.90)], 0),
+        _number(score.normalised_error, 2),
+    )
 
 
-def _number(value: float, digits: int, suffix: str = "") -> str:
-    return f"{value:.{digits}f}{suffix}" if math.isfinite(value) else "–"
+def _number(value: float, digits: int) -> str:
+    return f"{value:.{digits}f}" if math.isfinite(value) else "–"

@@ -171,6 +171,7 @@ def _score(series: _Series, trial: Trial, chosen: BoolArray, informed: BoolArray
     values = None if series.values is None else [value[seen] for value in series.values]
     whole_pose = series.unit == "1"
     trace = np.trace(covariance, axis1=-2, axis2=-1)
+    trace = trace[np.isfinite(trace)]
     return Score(
         level="trial",
         part=series.part,

@@ -209,9 +209,16 @@ def marker_table(solution: xr.Dataset) -> PageTable:
                 number(mean_of(size)),
                 number(float(known.max()) if known.size else math.nan),
                 number(mean_of(half)),
+                percent(1.0 - float(own["marker_seen"].values.mean())) if "marker_seen" in own else DASH,
             )
         )
-    columns = ("marker", "mean size (mm)", "largest (mm)", "90 % interval, mean ± per axis (mm)")
+    columns = (
+        "marker",
+        "mean size (mm)",
+        "largest (mm)",
+        "90 % interval, mean ± per axis (mm)",
+        "frames hidden",
+    )
     return PageTable("Artifact", columns, tuple(rows))
 
 
@@ -222,14 +229,23 @@ def facts(solution: xr.Dataset) -> list[tuple[str, str]]:
     pairs = [
         ("Estimator", words_of(solution, "estimator")),
         ("Stopped", _stopped(words_of(solution, "stop_reason"), words_of(solution, "iterations"))),
+        ("Activity", words_of(solution, "activity")),
+        ("Intervals from", words_of(solution, "covariance") or "posterior"),
         ("Computing time", "" if seconds is None else f"{number(float(seconds))} s"),
-        ("Observability", words_of(solution, "observability") or "every pose component is determined"),
-        ("Suspect markers", words_of(solution, "suspects") or "none"),
+        ("Observability", _or(solution, "observability", "every pose component is determined")),
+        ("Suspect markers", _or(solution, "suspects", "none named")),
         ("Informed frames", _informed(solution)),
-        ("Prior", words_of(solution, "prior_digest")),
+        ("Prior", words_of(solution, "prior_digest") or "none"),
+        ("What it rests on", words_of(solution, "belief")),
+        ("Reference posture", words_of(solution, "reference_notes")),
         ("Skin data", words_of(solution, "input_digest")),
     ]
-    return [(term, text or DASH) for term, text in pairs]
+    return [(term, text) for term, text in pairs if text]
+
+
+def _or(solution: xr.Dataset, key: str, empty: str) -> str:
+    """Words of an attribute, what its being empty means, or a dash where it is not stored at all."""
+    return words_of(solution, key) or (empty if key in solution.attrs else DASH)
 
 
 def _stopped(reason: str, iterations: str) -> str:

@@ -289,7 +289,9 @@ def _read_csv(path: Path, unread: list[str]) -> tuple[list[str], list[list[str]]
 
 
 _COMPARISON_COLUMNS = (
+    ("subjects", "subjects", "", 0),
     ("frames", "frames", "", 0),
+    ("worth", "frames_effective", "", 0),
     ("offset (bias)", "bias", "unit", 2),
     ("spread about it", "spread", "unit", 2),
     ("RMS", "rms", "unit", 2),
