@@ -201,6 +201,14 @@ def test_millimetres_declared_as_metres_are_noticed(tmp_path: Path) -> None:
     )
 
 
+def test_a_stray_point_is_noticed(tmp_path: Path) -> None:
+    words = cloud()
+    words[0, 0, :3], words[0, 1, :3] = (-100_000, 0, 0), (400_000, 0, 0)
+    assert refusal(make_c3d(tmp_path / "a.c3d", words)) == (
+        ": declared in mm, all points together span 500 m, expected at most 100 m. Remove stray points."
+    )
+
+
 def test_a_label_that_is_seen_twice_is_refused(tmp_path: Path) -> None:
     path = make_c3d(tmp_path / "a.c3d", cloud(points=4), ["TA", "TB", "TC", "TB"])
     assert refusal(path) == (

@@ -167,6 +167,8 @@ def _read(path: str | Path, kind: str) -> xr.Dataset:
         raise InputError(message(path, f"damaged or truncated NetCDF ({what})", EXPORT_AGAIN)) from None
     for variable in dataset.variables.values():
         variable.encoding = {}
+        if variable.dtype.kind in TEXT:  # the unit that _write gave it
+            variable.attrs.pop("units", None)
     return dataset
 
 

@@ -74,15 +74,14 @@ def check_extent(
     small = extent < lowest
     limit = f"at least {lowest * 1e3:g} mm" if small else "at most 100 m"
     size = f"{extent * 1e3:.3g} mm" if small else f"{extent:.4g} m"
-    likely = "metres" if small else "millimetres"
-    raise InputError(
-        message(
-            place,
-            f"declared in {unit}, all points together span {size}, expected {limit}",
-            f"The numbers look like {likely}: correct the declared unit"
-            + (" or export the file again." if small else ", or remove stray points."),
-        )
-    )
+    if small:
+        likely = "The numbers look like metres: correct the declared unit or export the file again."
+        do = likely if unit.lower() != "m" else "Check what was exported."
+    else:
+        likely = "The numbers look like millimetres: correct the declared unit, or remove stray points."
+        do = likely if unit.lower() != "mm" else "Remove stray points."
+    wrong = f"declared in {unit}, all points together span {size}, expected {limit}"
+    raise InputError(message(place, wrong, do))
 
 
 def check_unique(labels: Sequence[str], place: str | Path | tuple[object, ...], what: str) -> None:
