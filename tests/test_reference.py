@@ -104,6 +104,18 @@ def test_stray_frames_and_hidden_points_do_not_move_the_average(tmp_path):
     assert reference.notes == ()
 
 
+def test_frames_that_show_every_point_are_preferred(tmp_path):
+    path = make_study(tmp_path)
+    points = still(leg_points(leg_poses()), 60)
+    points["LCO"][12:] = np.nan
+    for xyz in points.values():
+        xyz[12:] += 0.03  # the subject has stepped aside when LCO is lost
+    write_points(tmp_path / "static.csv", points)
+    reference = reference_of(path)
+    np.testing.assert_allclose(reference.markers, MARKERS, atol=1e-9)
+    np.testing.assert_allclose(reference.poses, leg_poses(), atol=1e-9)
+
+
 def test_points_never_seen_together_are_averaged_each_on_its_own(tmp_path):
     path = make_study(tmp_path)
     points = still(leg_points(leg_poses()), 60)
@@ -260,6 +272,31 @@ def test_bone_truth_at_the_reference_where_the_static_file_is_a_trial(tmp_path):
     np.testing.assert_allclose(np.rad2deg(reference.angles), [[middle, 2.0, -3.0]], atol=1e-3)
     np.testing.assert_allclose(reference.joint_centres[0, 1], KNEE_IN_SHANK, atol=1e-8)
     assert np.isnan(reference.marker_sd).all()
+
+
+@pytest.mark.parametrize(
+    ("rate", "note"),
+    [
+        (50.0, "6 frames of the static file, 0.000–0.100 s"),
+        (500.0, "10 frames of the static file, 0.000–0.018 s"),
+    ],
+)
+def test_the_first_tenth_of_a_second_counts_and_at_most_ten_frames(tmp_path, rate, note):
+    study = STUDY.replace('static = "static.csv"', 'static = "stairs.csv"')
+    path = make_study(tmp_path, lab=IMAGING_LAB, study=study)
+    poses = np.stack([leg_poses((f, 2.0, -3.0)) for f in np.linspace(5.0, 35.0, 30)])
+    write_points(tmp_path / "stairs.csv", leg_points(poses), rate)
+    write_bones(tmp_path / "stairs_bone.csv", BONES, np.arange(30) / rate, poses)
+    reference = reference_of(path)
+    assert reference.notes == (f"bone truth at the reference: {note}",)
+
+
+def test_bone_static_stands_over_a_trial_that_is_the_static_file(tmp_path):
+    study = WITH_BONE_STATIC.replace('static = "static.csv"', 'static = "stairs.csv"')
+    path = make_study(tmp_path, lab=IMAGING_LAB, study=study)
+    write_points(tmp_path / "stairs.csv", still(leg_points(leg_poses()), 30))
+    write_bones(tmp_path / "bones.csv", BONES, np.zeros(1), turned(leg_poses())[None])
+    np.testing.assert_allclose(reference_of(path).poses, turned(leg_poses()), atol=1e-9)
 
 
 def test_frames_that_hide_a_marker_are_passed_over(tmp_path):
