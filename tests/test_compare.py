@@ -163,6 +163,7 @@ def test_averages_run_over_trials_then_subjects_never_frames() -> None:
     assert overall.ratio == pytest.approx(math.sqrt(1.0 * 0.25))
     assert (overall.subjects, overall.trials, overall.frames) == (2, 3, 10_020)
     assert overall.frames_effective == 6.0
+    assert math.isnan(summarise([Score("trial", "thigh", "pose", "1")])[0].frames_effective)
     assert overall.coverage[:2] == pytest.approx((0.5, 0.5))
     assert math.isnan(overall.coverage[2])
     assert math.isnan(overall.estimate.range_error)

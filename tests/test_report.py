@@ -6,7 +6,6 @@ import json
 import math
 import re
 import shutil
-from html.parser import HTMLParser
 from pathlib import Path
 
 import numpy as np
@@ -14,6 +13,7 @@ import pytest
 import xarray as xr
 from made_solutions import DOF, MARKERS, keep, knee_angles, made_solution, made_study, walking_poses
 from made_solutions import TIMES as STUDY_TIMES
+from page_reader import PageReader
 
 from sta_prior.compare.scores import Errors, Score
 from sta_prior.compare.tables import write_csv
@@ -42,41 +42,6 @@ from sta_prior.report.figures import (
 
 TIMES = np.arange(0.0, 1.2, 0.02)
 HOSTILE = "<script>alert(1)</script>"
-
-
-class PageReader(HTMLParser):
-    """Collects what the tests ask of a page: elements, attributes, text, and that tags close in order."""
-
-    VOID = frozenset({"meta", "br", "link", "img", "input", "hr"})
-
-    def __init__(self, text: str) -> None:
-        super().__init__()
-        self.open: list[str] = []
-        self.elements: list[tuple[str, dict[str, str | None]]] = []
-        self.words: list[str] = []
-        self.unbalanced: list[str] = []
-        self.feed(text)
-        self.close()
-        self.text = " ".join(" ".join(self.words).split())
-
-    def handle_starttag(self, tag: str, attrs: list[tuple[str, str | None]]) -> None:
-        self.elements.append((tag, dict(attrs)))
-        if tag not in self.VOID:
-            self.open.append(tag)
-
-    def handle_startendtag(self, tag: str, attrs: list[tuple[str, str | None]]) -> None:
-        self.elements.append((tag, dict(attrs)))
-
-    def handle_endtag(self, tag: str) -> None:
-        if not self.open or self.open.pop() != tag:
-            self.unbalanced.append(tag)
-
-    def handle_data(self, data: str) -> None:
-        if "style" not in self.open:
-            self.words.append(data)
-
-    def all(self, tag: str) -> list[dict[str, str | None]]:
-        return [attributes for name, attributes in self.elements if name == tag]
 
 
 def solution_of(times: np.ndarray = TIMES, **attributes: object) -> xr.Dataset:
@@ -219,13 +184,14 @@ def test_numbers_that_are_missing_read_as_a_dash(tmp_path: Path) -> None:
 
 def test_number_and_percent() -> None:
     assert [number(v) for v in (math.nan, math.inf, -0.04, -1.25, 3.0)] == [DASH, DASH, "0.0", "−1.2", "3.0"]
-    assert [percent(v) for v in (math.nan, 0.0, 0.004, 0.5, 0.996, 1.0)] == [
+    assert [percent(v) for v in (math.nan, 0.0, 0.004, 0.5, 0.996, 1.0, -0.031)] == [
         DASH,
         "0 %",
         "< 1 %",
         "50 %",
         "> 99 %",
         "100 %",
+        "−3 %",
     ]
 
 

@@ -8,8 +8,6 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Iterable, Sequence
 
-import numpy as np
-
 from sta_prior.compare.scores import LEVELS, NAN, Errors, Level, Score
 
 
@@ -48,7 +46,7 @@ def _level(rows: Sequence[Score], level: Level, subject: str = "", activity: str
     result = []
     for part, component, unit in keys:
         group = [row for row in rows if (row.part, row.component, row.unit) == (part, component, unit)]
-        frames_effective = [row.frames_effective for row in group]
+        worth = [row.frames_effective for row in group if not math.isnan(row.frames_effective)]
         result.append(
             Score(
                 level=level,
@@ -61,7 +59,7 @@ def _level(rows: Sequence[Score], level: Level, subject: str = "", activity: str
                 trials=len(group),
                 frames=sum(row.frames for row in group),
                 frames_informed=sum(row.frames_informed for row in group),
-                frames_effective=float(np.nansum(frames_effective)),
+                frames_effective=sum(worth) if worth else NAN,
                 estimate=_mean_errors(group, lambda row: row.estimate),
                 rigid=_mean_errors(group, lambda row: row.rigid),
                 ratio=_mean(group, lambda row: row.ratio, geometric=True),

@@ -113,27 +113,25 @@ def format_comparison(comparison: Comparison) -> list[RenderableType]:
             shown.append(_table(title, scores))
         else:
             brief = [score for score in scores if score.component not in _DETAILS]
-            shown.append(_table(f"By {level}", brief, level))
+            shown.append(_table(f"By {level}", brief))
     lines = [*comparison.notes, *(f"Not compared. {text}" for text in comparison.refused)]
     shown.append(Group(*(Text(f"· {line}") for line in lines)))
     return shown
 
 
-def _table(title: str, scores: Sequence[Score], level: str = "") -> Table:
-    """One line a score; a level other than overall gets a column of names and drops the last one."""
+def _table(title: str, scores: Sequence[Score]) -> Table:
+    """One line a score, under a line with the name of the subject or activity where there is one."""
     table = Table(title=Text(title), title_justify="left", box=box.SIMPLE_HEAD, padding=(0, 1, 0, 0))
-    for heading in (*((level,) if level else ()), "part and component"):
-        table.add_column(heading)
-    headings = ("frames", "bias", "spread", "RMS", "rigid\nRMS", "ratio", "cover\n90 %", "norm.\nerror")
-    for heading in headings[:-1] if level else headings:
+    table.add_column("part and component")
+    for heading in ("frames", "bias", "spread", "RMS", "rigid\nRMS", "ratio", "cover\n90 %", "norm.\nerror"):
         table.add_column(heading, justify="right", no_wrap=True)
     before = ""
     for score in scores:
         name = score.subject or score.activity
-        cells = _cells(score)
-        line = ("" if name == before else name, *cells[:-1]) if level else cells
-        table.add_row(*(Text(cell) for cell in line))
-        before = name
+        if name != before:
+            table.add_row(Text(name, style="bold"))
+            before = name
+        table.add_row(*(Text(cell) for cell in _cells(score)))
     return table
 
 

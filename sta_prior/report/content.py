@@ -53,7 +53,7 @@ def percent(share: float) -> str:
         return "< 1 %"
     if 0.99 < share < 1:
         return "> 99 %"
-    return f"{100 * share:.0f} %"
+    return f"{number(100 * share, 0)} %"
 
 
 def mean_of(values: FloatArray) -> float:
@@ -139,7 +139,11 @@ def share_table(solution: xr.Dataset) -> PageTable | None:
             cells = [percent(mean_of(own.sel(source=source).values)) for source in share["source"].values]
             rows.append((f"{plain(segment)} {plain(pose)}", *cells))
     columns = ("pose component", *(plain(source).replace("_", " ") for source in share["source"].values))
-    return PageTable("Share of the information, mean over frames", columns, tuple(rows))
+    return PageTable(
+        "Share of the information, mean over frames; a row sums to 100 %, and a share may be negative",
+        columns,
+        tuple(rows),
+    )
 
 
 def segment_table(solution: xr.Dataset) -> PageTable:
@@ -231,7 +235,7 @@ def facts(solution: xr.Dataset) -> list[tuple[str, str]]:
         ("Stopped", _stopped(words_of(solution, "stop_reason"), words_of(solution, "iterations"))),
         ("Activity", words_of(solution, "activity")),
         ("Intervals from", words_of(solution, "covariance") or "posterior"),
-        ("Computing time", "" if seconds is None else f"{number(float(seconds))} s"),
+        ("Computing time", "" if seconds is None else f"{number(float(seconds), 2)} s"),
         ("Observability", _or(solution, "observability", "every pose component is determined")),
         ("Suspect markers", _or(solution, "suspects", "none named")),
         ("Informed frames", _informed(solution)),

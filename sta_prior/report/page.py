@@ -36,6 +36,7 @@ class Panel:
     svg: Markup
     caption: str
     key: str
+    shaded: bool
 
 
 @dataclass(frozen=True)
@@ -198,6 +199,7 @@ def _trial_part(
 def _panels(position: int, solution: xr.Dataset, most: int, truth: TruthCurve | None) -> list[Panel]:
     stride = -(-solution.sizes["time"] // most)
     sparse = f" Every {_ordinal(stride)} frame is drawn." if stride > 1 else ""
+    shaded = bool(figures.beyond_frames(solution).any())
     with_truth = ", and the bone truth (dots)" if truth is not None else ""
     drawings: list[tuple[Drawing | None, str, str]] = [
         (
@@ -219,7 +221,7 @@ def _panels(position: int, solution: xr.Dataset, most: int, truth: TruthCurve | 
         ),
     ]
     return [
-        Panel(Markup(drawing.svg), caption, key)  # made by figures.py, which escapes its labels
+        Panel(Markup(drawing.svg), caption, key, shaded)  # made by figures.py, which escapes its labels
         for drawing, caption, key in drawings
         if drawing is not None
     ]
@@ -238,7 +240,7 @@ def _page_facts(trials: list[TrialPart]) -> list[tuple[str, str]]:
     """Facts of the trials that hold for the whole page, or how many different values there are."""
     return [
         (term, _common([part.facts for part in trials], term))
-        for term in ("Estimator", "Prior", "Written by")
+        for term in ("Estimator", "Intervals from", "Prior", "Written by")
     ]
 
 
