@@ -81,7 +81,8 @@ def check_rotation(
                 "A sheared or scaled matrix is not a pose.",
             )
         )
-    reflected = ~missing & (np.linalg.det(np.where(missing[..., None, None], np.eye(3), clean)) < 0)
+    determinant = np.linalg.det(np.where(missing[..., None, None], np.eye(3), clean))
+    reflected = np.asarray(~missing & (determinant < 0))
     if reflected.any():
         where = tuple(int(i) for i in np.argwhere(reflected)[0]) if reflected.ndim else ()
         raise RotationError(

@@ -227,6 +227,14 @@ def pair_with_report(
     return _dataset(study, paired), report
 
 
+def input_digests(data: xr.Dataset) -> dict[str, str]:
+    """SHA-256 of the skin file of every paired trial, by "subject/trial"."""
+    rows = zip(
+        data["trial_subject"].values, data["trial_id"].values, data["trial_digest"].values, strict=True
+    )
+    return {f"{subject}/{trial}": str(digest) for subject, trial, digest in rows}
+
+
 def _dataset(study: Study, paired: list[_PairedTrial]) -> xr.Dataset:
     lab = study.lab
     subjects: list[Subject] = list({item.trial.subject.id: item.trial.subject for item in paired}.values())

@@ -11,13 +11,13 @@ from pathlib import Path
 import numpy as np
 import xarray as xr
 from numpy.random import Generator
-from sta_prior.io.text import write_bone_table
 
 from sta_prior.checks import FloatArray, nearest
 from sta_prior.errors import InputError, message
 from sta_prior.io.c3d import write_c3d
 from sta_prior.io.files import atomic_path
 from sta_prior.io.points import points_dataset
+from sta_prior.io.text import write_bone_table
 from sta_prior.se3 import position_of, rotation_of
 from sta_prior.simulate.artifact import Population, PopulationSettings, draw_population, drives
 from sta_prior.simulate.motion import RATE, TASKS, draw_style, task_motion

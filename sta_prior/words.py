@@ -1,0 +1,216 @@
+"""Tables and summaries of pairs, priors and runs for the terminal and for --json.
+
+Shell: finished objects in, text out; nothing is printed here. Conventions: docs/conventions.md.
+"""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import xarray as xr
+from rich import box
+from rich.table import Table
+
+from sta_prior.batch import Run
+from sta_prior.prior import Prior
+from sta_prior.prior.validate import binomial_bound
+
+CAUTION = (
+    "Imaging dose and bone pins need ethics approval, justification and licensed practice; "
+    "fewer is better. Results are for research, not for clinical decisions."
+)
+
+
+def _table(title: str, columns: list[str], rows: list[list[str]]) -> Table:
+    table = Table(title=title, title_justify="left", box=box.SIMPLE_HEAD, padding=(0, 1, 0, 0))
+    for index, name in enumerate(columns):
+        table.add_column(name, justify="left" if index == 0 else "right", overflow="fold")
+    for row in rows:
+        table.add_row(*row)
+    return table
+
+
+def pairs_table(data: xr.Dataset) -> Table:
+    """A row a trial and segment: frames, displacement RMS and peak over its markers, cluster offset."""
+    rows = []
+    segments = [str(name) for name in data["segment"].values]
+    for index in range(data.sizes["trial"]):
+        name = f"{data['trial_subject'].values[index]} {data['trial_id'].values[index]}"
+        for column, segment in enumerate(segments):
+            own = data["marker_segment"].values == segment
+            rms = 1000 * data["displacement_rms"].values[index, own]
+            peak = 1000 * data["displacement_peak"].values[index, own]
+            rows.append(
+                [
+                    name if column == 0 else "",
+                    segment,
+                    str(int(data["frames_used"].values[index])),
+                    f"{np.sqrt(np.nanmean(rms**2)):.1f}" if np.isfinite(rms).any() else "–",
+                    f"{np.nanmax(peak):.1f}" if np.isfinite(peak).any() else "–",
+                    f"{1000 * data['cluster_offset'].values[index, column]:.1f}",
+                ]
+            )
+    columns = ["trial", "segment", "frames", "RMS mm", "peak mm", "offset mm"]
+    return _table("Displacement of markers from the reference, in the bone frame", columns, rows)
+
+
+def pairs_summary(data: xr.Dataset, refused: tuple[tuple[str, str, str], ...], out: Path) -> dict[str, Any]:
+    """Machine-readable account of paired data."""
+    return {
+        "out": str(out),
+        "subjects": [str(name) for name in data["subject_id"].values],
+        "frames": int(data.sizes["frame"]),
+        "trials": [
+            {
+                "subject": str(data["trial_subject"].values[index]),
+                "trial": str(data["trial_id"].values[index]),
+                "frames": int(data["frames_used"].values[index]),
+                "displacement_rms_mm": {
+                    str(marker): round(1000 * float(value), 3)
+                    for marker, value in zip(
+                        data["marker"].values, data["displacement_rms"].values[index], strict=True
+                    )
+                    if np.isfinite(value)
+                },
+            }
+            for index in range(data.sizes["trial"])
+        ],
+        "refused": [{"subject": s, "trial": t, "reason": reason} for s, t, reason in refused],
+        "invented_data": int(data.attrs.get("invented_data", 0)),
+    }
+
+
+def validation_table(prior: Prior) -> Table | None:
+    """Left-out figures by segment; None where nothing could be left out."""
+    data = prior.validation
+    if data.sizes.get("unit", 0) == 0:
+        return None
+    units = data.sizes["unit"]
+    by_subject = bool(data["by_subject"].values[0])
+    rows = []
+    for index, segment in enumerate(data["segment"].values):
+        covered = data["coverage"].values[index].mean(axis=0)
+        row = [str(segment)]
+        for column, level in enumerate(data["level"].values):
+            low, high = binomial_bound(units, float(level))
+            row.append(f"{100 * covered[column]:.0f} ({100 * low:.0f}–{100 * high:.0f})")
+        error, zero = data["rms_error"].values[index], data["rms_zero"].values[index]
+        row += [
+            f"{1000 * np.sqrt((error**2).mean()):.1f}",
+            f"{1000 * np.sqrt((zero**2).mean()):.1f}",
+            f"{1000 * data['crps'].values[index].mean():.2f}",
+            f"{float(data['inflation'].values[index]):.2f}",
+        ]
+        rows.append(row)
+    what = "subject" if by_subject else "trial (one subject: this says nothing about others)"
+    title = f"Displacement predicted for each left-out {what}, {units} in all; per axis"
+    levels = [f"covered at {100 * float(level):.0f} %" for level in data["level"].values]
+    return _table(title, ["segment", *levels, "RMS mm", "RMS, no prior", "CRPS mm", "factor"], rows)
+
+
+def prior_lines(prior: Prior) -> list[Any]:
+    """What a prior is made of, its validation, and what to distrust."""
+    lines: list[Any] = []
+    if prior.invented:
+        lines.append("INVENTED DATA: this prior describes nobody.")
+    kind = "personal prior" if prior.is_personal else "prior"
+    lines.append(f"{prior.family} {kind} from {len(prior.subjects)} subject(s): {', '.join(prior.subjects)}")
+    by_activity: dict[str, list[int]] = {}
+    for trial in prior.trials:
+        by_activity.setdefault(trial.activity, []).append(trial.times.size)
+    for activity, counts in by_activity.items():
+        lines.append(f"  {activity}: {len(counts)} trials, {sum(counts)} frames with bone truth")
+    for name, model in prior.segments.items():
+        residual = 1000 * float(np.sqrt(np.diag(model.hierarchy.residual).mean()))
+        lines.append(
+            f"  {name}: {' '.join(model.markers)}; residual {residual:.1f} mm SD per axis, decay time "
+            f"{model.time_constant:.3f} s; fit: {model.hierarchy.stop_reason}"
+        )
+    table = validation_table(prior)
+    if table is None:
+        lines.append("Not validated: one subject with one trial leaves nothing to leave out.")
+    else:
+        lines.append(table)
+        lines.append(
+            "In brackets: the range that 19 of 20 sets of so many units would show if the level held. "
+            "Factor: widening of the spread between subjects for their small number."
+        )
+    lines += [f"Note. {note}" for note in prior.notes]
+    lines.append(CAUTION)
+    return lines
+
+
+def prior_summary(prior: Prior, path: Path) -> dict[str, Any]:
+    """Machine-readable account of a prior."""
+    data = prior.validation
+    segments = {}
+    for index, segment in enumerate(data["segment"].values):
+        model = prior.segments[str(segment)]
+        entry: dict[str, Any] = {
+            "markers": list(model.markers),
+            "time_constant_s": model.time_constant,
+            "inflation": model.inflation,
+            "stop_reason": model.hierarchy.stop_reason,
+        }
+        if data.sizes.get("unit", 0):
+            entry["coverage"] = {
+                f"{100 * float(level):.0f}": round(float(data["coverage"].values[index, :, column].mean()), 4)
+                for column, level in enumerate(data["level"].values)
+            }
+            entry["rms_error_mm"] = round(1000 * float(data["rms_error"].values[index].mean()), 3)
+            entry["rms_without_prior_mm"] = round(1000 * float(data["rms_zero"].values[index].mean()), 3)
+        segments[str(segment)] = entry
+    return {
+        "prior": str(path),
+        "digest": prior.digest,
+        "family": prior.family,
+        "personal": prior.is_personal,
+        "subjects": list(prior.subjects),
+        "left_out": "subject" if bool(data["by_subject"].values[0]) else "trial",
+        "segments": segments,
+        "notes": list(prior.notes),
+        "invented_data": int(prior.invented),
+    }
+
+
+def run_table(run: Run) -> Table:
+    """A row a trial: frames, frames not determined, frames that informed the prior, iterations."""
+    rows = [
+        [
+            f"{item.subject} {item.trial}",
+            item.status,
+            str(item.frames) if item.frames else "–",
+            str(item.frames_undetermined) if item.frames else "–",
+            str(item.frames_informed) if item.frames else "–",
+            str(item.iterations) if item.frames else "–",
+            f"{item.seconds:.2f}" if item.frames else "–",
+        ]
+        for item in run.outcomes
+    ]
+    columns = ["trial", "status", "frames", "open", "informed", "iterations", "s"]
+    return _table("Solved trials", columns, rows)
+
+
+def run_summary(run: Run, out: Path, page: Path) -> dict[str, Any]:
+    """Machine-readable account of a run."""
+    return {
+        "out": str(out),
+        "report": str(page),
+        "trials": [
+            {
+                "subject": item.subject,
+                "trial": item.trial,
+                "status": item.status,
+                "reason": item.reason,
+                "frames": item.frames,
+                "frames_undetermined": item.frames_undetermined,
+                "frames_informed": item.frames_informed,
+                "warnings": list(item.warnings),
+                "observability": item.observability,
+            }
+            for item in run.outcomes
+        ],
+        "failed": len(run.failed),
+    }
