@@ -11,7 +11,7 @@ import json
 import warnings
 from collections.abc import Callable, Sequence
 from contextlib import AbstractContextManager, nullcontext
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 from datetime import UTC, datetime
 from importlib.metadata import version
 from pathlib import Path
@@ -108,11 +108,40 @@ def solve_job(job: Job) -> Outcome:
     """Solve one trial and write its files; never raises what a bad trial can cause."""
     with warnings.catch_warnings(record=True) as caught:
         warnings.simplefilter("always", StaPriorWarning)
-        activity = ""
         try:
-            prior_name = str(prior_path) if prior_path else None
-    personal_name = str(personal_path) if personal_path else None
-    study, prior, personal = _loaded(str(study_path), prior_name, personal_name)
+            outcome = _solve_and_write(job)
+        except (StaPriorError, np.linalg.LinAlgError, OSError) as error:
+            outcome = Outcome(job.subject, job.trial, "", "failed", str(error))
+    return replace(outcome, warnings=_texts(caught))
+
+
+def _solve_and_write(job: Job) -> Outcome:
+    study, prior, personal = _loaded(job.study, job.prior, job.personal)
+    trial = study.trial(job.subject, job.trial)
+    digests = _digests(trial, prior, personal)
+    path = solution_path(Path(job.out), job.subject, job.trial)
+    solution = _kept_solution(path, job, digests) if job.resume else None
+    status = "solved" if solution is None else "kept"
+    if solution is None:
+        solution = solve(trial, prior, job.estimator, personal)
+        _refuse_empty(solution, trial)
+        _write_trial(path, solution, trial, digests)
+    determined = np.isfinite(solution["position"].values).all(axis=(1, 2))
+    return Outcome(
+        subject=job.subject,
+        trial=job.trial,
+        activity=trial.activity,
+        status=status,
+        frames=int(solution.sizes["time"]),
+        frames_undetermined=int((~determined).sum()),
+        frames_informed=int(solution["informed"].sum()),
+        estimator=str(solution.attrs["estimator"]),
+        iterations=int(solution.attrs["iterations"]),
+        stop_reason=str(solution.attrs["stop_reason"]),
+        seconds=float(solution.attrs["seconds"]),
+        observability=str(solution.attrs["observability"]),
+        input_digest=digests["skin"],
+    )
 
 
 def _texts(caught: list[warnings.WarningMessage]) -> tuple[str, ...]:

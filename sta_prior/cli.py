@@ -118,7 +118,7 @@ def pair(
     Example:  sta-prior pair study.toml --out pairs.nc
     """
     from sta_prior.io.netcdf import write_dataset
-    from sta_prior.pairs import pair_with_report
+    from sta_prior.pairs import input_digests, pair_with_report
     from sta_prior.study import read_study
 
     screen = Screen(quiet, as_json)
