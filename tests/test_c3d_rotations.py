@@ -87,6 +87,8 @@ def test_a_copy_of_each_real_variant(tmp_path: Path, order: str, form: str) -> N
     np.testing.assert_allclose(back["rotation"], poses[..., :3, :3], rtol=0, atol=1e-6)
     np.testing.assert_allclose(back["position"], poses[..., :3, 3], rtol=0, atol=1e-6)
     assert read_c3d(target).equals(read_c3d(source))
+    added = len(target.read_bytes()) - len(source.read_bytes())
+    assert 0 < added - 89 * 2 * 17 * 4 < 4 * 512
     if order == "pc":  # the library decodes rotations of little-endian files
         theirs = ezc3d.c3d(str(target))["data"]
         np.testing.assert_allclose(
@@ -116,6 +118,8 @@ def test_poses_that_an_independent_library_wrote(tmp_path: Path) -> None:
     assert ours["segment"].to_numpy().tolist() == ["pelvis", "thigh", "shank"]
     copy_with_rotations(tmp_path / "a.c3d", tmp_path / "b.c3d", ["foot"], poses[:, :1])
     assert read_c3d_rotations(tmp_path / "b.c3d")["segment"].to_numpy().tolist() == ["foot"]
+    names = [record.name for record in parse_c3d(tmp_path / "b.c3d").records if record.group < 0]
+    assert names.count("ROTATION") == 1
     assert len((tmp_path / "b.c3d").read_bytes()) < len((tmp_path / "a.c3d").read_bytes()) + 512
 
 
