@@ -165,6 +165,10 @@ def learn(
 @app.command()
 def check(
     prior_file: Annotated[Path, typer.Argument(metavar="PRIOR.nc", help="Prior.")],
+    pairs: Annotated[
+        Path | None,
+        typer.Option("--pairs", metavar="PAIRS.nc", help="Test it on these paired data of other subjects."),
+    ] = None,
     quiet: Quiet = False,
     as_json: Json = False,
 ) -> None:
@@ -172,12 +176,14 @@ def check(
 
     Example:  sta-prior check prior.nc
     """
-    from sta_prior.prior import load_prior
+    from sta_prior.io.netcdf import read_dataset
+    from sta_prior.prior import examine, load_prior
 
     screen = Screen(quiet, as_json)
     with _warnings_as_notes(screen):
         prior = load_prior(prior_file)
-    screen.finish(words.prior_summary(prior, prior_file), *words.prior_lines(prior))
+        found = examine(prior, read_dataset(pairs, "pairs")) if pairs else None
+    screen.finish(words.prior_summary(prior, prior_file, found), *words.prior_lines(prior, found))
 
 
 @app.command()

@@ -82,9 +82,8 @@ def pairs_summary(data: xr.Dataset, refused: tuple[tuple[str, str, str], ...], o
     }
 
 
-def validation_table(prior: Prior) -> Table | None:
-    """Left-out figures by segment; None where nothing could be left out."""
-    data = prior.validation
+def validation_table(data: xr.Dataset, others: bool = False) -> Table | None:
+    """Figures by segment of subjects left out, or of other subjects; None where there are none."""
     if data.sizes.get("unit", 0) == 0:
         return None
     units = data.sizes["unit"]
@@ -106,12 +105,14 @@ def validation_table(prior: Prior) -> Table | None:
         rows.append(row)
     what = "subject" if by_subject else "trial (one subject: this says nothing about others)"
     title = f"Displacement predicted for each left-out {what}, {units} in all; per axis"
+    if others:
+        title = f"Displacement predicted for {units} other subject(s) of the given pairs; per axis"
     levels = [f"covered at {100 * float(level):.0f} %" for level in data["level"].values]
     return _table(title, ["segment", *levels, "RMS mm", "RMS, no prior", "CRPS mm", "factor"], rows)
 
 
-def prior_lines(prior: Prior) -> list[Any]:
-    """What a prior is made of, its validation, and what to distrust."""
+def prior_lines(prior: Prior, found: xr.Dataset | None = None) -> list[Any]:
+    """What a prior is made of, its validation (and on other pairs, if given), and what to distrust."""
     lines: list[Any] = []
     if prior.invented:
         lines.append("INVENTED DATA: this prior describes nobody.")
@@ -128,7 +129,7 @@ def prior_lines(prior: Prior) -> list[Any]:
             f"  {name}: {' '.join(model.markers)}; residual {residual:.1f} mm SD per axis, decay time "
             f"{model.time_constant:.3f} s; fit: {model.hierarchy.stop_reason}"
         )
-    table = validation_table(prior)
+    table = validation_table(prior.validation)
     if table is None:
         lines.append("Not validated: one subject with one trial leaves nothing to leave out.")
     else:
@@ -137,31 +138,45 @@ def prior_lines(prior: Prior) -> list[Any]:
             "In brackets: the range that 19 of 20 sets of so many units would show if the level held. "
             "Factor: widening of the spread between subjects for their small number."
         )
+    if found is not None:
+        lines.append(validation_table(found, others=True))
     lines += [f"Note. {note}" for note in prior.notes]
     lines.append(CAUTION)
     return lines
 
 
-def prior_summary(prior: Prior, path: Path) -> dict[str, Any]:
-    """Machine-readable account of a prior."""
+def _figures(data: xr.Dataset, index: int) -> dict[str, Any]:
+    """Validation of one segment: coverage by level, error with and without the prior."""
+    if not data.sizes.get("unit", 0):
+        return {}
+    covered = data["coverage"].values[index].mean(axis=0)
+    return {
+        "units": [str(unit) for unit in data["unit"].values],
+        "coverage": {
+            f"{100 * float(level):.0f}": round(float(share), 4)
+            for level, share in zip(data["level"].values, covered, strict=True)
+        },
+        "rms_error_mm": round(1000 * float(data["rms_error"].values[index].mean()), 3),
+        "rms_without_prior_mm": round(1000 * float(data["rms_zero"].values[index].mean()), 3),
+    }
+
+
+def prior_summary(prior: Prior, path: Path, found: xr.Dataset | None = None) -> dict[str, Any]:
+    """Machine-readable account of a prior, and of its test on other pairs where one was made."""
     data = prior.validation
     segments = {}
     for index, segment in enumerate(data["segment"].values):
         model = prior.segments[str(segment)]
-        entry: dict[str, Any] = {
+        segments[str(segment)] = {
             "markers": list(model.markers),
             "time_constant_s": model.time_constant,
             "inflation": model.inflation,
             "stop_reason": model.hierarchy.stop_reason,
+            **_figures(data, index),
         }
-        if data.sizes.get("unit", 0):
-            entry["coverage"] = {
-                f"{100 * float(level):.0f}": round(float(data["coverage"].values[index, :, column].mean()), 4)
-                for column, level in enumerate(data["level"].values)
-            }
-            entry["rms_error_mm"] = round(1000 * float(data["rms_error"].values[index].mean()), 3)
-            entry["rms_without_prior_mm"] = round(1000 * float(data["rms_zero"].values[index].mean()), 3)
-        segments[str(segment)] = entry
+    others = {}
+    if found is not None:
+        others = {str(name): _figures(found, index) for index, name in enumerate(found["segment"].values)}
     return {
         "prior": str(path),
         "digest": prior.digest,
@@ -170,6 +185,7 @@ def prior_summary(prior: Prior, path: Path) -> dict[str, Any]:
         "subjects": list(prior.subjects),
         "left_out": "subject" if bool(data["by_subject"].values[0]) else "trial",
         "segments": segments,
+        "other_pairs": others,
         "notes": list(prior.notes),
         "invented_data": int(prior.invented),
     }

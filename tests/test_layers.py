@@ -20,11 +20,15 @@ ORDER: tuple[str, ...] = (
     "solve",
     "support",
     *("compare", "report"),
-    *("batch", "demo", "cli"),
+    *("batch", "words", "demo", "cli"),
     "__init__",
     "__main__",
 )
-KERNELS = ("se3", "gaussian", "angles", "rigid", "prior/linear", "solve/terms", "solve/frame")
+KERNELS = (
+    *("se3", "gaussian", "angles", "rigid"),
+    *("prior/interface", "prior/linear", "prior/hierarchy", "prior/fitting"),
+    *("solve/terms", "solve/frame", "solve/posterior"),
+)
 NOT_IN_A_KERNEL = {"xarray", "pathlib", "matplotlib", "h5netcdf", "ezc3d", "typer", "rich"}
 
 

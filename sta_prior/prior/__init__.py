@@ -1,6 +1,7 @@
 """Artifact priors: what they hand the solver, the families, learning and validation."""
 
 from sta_prior.prior.base import Binding, Prior
+from sta_prior.prior.examine import examine
 from sta_prior.prior.files import load_prior
 from sta_prior.prior.interface import Artifact, IsotropicArtifact, Moments
 from sta_prior.prior.learning import DEFAULT_FAMILY, FAMILIES, learn
@@ -13,6 +14,7 @@ __all__ = [
     "IsotropicArtifact",
     "Moments",
     "Prior",
+    "examine",
     "learn",
     "load_prior",
 ]

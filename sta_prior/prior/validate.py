@@ -99,6 +99,21 @@ def leave_one_out(model: SegmentModel, frames: list[SegmentFrames]) -> list[Left
     return result
 
 
+def predict_others(model: SegmentModel, frames: list[SegmentFrames]) -> list[LeftOut]:
+    """Predict subjects that the prior has not learned from, one unit a subject.
+
+    Parameters
+    ----------
+    model : of one segment
+    frames : of subjects other than those it learned from
+    """
+    weights = new_subject(model.hierarchy)
+    return [
+        _merge([_predict(model, item, weights, name, True) for item in frames if item.subject == name])
+        for name in sorted({item.subject for item in frames})
+    ]
+
+
 def _merge(parts: list[LeftOut]) -> LeftOut:
     return LeftOut(
         unit=parts[0].unit,
