@@ -67,7 +67,7 @@ def check_rotation(
     ShapeError, RotationError : with the index of the first bad matrix.
     """
     clean = check_shape(rotation, (3, 3), name)
-    missing = np.isnan(clean).all(axis=(-2, -1))
+    missing = np.asarray(np.isnan(clean).all(axis=(-2, -1)))
     gram = np.einsum("...ji,...jk->...ik", clean, clean) - np.eye(3)
     worst = np.abs(gram).max(axis=(-2, -1))
     bad = np.asarray(~missing & ~(worst <= tolerance))
