@@ -5,6 +5,7 @@ Shell: holds the labels. Conventions: docs/conventions.md; variables: docs/files
 
 from __future__ import annotations
 
+import json
 import warnings
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
@@ -220,11 +221,29 @@ def pair_with_report(
             refused.append((trial.subject.id, trial.id, "; ".join(reasons) + ". " + advice))
         else:
             paired.append(result)
+    _note_assumed_accuracy([item.trial for item in paired])
     report = PairingReport(tuple(refused))
     if not paired:
         lines = "; ".join(report.lines())
         raise InputError(message(study.path, f"no trial is left to pair: {lines}"))
     return _dataset(study, paired), report
+
+
+def _note_assumed_accuracy(trials: list[Trial]) -> None:
+    """Say once where the accuracy of the bone truth is assumed, for it shapes what is learned."""
+    assumed = [trial for trial in trials if not trial.bone_sd_declared]
+    if assumed:
+        first = assumed[0]
+        warnings.warn(
+            message(
+                (first.subject.id, first.id),
+                f"bone_sd is not declared here and in {len(assumed) - 1} more trials, taken as "
+                f"{1000 * first.bone_sd_position:g} mm and {np.degrees(first.bone_sd_rotation):g}°",
+                "Declare the accuracy of your bone truth in motion: it is taken out of the artifact.",
+            ),
+            StaPriorWarning,
+            stacklevel=3,
+        )
 
 
 def input_digests(data: xr.Dataset) -> dict[str, str]:
@@ -317,7 +336,12 @@ def _dataset(study: Study, paired: list[_PairedTrial]) -> xr.Dataset:
         "trial_digest": ("trial", [item.trial.digest() for item in paired]),
     }
     data = xr.Dataset(variables, coordinates)
-    data.attrs = {"title": lab.title, "study": study.path.name}
+    covariates = {subject.id: dict(subject.covariates) for subject in subjects if subject.covariates}
+    data.attrs = {
+        "title": lab.title,
+        "study": study.path.name,
+        "covariates": json.dumps(covariates, sort_keys=True),
+    }
     if study.invented:
         data.attrs["invented_data"] = 1
     return data

@@ -160,6 +160,7 @@ class Prior:
         lab = trial.subject.lab
         joint_columns = self._match_joints(lab)
         own_data = self._personal_pairs(trial, personal)
+        self._warn_of_a_stranger(trial)
         reference = trial.subject.reference()
         artifacts: dict[str, Artifact] = {}
         for segment in lab.segments:
@@ -177,6 +178,19 @@ class Prior:
             )
         times, words = self._what_informs(trial, own_data)
         return Binding(artifacts, times, words)
+
+    def _warn_of_a_stranger(self, trial: Trial) -> None:
+        """Say so where a personal prior meets another subject."""
+        if self.is_personal and trial.subject.id not in self.subjects:
+            warnings.warn(
+                message(
+                    (trial.subject.id, trial.id),
+                    f"the prior is personal: it learned from {self.subjects[0]} only",
+                    "Its spread between subjects is assumed, not learned; trust neither mean nor interval.",
+                ),
+                StaPriorWarning,
+                stacklevel=4,
+            )
 
     def _match_joints(self, lab: Lab) -> list[int]:
         """Position in the lab of every joint of the prior."""
@@ -262,10 +276,12 @@ class Prior:
             own += [summarise(item, model.basis, model.time_constant) for item in frames]
         if not own:
             return new_subject(model.hierarchy, model.inflation)
+        # A personal prior's own subject needs no widening for subjects that were not imaged.
+        factor = 1.0 if self.is_personal and subject in self.subjects else model.inflation
         wider = replace(
             hierarchy,
-            subject_features=model.inflation * hierarchy.subject_features,
-            trial_features=model.inflation * hierarchy.trial_features,
+            subject_features=factor * hierarchy.subject_features,
+            trial_features=factor * hierarchy.trial_features,
         )
         key = self._trial_key(trial, own_data)
         if key is None:

@@ -5,6 +5,7 @@ Shell: holds the labels. Conventions: docs/conventions.md.
 
 from __future__ import annotations
 
+import json
 from collections.abc import Sequence
 from dataclasses import replace
 
@@ -17,7 +18,13 @@ from sta_prior.io.netcdf import dataset_digest
 from sta_prior.prior.base import JointLabel, LearnedTrial, Prior, SegmentModel
 from sta_prior.prior.fitting import fit_hierarchy
 from sta_prior.prior.linear import linear_basis, orthonormal
-from sta_prior.prior.statistics import SegmentFrames, estimate_time_constant, segment_frames, summarise
+from sta_prior.prior.statistics import (
+    SegmentFrames,
+    adjacent_joints,
+    estimate_time_constant,
+    segment_frames,
+    summarise,
+)
 from sta_prior.prior.validate import calibrate_inflation, leave_one_out, summarise_validation
 
 FAMILIES = ("linear",)
@@ -88,7 +95,7 @@ def _learn_segment(pairs: xr.Dataset, segment: str, joints: tuple[JointLabel, ..
         raise InputError(
             message(("pairs", segment), "no frame has both a visible marker and all joint angles")
         )
-    adjacent = tuple(i for i, joint in enumerate(joints) if segment in (joint.proximal, joint.distal))
+    adjacent = adjacent_joints(pairs, segment, tuple(dof))
     basis = orthonormal(
         linear_basis(adjacent),
         [item.angles for item in frames],
@@ -160,7 +167,9 @@ def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[st
         left_out = leave_one_out(model, frames)
         model = replace(model, inflation=calibrate_inflation(left_out))
         segments[name] = model
-        figures.append(summarise_validation(name, left_out, model.inflation))
+        # Trials left out of one subject are predicted with that subject's own weights, unwidened.
+        by_subject = bool(left_out) and left_out[0].by_subject
+        figures.append(summarise_validation(name, left_out, model.inflation if by_subject else 1.0))
     trials = tuple(
         LearnedTrial(
             subject=str(chosen["trial_subject"].values[index]),
@@ -183,6 +192,11 @@ def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[st
         notes=_notes(trials),
         invented=bool(chosen.attrs.get("invented_data", 0)),
         pairs_digest=dataset_digest(pairs),
+        covariates={
+            name: values
+            for name, values in json.loads(str(pairs.attrs.get("covariates", "{}"))).items()
+            if name in {trial.subject for trial in trials}
+        },
     )
 
 

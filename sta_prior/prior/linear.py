@@ -66,7 +66,7 @@ class Basis:
             angles[:, term.joint, term.dof] ** term.power - reference[term.joint, term.dof] ** term.power
             for term in self.terms
         ]
-        return np.stack(columns, axis=-1)
+        return np.stack(columns, axis=-1) if columns else np.zeros((angles.shape[0], 0))
 
     def values(self, angles: FloatArray, reference: FloatArray) -> FloatArray:
         """Features at the given angles.

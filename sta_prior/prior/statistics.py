@@ -96,6 +96,16 @@ def gather_angles(pairs: xr.Dataset, name: str, dof: dict[str, tuple[str, ...]])
     )
 
 
+def adjacent_joints(pairs: xr.Dataset, segment: str, joints: tuple[str, ...]) -> tuple[int, ...]:
+    """Positions among the named joints of those that touch a segment."""
+    names = [str(joint) for joint in pairs["joint"].values]
+    ends = [
+        {str(pairs["joint_proximal"].values[at]), str(pairs["joint_distal"].values[at])}
+        for at in (names.index(joint) for joint in joints)
+    ]
+    return tuple(index for index, bones in enumerate(ends) if segment in bones)
+
+
 def segment_frames(
     pairs: xr.Dataset, segment: str, markers: tuple[str, ...], dof: dict[str, tuple[str, ...]]
 ) -> list[SegmentFrames]:
@@ -113,6 +123,7 @@ def segment_frames(
     angles = gather_angles(pairs, "angle", dof)
     references = gather_angles(pairs, "reference_angle", dof)
     subjects = [str(name) for name in pairs["subject_id"].values]
+    touching = adjacent_joints(pairs, segment, tuple(dof))
     names = [str(name) for name in pairs["segment"].values]
     sides = [str(side) for side in pairs["segment_side"].values[:, names.index(segment)]]
     frame_subject, frame_trial = pairs["subject"].values, pairs["trial"].values
@@ -123,8 +134,9 @@ def segment_frames(
         own = (frame_subject == subject) & (frame_trial == trial)
         displacement = pairs["displacement"].values[own][:, columns].copy()
         displacement[:, columns < 0] = np.nan
-        # A displacement without its angles cannot be placed; one without the other is dropped.
-        usable = np.isfinite(angles[own]).all(axis=(1, 2)) & np.isfinite(displacement).any(axis=(1, 2))
+        # A displacement without the angles that drive it cannot be placed and is dropped.
+        known = np.isfinite(angles[own][:, list(touching)]).all(axis=(1, 2))
+        usable = known & np.isfinite(displacement).any(axis=(1, 2))
         position = displacement + pairs["reference"].values[at][columns]
         if sides[at] == "left":
             displacement[..., 2] *= -1.0

@@ -147,11 +147,11 @@ def calibrate_inflation(left_out: list[LeftOut]) -> float:
 
     At least few_subjects_factor; more where left-out subjects are still not covered: the mean over
     subjects of the coverage at 90 % is brought to 0.90. The covariances behind it are fitted by
-    nine subjects as by two, and the factor says which. With one subject there is nothing left out:
-    1, for the prior is that subject's own.
+    nine subjects as by two, and the factor says which. With one subject there is nobody to leave out:
+    the largest, in force for anyone else; the subject's own weights take none.
     """
     if not left_out or not left_out[0].by_subject:
-        return 1.0
+        return few_subjects_factor(1)
     least = few_subjects_factor(len(left_out))
     for factor in np.linspace(least, LARGEST_INFLATION, 61):
         if np.mean([coverage(item, 0.90, float(factor)) for item in left_out]) >= 0.90:
