@@ -4,8 +4,9 @@ Kernel: arrays in, arrays out. Conventions: docs/conventions.md.
 
 Artifact changes with posture and is zero in the reference posture. Another placement of the
 markers, another order of labels or a bone frame of another session are there in every posture:
-hence distances are judged in the frame of the trial that fits best, and the offset of the
-cluster in the postures nearest to the reference.
+hence distances are judged in the tenth of the trial that fits best, and the offset of the
+cluster in the postures nearest to the reference. The single best frame would not do: among hundreds
+of frames one with a stray marker fits by chance.
 """
 
 from __future__ import annotations
@@ -18,9 +19,9 @@ from sta_prior.checks import FloatArray
 from sta_prior.rigid import fit_rigid
 from sta_prior.se3 import inverse, rotation_log
 
-DISTANCE_LIMIT = 0.005
-"""RMS change of marker distances that even the best frame exceeds, m. Real trials that belong
-stay below 4 mm, those that do not begin at 7 mm (seen on open paired and skin-only data)."""
+DISTANCE_LIMIT = 0.006
+"""RMS change of marker distances that nine tenths of the frames exceed, m. Real trials that belong
+stay below 5.4 mm, those that do not begin at 7 mm (seen on open paired and skin-only data)."""
 
 OFFSET_LIMIT = 0.030
 """Offset of an intact cluster from the bone, m: 1.7 times the rigid artifact of about 17–18 mm
@@ -29,6 +30,7 @@ reported for thigh and shank (see docs/literature.md)."""
 ROTATION_LIMIT = np.radians(20.0)
 """Rotation of an intact cluster against the bone, rad: twice the largest rigid part reported."""
 
+BEST_SHARE = 0.1
 NEAREST_SHARE = 0.1
 NEAREST_COUNT = 5
 
@@ -37,9 +39,9 @@ NEAREST_COUNT = 5
 class Belonging:
     """How well one segment of a trial fits its reference.
 
-    distance_misfit: m, RMS change of marker distances in the best frame; offset: m and rotation:
-    rad, of the cluster against the bone in the postures nearest to the reference (NaN without
-    bone truth).
+    distance_misfit: m, RMS change of marker distances, which nine tenths of the frames exceed;
+    offset: m and rotation: rad, of the cluster against the bone in the postures nearest to the
+    reference (NaN without bone truth).
     """
 
     distance_misfit: float
@@ -52,7 +54,7 @@ class Belonging:
         if self.distance_misfit > DISTANCE_LIMIT:
             words.append(
                 f"{segment} marker distances differ from the reference by "
-                f"{1000 * self.distance_misfit:.1f} mm RMS even in the best frame, "
+                f"{1000 * self.distance_misfit:.1f} mm RMS even in the best tenth of the frames, "
                 f"expected at most {1000 * DISTANCE_LIMIT:.0f} mm"
             )
         elif self.offset > OFFSET_LIMIT or self.rotation > ROTATION_LIMIT:
@@ -65,7 +67,7 @@ class Belonging:
 
 
 def distance_misfit(points: FloatArray, reference: FloatArray) -> float:
-    """RMS change of the distances between markers in the frame where it is least.
+    """RMS change of the distances between markers, the value that nine tenths of the frames exceed.
 
     Parameters
     ----------
@@ -81,12 +83,13 @@ def distance_misfit(points: FloatArray, reference: FloatArray) -> float:
     change = now - np.linalg.norm(reference[first] - reference[second], axis=-1)
     seen = np.isfinite(change)
     enough = seen.sum(axis=1) >= 3
-    # A frame counts as best only if it shows about as many markers as the trial ever does.
+    # A frame counts only if it shows about as many markers as the trial ever does.
     enough &= seen.sum(axis=1) >= 0.8 * seen.sum(axis=1).max(initial=0)
     if not enough.any():
         return float("nan")
     squared = np.where(seen, change, 0.0)[enough] ** 2
-    return float(np.sqrt((squared.sum(axis=1) / seen[enough].sum(axis=1)).min()))
+    mean = np.sort(squared.sum(axis=1) / seen[enough].sum(axis=1))
+    return float(np.sqrt(mean[max(int(BEST_SHARE * mean.size), 1) - 1]))
 
 
 def check_belonging(

@@ -190,7 +190,7 @@ def _reference_notes(trial: Trial, points: FloatArray, reference: Reference) -> 
         if misfit > DISTANCE_LIMIT:
             words = (
                 f"{segment.name} marker distances differ from the reference by {1000 * misfit:.1f} mm RMS "
-                f"even in the best frame, expected at most {1000 * DISTANCE_LIMIT:.0f} mm: "
+                f"even in the best tenth of the frames, expected at most {1000 * DISTANCE_LIMIT:.0f} mm: "
                 "the reference does not belong to this trial"
             )
             notes.append(words)
