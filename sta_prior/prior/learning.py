@@ -8,10 +8,12 @@ from __future__ import annotations
 import json
 from collections.abc import Sequence
 from dataclasses import replace
+from typing import cast
 
 import numpy as np
 import xarray as xr
 
+from sta_prior.angles import JointConvention, JointKind
 from sta_prior.checks import FloatArray, nearest
 from sta_prior.errors import InputError, message
 from sta_prior.io.netcdf import dataset_digest
@@ -32,21 +34,18 @@ DEFAULT_FAMILY = "linear"
 
 
 def joint_labels(pairs: xr.Dataset) -> tuple[JointLabel, ...]:
-    """Joints of paired data with their degrees of freedom."""
-    names = [str(name) for name in pairs["dof"].values]
-    known = np.isfinite(pairs["reference_angle"].values).any(axis=0) | np.isfinite(pairs["angle"].values).any(
-        axis=0
-    )
+    """Joints of paired data with their degrees of freedom, in the order of each joint's convention."""
     labels = []
     for index, joint in enumerate(pairs["joint"].values):
-        dof = tuple(name for column, name in enumerate(names) if known[index, column])
+        kind = str(pairs["joint_kind"].values[index])
         labels.append(
             JointLabel(
                 name=str(joint),
-                kind=str(pairs["joint_kind"].values[index]),
+                kind=kind,
                 proximal=str(pairs["joint_proximal"].values[index]),
                 distal=str(pairs["joint_distal"].values[index]),
-                dof=dof,
+                # The columns of the pairs stand in the order of the whole lab, not of this joint.
+                dof=JointConvention(cast(JointKind, kind), "right").dof,
             )
         )
     return tuple(labels)
