@@ -14,6 +14,7 @@ import numpy as np
 import xarray as xr
 
 from sta_prior.checks import BoolArray, FloatArray
+from sta_prior.errors import MismatchError, message
 from sta_prior.prior.hierarchy import TrialStatistics, frame_weights, make_block
 from sta_prior.prior.linear import Basis
 from sta_prior.rigid import marker_jacobian
@@ -86,13 +87,27 @@ def bone_noise(points_bone: FloatArray, rotation_sd: float, position_sd: float) 
 
 
 def gather_angles(pairs: xr.Dataset, name: str, dof: dict[str, tuple[str, ...]]) -> FloatArray:
-    """Angles of a variable with dims (..., joint, dof) as (..., J, 3) in each joint's own order."""
+    """Angles of a variable with dims (..., joint, dof) as (..., J, 3): joints and angles in the order of dof.
+
+    Raises
+    ------
+    MismatchError : a joint or one of its angles is not in the paired data.
+    """
     values = pairs[name].values
-    columns = list(pairs["dof"].values)
+    columns = [str(column) for column in pairs["dof"].values]
     joints = [str(joint) for joint in pairs["joint"].values]
+    for joint, wanted in dof.items():
+        if joint not in joints or not set(wanted) <= set(columns):
+            raise MismatchError(
+                message(
+                    ("pairs", f"joint {joint}"),
+                    f"expected it with {', '.join(wanted)}, the pairs have {', '.join(joints)} "
+                    f"with {', '.join(columns)}",
+                    "Pair with a lab file that has it.",
+                )
+            )
     return np.stack(
-        [values[..., index, [columns.index(d) for d in dof[joint]]] for index, joint in enumerate(joints)],
-        axis=-2,
+        [values[..., joints.index(joint), [columns.index(d) for d in dof[joint]]] for joint in dof], axis=-2
     )
 
 
@@ -116,7 +131,11 @@ def segment_frames(
     pairs : paired data
     segment : its name
     markers : the outputs' markers in order; a marker that the pairs lack is hidden throughout
-    dof : names of the three degrees of freedom of every joint
+    dof : names of the three degrees of freedom of every joint; their order is that of the angles
+
+    Returns
+    -------
+    One item for each trial with usable frames, these in order of time; none where the pairs lack the segment.
     """
     labels = [str(marker) for marker in pairs["marker"].values]
     columns = np.array([labels.index(marker) if marker in labels else -1 for marker in markers])
@@ -125,17 +144,23 @@ def segment_frames(
     subjects = [str(name) for name in pairs["subject_id"].values]
     touching = adjacent_joints(pairs, segment, tuple(dof))
     names = [str(name) for name in pairs["segment"].values]
+    if segment not in names:
+        return []
     sides = [str(side) for side in pairs["segment_side"].values[:, names.index(segment)]]
     frame_subject, frame_trial = pairs["subject"].values, pairs["trial"].values
+    frame_time = pairs["time"].values
     result = []
     for index in range(pairs.sizes["trial"]):
         subject, trial = str(pairs["trial_subject"].values[index]), str(pairs["trial_id"].values[index])
         at = subjects.index(subject)
-        own = (frame_subject == subject) & (frame_trial == trial)
+        own = np.flatnonzero((frame_subject == subject) & (frame_trial == trial))
+        # Windows are told by steps in time, whatever order the frames stand in.
+        own = own[np.argsort(frame_time[own], kind="stable")]
         displacement = pairs["displacement"].values[own][:, columns].copy()
         displacement[:, columns < 0] = np.nan
         # A displacement without the angles that drive it cannot be placed and is dropped.
-        known = np.isfinite(angles[own][:, list(touching)]).all(axis=(1, 2))
+        both = angles[own] + references[at]
+        known = np.isfinite(both[:, list(touching)]).all(axis=(1, 2))
         usable = known & np.isfinite(displacement).any(axis=(1, 2))
         position = displacement + pairs["reference"].values[at][columns]
         if sides[at] == "left":
@@ -156,7 +181,7 @@ def segment_frames(
                     reference_angles=references[at],
                     displacement=displacement.reshape(int(usable.sum()), -1),
                     noise=noise,
-                    time=pairs["time"].values[own][usable],
+                    time=frame_time[own][usable],
                 )
             )
     return result
