@@ -2,9 +2,10 @@
 
 Shell over arrays. Conventions: docs/conventions.md.
 
-Every subject in turn (with one subject: every trial, labelled so) is left out; the population is
-conditioned on the others with the learned covariances, and the left-out displacement is predicted
-frame by frame.
+Every subject in turn is left out; population and covariances are fitted to the others, and the
+left-out displacement is predicted frame by frame. With one subject every trial is left out instead,
+labelled so, and predicted from its others with the learned covariances. The mixing of the features and
+the time constant, a few numbers over all frames, are kept.
 
 References
 ----------
@@ -13,7 +14,7 @@ Gneiting & Raftery (2007), JASA 102, 359–378 (CRPS).
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import xarray as xr
@@ -82,7 +83,8 @@ def leave_one_out(model: SegmentModel, frames: list[SegmentFrames]) -> list[Left
             others = [trial for trial in trials if trial.subject != name]
             hierarchy = fit_hierarchy(others, fixed, model.hierarchy, _REFIT_ITERATIONS)
             weights = new_subject(hierarchy)
-            parts = [_predict(model, item, weights, name, True) for item in frames if item.subject == name]
+            refitted = replace(model, hierarchy=hierarchy)
+            parts = [_predict(refitted, item, weights, name, True) for item in frames if item.subject == name]
             result.append(_merge(parts))
         return result
     if len(frames) < 2:
