@@ -63,4 +63,4 @@ def examine(prior: Prior, pairs: xr.Dataset) -> xr.Dataset:
         dof = {joint.name: joint.dof for joint in prior.joints}
         left_out = predict_others(model, segment_frames(chosen, name, model.markers, dof))
         figures.append(summarise_validation(name, left_out, model.inflation))
-    return xr.concat(figures, dim="segment")
+    return xr.concat(figures, dim="segment", join="outer")

@@ -187,7 +187,7 @@ def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[st
         joints=joints,
         segments=segments,
         trials=trials,
-        validation=xr.concat(figures, dim="segment"),
+        validation=xr.concat(figures, dim="segment", join="outer"),
         notes=_notes(trials),
         invented=bool(chosen.attrs.get("invented_data", 0)),
         pairs_digest=dataset_digest(pairs),
