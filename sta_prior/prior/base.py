@@ -213,6 +213,16 @@ class Prior:
                         f"prior expects kind {joint.kind}, lab has {lab.joints[index].convention.kind}",
                     )
                 )
+            ends = (lab.joints[index].proximal, lab.joints[index].distal)
+            if ends != (joint.proximal, joint.distal):
+                raise MismatchError(
+                    message(
+                        (lab.path, f"joint.{joint.name}"),
+                        f"prior expects {joint.proximal} as proximal and {joint.distal} as distal segment, "
+                        f"lab has {ends[0]} and {ends[1]}",
+                        "Name the segments as in the prior.",
+                    )
+                )
             columns.append(index)
         return columns
 
