@@ -283,7 +283,12 @@ class Prior:
         if own_data is not None and own_data.sizes["trial"]:
             dof = {joint.name: joint.dof for joint in self.joints}
             frames = segment_frames(own_data, model.name, model.markers, dof)
-            own += [summarise(item, model.basis, model.time_constant) for item in frames]
+            # Another recording may bear the name of one that the prior learned from: the digest tells.
+            names = self._digests_by_name(own_data)
+            own += [
+                summarise(replace(item, trial=names[item.trial]), model.basis, model.time_constant)
+                for item in frames
+            ]
         if not own:
             return new_subject(model.hierarchy, model.inflation)
         # A personal prior's own subject needs no widening for subjects that were not imaged.
@@ -305,11 +310,15 @@ class Prior:
         for item in self.trials:
             if item.subject == trial.subject.id and item.digest == digest:
                 return item.trial
-        if own_data is not None:
-            for index, other in enumerate(own_data["trial_digest"].values):
-                if str(other) == digest:
-                    return str(own_data["trial_id"].values[index])
+        if own_data is not None and digest in self._digests_by_name(own_data).values():
+            return digest
         return None
+
+    @staticmethod
+    def _digests_by_name(own_data: xr.Dataset) -> dict[str, str]:
+        """Digest of the skin file of each of a subject's own trials."""
+        rows = zip(own_data["trial_id"].values, own_data["trial_digest"].values, strict=True)
+        return {str(name): str(digest) for name, digest in rows}
 
     def _what_informs(self, trial: Trial, own_data: xr.Dataset | None) -> tuple[FloatArray, str]:
         subject, digest = trial.subject.id, trial.digest()
