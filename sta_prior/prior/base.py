@@ -258,11 +258,12 @@ class Prior:
                 message(
                     (trial.subject.id, trial.id),
                     "the personal pairs hold no frames of this subject",
-                    "Solved with the population prior.",
+                    "Solved with the prior alone.",
                 ),
                 StaPriorWarning,
                 stacklevel=3,
             )
+            return None
         known = {item.digest for item in self.trials}
         new = [
             index
