@@ -169,6 +169,7 @@ def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[st
         # Trials left out of one subject are predicted with that subject's own weights, unwidened.
         by_subject = bool(left_out) and left_out[0].by_subject
         figures.append(summarise_validation(name, left_out, model.inflation if by_subject else 1.0))
+    used = {(item.subject, item.trial) for model in segments.values() for item in model.trials}
     trials = tuple(
         LearnedTrial(
             subject=str(chosen["trial_subject"].values[index]),
@@ -181,6 +182,7 @@ def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[st
             ],
         )
         for index in range(chosen.sizes["trial"])
+        if (str(chosen["trial_subject"].values[index]), str(chosen["trial_id"].values[index])) in used
     )
     return Prior(
         family=family,
