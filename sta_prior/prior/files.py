@@ -163,7 +163,7 @@ def load_prior(path: str | Path) -> Prior:
     data = read_dataset(place, "prior")
     try:
         return _from_dataset(data)
-    except (KeyError, ValueError, IndexError) as error:
+    except (KeyError, ValueError, IndexError, TypeError, AttributeError) as error:
         raise InputError(
             message(place, f"not a whole prior file ({error})", "Learn the prior again.")
         ) from error
