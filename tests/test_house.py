@@ -22,6 +22,8 @@ TOP_LEVEL = {
 FORBIDDEN_MODULES = {"pickle", "cloudpickle", "dill", "shelve", "marshal"}
 FORBIDDEN_CALLS = {"eval", "exec", "compile"}
 LONGEST_FILE = 400
+# The name right before a year in brackets: the last author, or the first of "et al.".
+CITATION = re.compile(r"([A-Z][\w'’-]+)(?: et al\.)?,? \(((?:19|20)\d\d)\)")
 # A path that exists on one machine only. Web addresses and "/path/to/…" are no such path.
 MACHINE_PATH = re.compile(r"(?<![\w./:])(/(?:work|root|home|Users|opt|mnt|srv)/\w|[A-Z]:\\\\?\w)")
 DOI = re.compile(r"\b10\.\d{4,9}/[^\s,;`\"'|\]]+")
@@ -170,6 +172,17 @@ def test_every_doi_in_the_code_stands_in_the_literature_page() -> None:
             for match in DOI.findall(path.read_text(encoding="utf-8"))
         )
         if doi.lower() not in page
+    }
+    assert missing == set()
+
+
+def test_every_author_cited_in_the_code_stands_in_the_literature_page() -> None:
+    lines = (ROOT / "docs" / "literature.md").read_text(encoding="utf-8").splitlines()
+    missing = {
+        f"{relative(path)}: {name} ({year})"
+        for path in SOURCES
+        for name, year in CITATION.findall(" ".join(path.read_text(encoding="utf-8").split()))
+        if not any(name in line and year in line for line in lines)
     }
     assert missing == set()
 
