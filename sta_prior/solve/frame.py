@@ -81,7 +81,9 @@ def _iterate(
         step = -np.linalg.solve(system.normal + anchor, system.gradient[..., None])[..., 0]
         length = np.abs(step / limit).max(axis=1)
         # A step that does not shrink means that the covariance, which follows the angles, swings.
-        damping[active] = np.where(length > 0.9 * before[active], 0.5 * damping[active], damping[active])
+        # A far start, cut to the limit again and again, shrinks slowly too and must not be damped.
+        swings = (length > 0.9 * before[active]) & (length < 1.0)
+        damping[active] = np.where(swings, 0.5 * damping[active], damping[active])
         damping[active] = np.maximum(damping[active], 0.1)
         before[active] = length
         step *= (damping[active] / np.maximum(length, 1.0))[:, None]

@@ -161,9 +161,11 @@ def _pooled_spread(fit: RigidFit) -> float:
     return max(pooled, SMALLEST_SPREAD)
 
 
-def _with_scatter(segment: SegmentProblem, fit: RigidFit) -> SegmentProblem:
+def _with_scatter(segment: SegmentProblem, fit: RigidFit, alone: bool = False) -> SegmentProblem:
+    """The segment with isotropic artifact; alone, markers that fix no pose by themselves are left out."""
     artifact = IsotropicArtifact(3 * segment.reference.shape[0], _pooled_spread(fit))
-    return SegmentProblem(segment.index, segment.points, segment.reference, artifact)
+    points = np.where(fit.determined[:, None, None], segment.points, np.nan) if alone else segment.points
+    return SegmentProblem(segment.index, points, segment.reference, artifact)
 
 
 def _rigid_solution(
@@ -174,7 +176,7 @@ def _rigid_solution(
         JointProblem(j.proximal, j.distal, j.convention, j.centre_proximal, j.centre_distal, np.inf)
         for j in joints
     ]
-    scattered = [_with_scatter(segment, fit) for segment, fit in zip(segments, fits, strict=True)]
+    scattered = [_with_scatter(segment, fit, alone=True) for segment, fit in zip(segments, fits, strict=True)]
     # One solve that starts at the optimum gives covariance, angles and travel; the poses stay as fitted.
     result = solve_frames(scattered, free, bridge(poses), marker_sd=0.0)
     return replace(result, poses=poses, determined=np.isfinite(poses[..., 0, 0]), stop_reason="closed form")
