@@ -23,7 +23,7 @@ from sta_prior import se3
 from sta_prior.checks import BoolArray, FloatArray, IntArray
 from sta_prior.rigid import RigidFit, fit_rigid
 from sta_prior.solve.posterior import FrameSolution, describe_posterior, join
-from sta_prior.solve.terms import ANCHOR, JointProblem, SegmentProblem, System, assemble
+from sta_prior.solve.terms import JointProblem, SegmentProblem, System, assemble
 
 MARKER_SD = 0.0005
 """Instrument noise of a marker, m (common practice for optical systems, no source)."""
@@ -32,6 +32,12 @@ TOLERANCE = 1e-8
 MAXIMUM_ITERATIONS = 60
 _CHUNK = 1000
 _LARGEST_STEP = np.array([0.2, 0.2, 0.2, 0.05, 0.05, 0.05])
+_RELAXATION = (0.1, 5.0)
+
+# Levenberg's term of the iteration, 1/rad² and 1/m²: a tenth of the least information with which a
+# pose counts as determined. It keeps a direction that is all but open from wandering, and with it
+# the frame's other segments from being called unsettled.
+_HOLD = np.repeat([0.3, 1.0], 3)
 
 
 def first_look(segments: list[SegmentProblem], count: int) -> tuple[FloatArray, list[RigidFit]]:
@@ -65,33 +71,57 @@ def bridge(poses: FloatArray) -> FloatArray:
 def _iterate(
     segments: list[SegmentProblem], joints: list[JointProblem], poses: FloatArray, marker_sd: float
 ) -> tuple[FloatArray, System, int, BoolArray]:
-    """Gauss-Newton on all frames at once; returns poses, last system, iterations, converged frames."""
+    """Gauss-Newton on all frames at once; returns poses, last system, iterations, converged frames.
+
+    Three guards, each frame by itself; none moves the optimum. A step is cut to _LARGEST_STEP. Weakly
+    known directions are held (_HOLD). And since the covariance follows the angles, steps can swing or
+    crawl: _relaxation lengthens or shortens them.
+    """
     frames, count = poses.shape[:2]
-    anchor = ANCHOR * np.eye(6 * count)
-    damping = np.ones(frames)
-    before = np.full(frames, np.inf)
+    hold = np.diag(np.tile(_HOLD, count))
     limit = np.tile(_LARGEST_STEP, count)
     moving = np.ones(frames, dtype=bool)
+    before = np.full((frames, 6 * count), np.nan)
+    made = np.full((frames, 6 * count), np.nan)
     iterations = 0
     while iterations < MAXIMUM_ITERATIONS:
         iterations += 1
         active = np.flatnonzero(moving)
         part = [_take(segment, active) for segment in segments]
         system = assemble(part, joints, poses[active], marker_sd)
-        step = -np.linalg.solve(system.normal + anchor, system.gradient[..., None])[..., 0]
-        length = np.abs(step / limit).max(axis=1)
-        # A step that does not shrink means that the covariance, which follows the angles, swings.
-        # A far start, cut to the limit again and again, shrinks slowly too and must not be damped.
-        swings = (length > 0.9 * before[active]) & (length < 1.0)
-        damping[active] = np.where(swings, 0.5 * damping[active], damping[active])
-        damping[active] = np.maximum(damping[active], 0.1)
-        before[active] = length
-        step *= (damping[active] / np.maximum(length, 1.0))[:, None]
-        poses[active] = poses[active] @ se3.exp(step.reshape(active.size, count, 6))
-        moving[active] = np.abs(step).max(axis=1) > TOLERANCE
+        step = -np.linalg.solve(system.normal + hold, system.gradient[..., None])[..., 0] / limit
+        longest = np.maximum(np.abs(step).max(axis=1), 1e-300)
+        factor = np.minimum(_relaxation(made[active], before[active] - step), 1.0 / longest)
+        before[active], made[active] = step, factor[:, None] * step
+        poses[active] = poses[active] @ se3.exp((made[active] * limit).reshape(active.size, count, 6))
+        moving[active] = ~(np.abs(step * limit).max(axis=1) <= TOLERANCE)
         if not moving.any():
             break
     return poses, assemble(segments, joints, poses, marker_sd), iterations, ~moving
+
+
+def _relaxation(made: FloatArray, change: FloatArray) -> FloatArray:
+    """Factor on the next step of each frame, from the last one: Aitken's, for vectors.
+
+    Parameters
+    ----------
+    made : shape (F, n), last move; NaN before the first
+    change : shape (F, n), by how much the move shrank the full step
+
+    Returns
+    -------
+    shape (F,): below 1 where steps swing, above 1 where they crawl, 1 where nothing can be said:
+    at first, and where the step grows, on the way out of a point that does not hold.
+
+    References
+    ----------
+    Irons & Tuck (1969), Int J Numer Methods Eng 1, 275–277 (from memory).
+    """
+    squared = np.einsum("fn,fn->f", change, change)
+    shrinking = np.einsum("fn,fn->f", made, change)
+    known = np.isfinite(shrinking) & (shrinking > 0.0)
+    factor = np.where(known, shrinking, 1.0) / np.where(known, squared, 1.0)
+    return np.clip(factor, *_RELAXATION)
 
 
 def _take(segment: SegmentProblem, frames: IntArray) -> SegmentProblem:

@@ -24,8 +24,7 @@ BALL_JOINT_SD = 1e-5
 """A joint whose centre must not travel is held to this, m: far below instrument noise."""
 
 ANCHOR = 1e-2
-"""Precision (SD 10 rad, 10 m, about the current pose) that gives the normal matrix of an
-undetermined frame an inverse; a step is still a descent step and the optimum is unchanged."""
+"""Precision (SD 10 rad, 10 m) that gives the normal matrix of an undetermined frame an inverse."""
 
 
 @dataclass(frozen=True)
