@@ -52,19 +52,50 @@ def first_look(segments: list[SegmentProblem], count: int) -> tuple[FloatArray, 
     return poses, fits
 
 
-def bridge(poses: FloatArray) -> FloatArray:
-    """Fill missing poses from the nearest frame that has one: a start for the iteration only."""
+def bridge(poses: FloatArray, joints: list[JointProblem]) -> FloatArray:
+    """Fill missing poses: a start for the iteration only, on which the optimum does not depend.
+
+    Parameters
+    ----------
+    poses : shape (F, S, 4, 4), lab ← bone, NaN where missing
+    joints : all joints
+
+    Returns
+    -------
+    shape (F, S, 4, 4), finite. A bone beside a known one takes its pose relative to it from the
+    nearest frame that shows both; where none does, the joint centres meet in the zero posture.
+    Any other takes its lab pose from the nearest frame.
+    """
     filled = poses.copy()
-    for index in range(poses.shape[1]):
-        known = np.flatnonzero(np.isfinite(poses[:, index, 0, 0]))
-        if known.size == 0:
-            filled[:, index] = np.eye(4)
-            continue
-        frames = np.arange(poses.shape[0])
-        right = np.clip(np.searchsorted(known, frames), 0, known.size - 1)
-        left = np.clip(right - 1, 0, known.size - 1)
-        nearer_left = np.abs(frames - known[left]) <= np.abs(known[right] - frames)
-        filled[:, index] = poses[known[np.where(nearer_left, left, right)], index]
+    # From a known bone outwards: every round reaches at least one joint further.
+    for _ in joints:
+        for joint in joints:
+            zero_posture = np.eye(4)
+            if joint.has_centre:
+                zero_posture[:3, 3] = joint.centre_proximal - joint.centre_distal
+            both = se3.inverse(poses[:, joint.proximal]) @ poses[:, joint.distal]
+            relative = _from_nearest_frame(both, zero_posture)
+            for known, missing, across in (
+                (joint.proximal, joint.distal, relative),
+                (joint.distal, joint.proximal, se3.inverse(relative)),
+            ):
+                gap = np.isfinite(filled[:, known, 0, 0]) & np.isnan(filled[:, missing, 0, 0])
+                filled[gap, missing] = filled[gap, known] @ across[gap]
+    return np.stack(
+        [_from_nearest_frame(filled[:, index], np.eye(4)) for index in range(poses.shape[1])], axis=1
+    )
+
+
+def _from_nearest_frame(poses: FloatArray, nothing: FloatArray) -> FloatArray:
+    """Fill missing poses, (F, 4, 4), from the nearest frame that has one; nothing where none has."""
+    known = np.flatnonzero(np.isfinite(poses[:, 0, 0]))
+    if known.size == 0:
+        return np.broadcast_to(nothing, poses.shape).copy()
+    frames = np.arange(poses.shape[0])
+    right = np.clip(np.searchsorted(known, frames), 0, known.size - 1)
+    left = np.clip(right - 1, 0, known.size - 1)
+    nearer_left = np.abs(frames - known[left]) <= np.abs(known[right] - frames)
+    filled: FloatArray = poses[known[np.where(nearer_left, left, right)]]
     return filled
 
 

@@ -97,7 +97,7 @@ def solve(
     else:
         if estimator == "linked":
             segments = [_with_scatter(segment, fit) for segment, fit in zip(segments, fits, strict=True)]
-        result = solve_frames(segments, joints, bridge(rigid_poses))
+        result = solve_frames(segments, joints, bridge(rigid_poses, joints))
     data = _dataset(trial, skin, result, rigid_poses, estimator)
     _mark_informed(data, binding)
     data.attrs.update(
@@ -178,7 +178,7 @@ def _rigid_solution(
     ]
     scattered = [_with_scatter(segment, fit, alone=True) for segment, fit in zip(segments, fits, strict=True)]
     # One solve that starts at the optimum gives covariance, angles and travel; the poses stay as fitted.
-    result = solve_frames(scattered, free, bridge(poses), marker_sd=0.0)
+    result = solve_frames(scattered, free, bridge(poses, free), marker_sd=0.0)
     return replace(result, poses=poses, determined=np.isfinite(poses[..., 0, 0]), stop_reason="closed form")
 
 
