@@ -18,6 +18,9 @@ SOURCES = ("markers", "artifact_prior", "joint", "motion")
 # A pose is reported as not determined when its SD in some direction exceeds these: rad, m.
 _UNDETERMINED = np.array([0.6, 0.6, 0.6, 0.3, 0.3, 0.3])
 
+# Part of the largest information below which the markers say nothing about a direction of the pose.
+_OPEN_DIRECTION = 1e-8
+
 
 @dataclass(frozen=True)
 class FrameSolution:
@@ -102,15 +105,24 @@ def _shares(term: Linearised, covariance: FloatArray) -> tuple[FloatArray, Float
 
 
 def _conflict(term: Linearised, index: int, determined: BoolArray) -> tuple[FloatArray, FloatArray]:
-    """Whitened squared deformation that no pose of the segment explains, and its freedom."""
+    """Whitened squared deformation that no pose of the segment explains, and its freedom.
+
+    Freedom is 3m − 6 for m markers; markers on a line leave one direction of the pose untouched and
+    one more of freedom, hence the rank.
+    """
     own = term.jacobian[:, :, 6 * index : 6 * index + 6]
     whitened = term.precision @ own
-    freedom = np.maximum(term.seen.sum(axis=1) - 6, 0).astype(np.float64)
-    enough = (freedom > 0) & determined
-    inner = np.where(enough[:, None, None], np.swapaxes(own, 1, 2) @ whitened, np.eye(6))
-    pulled = np.einsum("fnx,fn->fx", whitened, term.residual)
-    explained = np.einsum("fx,fx->f", pulled, np.linalg.solve(inner, pulled[..., None])[..., 0])
+    inner = np.swapaxes(own, 1, 2) @ whitened
+    scale = np.sqrt(np.einsum("fxx->fx", inner))
+    scale = np.where(scale > 0.0, scale, 1.0)
+    information, directions = np.linalg.eigh(inner / (scale[:, :, None] * scale[:, None, :]))
+    told = information > _OPEN_DIRECTION
+    pulled = np.einsum("fnx,fn->fx", whitened, term.residual) / scale
+    along = np.einsum("fxd,fx->fd", directions, pulled)
+    explained = np.where(told, along**2 / np.where(told, information, 1.0), 0.0).sum(axis=1)
     whole = np.einsum("fn,fn->f", np.einsum("fnm,fm->fn", term.precision, term.residual), term.residual)
+    freedom = (term.seen.sum(axis=1) - told.sum(axis=1)).astype(np.float64)
+    enough = (freedom > 0) & determined
     return np.where(enough, np.maximum(whole - explained, 0.0), np.nan), freedom
 
 
