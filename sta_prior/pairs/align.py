@@ -39,13 +39,12 @@ def skin_at(skin_time: FloatArray, points: FloatArray, bone_time: FloatArray) ->
     left = np.maximum(right - 1, 0)
     span = np.where(right > left, skin_time[right] - skin_time[left], 1.0)
     share = np.clip((bone_time - skin_time[left]) / span, 0.0, 1.0)
-    # Interpolating over a hole in the frames themselves would cross a gap.
-    share = np.where(span > 1.5 * period, np.where(share < 0.5, 0.0, 1.0), share)
     near_left, near_right = share * span <= slack, (1.0 - share) * span <= slack
     blend = share[:, None, None]
     mixed = (1.0 - blend) * points[left] + blend * points[right]
     mixed = np.where(near_left[:, None, None], points[left], mixed)
     mixed = np.where(near_right[:, None, None], points[right], mixed)
+    # Frames may be missing from the file itself: no interpolation across that either.
     hole = (span > 1.5 * period) & ~near_left & ~near_right
     positions = np.where((inside & ~hole)[:, None, None], mixed, np.nan)
     return positions, inside
