@@ -6,22 +6,19 @@ Exit status: 0 all done; 2 bad input, nothing written; 3 some trials failed, the
 
 from __future__ import annotations
 
-import json
 import os
 import sys
-import warnings
-from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from io import TextIOWrapper
 from pathlib import Path
-from typing import Annotated, Any
+from typing import Annotated
 
 import typer
 from rich.console import Console
-from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeRemainingColumn
 
 from sta_prior import words
-from sta_prior.errors import StaPriorError, StaPriorWarning
+from sta_prior.errors import StaPriorError, message
 from sta_prior.prior import DEFAULT_FAMILY, FAMILIES
+from sta_prior.screen import Screen, check_target, warnings_as_notes
 from sta_prior.solve import DEFAULT_ESTIMATOR, ESTIMATORS
 
 app = typer.Typer(
@@ -42,64 +39,9 @@ Subjects = Annotated[str, typer.Option("--subjects", metavar="ID,…", help="Onl
 Trials = Annotated[str, typer.Option("--trials", metavar="ID,…", help="Only these trials.")]
 
 
-class Screen:
-    """What a command prints, and where: text to stdout, or JSON alone there and all else to stderr."""
-
-    def __init__(self, quiet: bool, as_json: bool) -> None:
-        self.quiet, self.as_json = quiet, as_json
-        self.out = Console(stderr=as_json, highlight=False, soft_wrap=True)
-        self.err = Console(stderr=True, highlight=False, soft_wrap=True)
-
-    def say(self, *items: Any) -> None:
-        """Print lines or tables unless quiet."""
-        if not self.quiet:
-            for item in items:
-                self.out.print(item, markup=False)
-
-    def note(self, text: str) -> None:
-        """Print a line on stderr unless quiet."""
-        if not self.quiet:
-            self.err.print(text, markup=False)
-
-    def finish(self, summary: dict[str, Any], *lines: Any) -> None:
-        """End a command: the summary as JSON where asked for, the lines otherwise."""
-        if self.as_json:
-            sys.stdout.write(json.dumps(summary, ensure_ascii=False, indent=1) + "\n")
-        else:
-            self.say(*lines)
-
-    @contextmanager
-    def bar(self, total: int, what: str) -> Iterator[Callable[[], None]]:
-        """Progress bar on stderr; advances at each call."""
-        if self.quiet or self.as_json or not self.err.is_terminal:
-            yield lambda: None
-            return
-        columns = (TextColumn(what), BarColumn(), MofNCompleteColumn(), TimeRemainingColumn())
-        with Progress(*columns, console=self.err, transient=True) as progress:
-            task = progress.add_task(what, total=total)
-            yield lambda: progress.advance(task)
-
-
 def _ids(text: str) -> list[str] | None:
     names = [name.strip() for name in text.split(",") if name.strip()]
     return names or None
-
-
-@contextmanager
-def _warnings_as_notes(screen: Screen) -> Iterator[None]:
-    """Show the package's warnings as plain lines, each once."""
-    shown: set[str] = set()
-
-    def show(text: Warning | str, category: type[Warning], *_: Any, **__: Any) -> None:
-        if issubclass(category, StaPriorWarning) and str(text) not in shown:
-            shown.add(str(text))
-            screen.note(f"Note. {text}")
-
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore")
-        warnings.simplefilter("always", StaPriorWarning)
-        warnings.showwarning = show  # type: ignore[assignment]
-        yield
 
 
 @app.command()
@@ -122,8 +64,9 @@ def pair(
     from sta_prior.study import read_study
 
     screen = Screen(quiet, as_json)
-    with _warnings_as_notes(screen):
+    with warnings_as_notes(screen):
         loaded = read_study(study)
+        check_target(out, study, loaded.lab.path)
         data, report = pair_with_report(loaded, _ids(subjects), _ids(trials))
         write_dataset(out, data, "pairs", input_digests(data))
     for line in report.lines():
@@ -156,7 +99,8 @@ def learn(
     from sta_prior.prior import learn as learn_prior
 
     screen = Screen(quiet, as_json)
-    with _warnings_as_notes(screen):
+    with warnings_as_notes(screen):
+        check_target(out, pairs)
         prior = learn_prior(read_dataset(pairs, "pairs"), family, _ids(hold_out) or ())
         prior.save(out)
     screen.finish(words.prior_summary(prior, out), *words.prior_lines(prior), f"Wrote {out}")
@@ -180,7 +124,7 @@ def check(
     from sta_prior.prior import examine, load_prior
 
     screen = Screen(quiet, as_json)
-    with _warnings_as_notes(screen):
+    with warnings_as_notes(screen):
         prior = load_prior(prior_file)
         found = examine(prior, read_dataset(pairs, "pairs")) if pairs else None
     screen.finish(words.prior_summary(prior, prior_file, found), *words.prior_lines(prior, found))
@@ -222,7 +166,7 @@ def solve(
     from sta_prior.study import read_study
 
     screen = Screen(quiet, as_json)
-    with _warnings_as_notes(screen):
+    with warnings_as_notes(screen):
         chosen = read_study(study).select(_ids(subjects), _ids(trials))
         with screen.bar(len(chosen), "solving") as advance:
 
@@ -272,8 +216,11 @@ def compare(
     from sta_prior.study import read_study
 
     screen = Screen(quiet, as_json)
-    with _warnings_as_notes(screen):
-        comparison = compare_solutions(directory, read_study(study))
+    with warnings_as_notes(screen):
+        loaded = read_study(study)
+        if out is not None:
+            check_target(out, study, loaded.lab.path)
+        comparison = compare_solutions(directory, loaded)
         target = comparison.to_csv(out or directory / "compare.csv")
     screen.finish(comparison.to_dict(), *format_comparison(comparison), f"Wrote {target}")
     raise typer.Exit(SOME_FAILED if comparison.refused else OK)
@@ -299,7 +246,7 @@ def report(
     from sta_prior.study import read_study
 
     screen = Screen(quiet, as_json)
-    with _warnings_as_notes(screen):
+    with warnings_as_notes(screen):
         page = build_report(directory, read_study(truth) if truth else None)
     screen.finish({"report": str(page)}, f"Wrote {page}")
 
@@ -319,9 +266,12 @@ def demo(
     from sta_prior.demo import run_demo
 
     screen = Screen(quiet, as_json)
-    with _warnings_as_notes(screen):
+    with warnings_as_notes(screen):
         result = run_demo(out, seed, workers, screen.note)
+    for line in result.failures:
+        screen.err.print(line, markup=False)
     screen.finish(result.summary, *result.lines, f"The report: {result.report}")
+    raise typer.Exit(SOME_FAILED if result.failures else OK)
 
 
 def main() -> None:
@@ -329,11 +279,23 @@ def main() -> None:
     # One thread a process: the matrices are small, and threads only get in each other's way.
     for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS"):
         os.environ.setdefault(name, "1")
+    for stream in (sys.stdout, sys.stderr):
+        # A terminal without ° or – must not stop a command that has done its work.
+        if isinstance(stream, TextIOWrapper):
+            stream.reconfigure(errors="backslashreplace")
+    say = Console(stderr=True, highlight=False, soft_wrap=True)
     try:
         app()
     except StaPriorError as error:
-        Console(stderr=True, highlight=False, soft_wrap=True).print(f"Error. {error}", markup=False)
+        say.print(f"Error. {error}", markup=False)
         sys.exit(BAD_INPUT)
-    except KeyboardInterrupt:
-        Console(stderr=True).print("Interrupted; what was finished is kept.", markup=False)
-        sys.exit(INTERRUPTED)
+    except OSError as error:
+        wrong = f"cannot be read or written ({error.strerror or error})"
+        text = message(error.filename or "", wrong, "Check its name, its permissions and the space left.")
+        say.print(f"Error. {text}", markup=False)
+        sys.exit(BAD_INPUT)
+    except SystemExit as end:
+        # The command layer turns an interruption into this status and says nothing.
+        if end.code == INTERRUPTED:
+            say.print("Interrupted. What was finished is kept; solve --resume goes on from there.")
+        raise

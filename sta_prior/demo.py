@@ -24,10 +24,11 @@ from sta_prior.study import read_study
 
 @dataclass(frozen=True)
 class DemoResult:
-    """Where the report is, and what to print."""
+    """Where the report is, what to print, and trials that were left out, with the reason."""
 
     report: Path
     lines: list[Any]
+    failures: list[str]
     summary: dict[str, Any]
 
 
@@ -71,4 +72,5 @@ def run_demo(out: str | Path, seed: int, workers: int, note: Callable[[str], Non
         "comparison": comparison.to_dict(),
         "invented_data": 1,
     }
-    return DemoResult(page, lines, summary)
+    failures = [*report.lines(), *(f"Failed. {item.reason}" for item in run.failed)]
+    return DemoResult(page, lines, failures, summary)

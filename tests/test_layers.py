@@ -20,7 +20,7 @@ ORDER: tuple[str, ...] = (
     "solve",
     "support",
     *("compare", "report"),
-    *("batch", "words", "demo", "cli"),
+    *("batch", "words", "screen", "demo", "cli"),
     "__init__",
     "__main__",
 )
