@@ -9,7 +9,7 @@ import pytest
 from made_c3d import BIG, DEC, LITTLE, RATE, cloud, make_c3d
 
 from sta_prior.errors import InputError
-from sta_prior.io.c3d import read_c3d
+from sta_prior.io.c3d import copy_with_rotations, read_c3d, read_c3d_rotations
 
 DATA = Path(__file__).parents[2] / "shared" / "data"
 VARIANTS = [f"sample02_{order}_{form}.c3d" for order in ("pc", "dec", "sgi") for form in ("real", "int")]
@@ -63,6 +63,43 @@ def test_a_header_that_the_parameters_contradict_is_refused(
     if "ANALOG USED" in changes:
         changes = {**changes, "header analog": 1}
     assert refusal(make_c3d(tmp_path / "a.c3d", cloud(), changes=changes)) == expected
+
+
+def test_a_record_that_is_too_short_for_its_values_is_refused(tmp_path: Path) -> None:
+    path = make_c3d(tmp_path / "a.c3d", cloud())
+    content = path.read_bytes()
+    at = content.index(b"RATE") + 4
+    for new, place in ((b"\x05\0", at), (b"\x63", at + 2), (b"\xff", at + 3)):  # pointer, type, dimensions
+        path.write_bytes(content[:place] + new + content[place + len(new) :])
+        assert refusal(path) == ", parameter 'RATE': damaged, its values do not fit in its record." + AGAIN
+
+
+def test_a_parameter_that_stands_twice_is_refused(tmp_path: Path) -> None:
+    path = make_c3d(tmp_path / "a.c3d", cloud())
+    path.write_bytes(path.read_bytes().replace(b"UNITS", b"SCALE"))
+    assert refusal(path) == ": its parameters cannot be decoded (KeyError)." + AGAIN
+
+
+def test_points_that_no_library_decodes_are_refused(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    def read_frames(*_: object, **__: object) -> None:
+        raise ValueError
+
+    path = make_c3d(tmp_path / "a.c3d", cloud(), processor=BIG)
+    monkeypatch.setattr("c3d.Reader.read_frames", read_frames)
+    assert refusal(path) == ": its points cannot be decoded (ValueError)." + AGAIN
+
+
+@pytest.mark.parametrize("last", [b"\0\0", b"\xff\x7f"])
+def test_the_last_record_may_end_in_any_pointer_out_of_the_section(tmp_path: Path, last: bytes) -> None:
+    path = make_c3d(tmp_path / "a.c3d", cloud())
+    content = path.read_bytes()
+    at = content.index(b"LABELS") + 6
+    path.write_bytes(content[:at] + last + content[at + 2 :])
+    assert read_c3d(path)["point"].to_numpy().tolist() == ["M0", "M1", "M2"]
+    poses = np.broadcast_to(np.eye(4), (4, 1, 4, 4))
+    copy_with_rotations(path, tmp_path / "b.c3d", ["thigh"], poses)
+    assert read_c3d(tmp_path / "b.c3d")["point"].to_numpy().tolist() == ["M0", "M1", "M2"]
+    assert (read_c3d_rotations(tmp_path / "b.c3d")["rotation"] == np.eye(3)).all()
 
 
 def test_what_the_parameters_leave_out_is_taken_from_the_header(tmp_path: Path) -> None:

@@ -7,8 +7,10 @@ matrix column by column and a reliability.
 from __future__ import annotations
 
 import struct
+import warnings
 from pathlib import Path
 
+import c3d as other_library
 import ezc3d
 import numpy as np
 import pytest
@@ -18,7 +20,7 @@ from made_points import made_points, made_poses, refusal
 
 from sta_prior.errors import ShapeError
 from sta_prior.io.c3d import copy_with_rotations, read_c3d, read_c3d_rotations, write_c3d
-from sta_prior.io.c3d_format import parse_c3d
+from sta_prior.io.c3d_records import read_records
 from sta_prior.io.points import points_dataset
 
 DATA = Path(__file__).parents[2] / "shared" / "data"
@@ -26,6 +28,26 @@ ORDERS = pytest.mark.parametrize("processor", [LITTLE, DEC, BIG])
 MATRIX = np.array(
     [[0.0, -1.0, 0.0, 0.125], [0.0, 0.0, -1.0, 0.25], [1.0, 0.0, 0.0, 0.5], [0.0, 0.0, 0.0, 1.0]]
 )
+
+
+def parameters_and_data(path: Path) -> tuple[dict[str, tuple[int, list[int], bytes]], list[np.ndarray]]:
+    """Stored parameters, those of ROTATION apart, and analog samples, as an independent library says."""
+    with path.open("rb") as file, warnings.catch_warnings(action="ignore"):
+        reader = other_library.Reader(file)
+        stored = {
+            f"{group_name}:{name}": (parameter.bytes_per_element, parameter.dimensions, parameter.bytes)
+            for group_name, group in reader.group_items()
+            for name, parameter in group.param_items()
+            if group_name != "ROTATION"
+        }
+        return stored, [analog for _, _, analog in reader.read_frames()]
+
+
+def pointers(path: Path) -> tuple[int, int]:
+    """POINT:DATA_START and ROTATION:DATA_START, as an independent library says."""
+    with path.open("rb") as file, warnings.catch_warnings(action="ignore"):
+        reader = other_library.Reader(file)
+        return reader.get_uint16("POINT:DATA_START"), reader.get_uint16("ROTATION:DATA_START")
 
 
 @ORDERS
@@ -65,13 +87,14 @@ def test_poses_survive_in_every_byte_order_and_the_rest_stays(
     assert back["segment"].to_numpy().tolist() == ["thigh", "shank"]
     assert back.attrs["rate"] == RATE
     xr.testing.assert_identical(read_c3d(tmp_path / "b.c3d").assign_attrs(source="a.c3d"), read_c3d(source))
-    before, after = parse_c3d(source), parse_c3d(tmp_path / "b.c3d")
+    (before, analog), (after, kept_analog) = (
+        parameters_and_data(source),
+        parameters_and_data(tmp_path / "b.c3d"),
+    )
     pointer = {"POINT:DATA_START"}
-    kept = {name: value for name, value in after.parameters.items() if not name.startswith("ROTATION")}
-    assert set(kept) == set(before.parameters)
-    assert all(kept[name] == before.parameters[name] for name in set(kept) - pointer)
-    size = before.frames * before.frame_size
-    assert before.content[before.data_start :][:size] == after.content[after.data_start :][:size]
+    assert set(after) == set(before)
+    assert all(after[name] == before[name] for name in set(after) - pointer)
+    assert np.array_equal(kept_analog, analog)
 
 
 @pytest.mark.parametrize("order", ["pc", "dec", "sgi"])
@@ -87,6 +110,11 @@ def test_a_copy_of_each_real_variant(tmp_path: Path, order: str, form: str) -> N
     np.testing.assert_allclose(back["rotation"], poses[..., :3, :3], rtol=0, atol=1e-6)
     np.testing.assert_allclose(back["position"], poses[..., :3, 3], rtol=0, atol=1e-6)
     assert read_c3d(target).equals(read_c3d(source))
+    (before, analog), (after, kept_analog) = parameters_and_data(source), parameters_and_data(target)
+    assert {**after, "POINT:DATA_START": None} == {**before, "POINT:DATA_START": None}
+    assert np.array_equal(kept_analog, analog)
+    assert np.abs(analog).max() > 100
+    assert target.read_bytes()[298:512] == source.read_bytes()[298:512]  # events in the header
     added = len(target.read_bytes()) - len(source.read_bytes())
     assert 0 < added - 89 * 2 * 17 * 4 < 4 * 512
     if order == "pc":  # the library decodes rotations of little-endian files
@@ -118,7 +146,9 @@ def test_poses_that_an_independent_library_wrote(tmp_path: Path) -> None:
     assert ours["segment"].to_numpy().tolist() == ["pelvis", "thigh", "shank"]
     copy_with_rotations(tmp_path / "a.c3d", tmp_path / "b.c3d", ["foot"], poses[:, :1])
     assert read_c3d_rotations(tmp_path / "b.c3d")["segment"].to_numpy().tolist() == ["foot"]
-    names = [record.name for record in parse_c3d(tmp_path / "b.c3d").records if record.group < 0]
+    records, sound = read_records((tmp_path / "b.c3d").read_bytes(), tmp_path)
+    names = [record.name for record in records if record.group < 0]
+    assert sound
     assert names.count("ROTATION") == 1
     assert len((tmp_path / "b.c3d").read_bytes()) < len((tmp_path / "a.c3d").read_bytes()) + 512
 
@@ -191,8 +221,8 @@ def test_poses_go_before_the_points_where_a_16_bit_pointer_would_not_reach_behin
     write_c3d(tmp_path / "a.c3d", points)
     poses = np.broadcast_to(MATRIX, (frames, 1, 4, 4))
     copy_with_rotations(tmp_path / "a.c3d", tmp_path / "b.c3d", ["thigh"], poses)
-    layout = parse_c3d(tmp_path / "b.c3d")
-    assert layout.whole("ROTATION:DATA_START") < layout.whole("POINT:DATA_START")
+    point, rotation = pointers(tmp_path / "b.c3d")
+    assert rotation < point
     back = read_c3d_rotations(tmp_path / "b.c3d")
     np.testing.assert_allclose(back["rotation"], poses[..., :3, :3], atol=1e-6)
     assert read_c3d(tmp_path / "b.c3d")["position"].equals(read_c3d(tmp_path / "a.c3d")["position"])
@@ -211,10 +241,11 @@ def changed(path: Path, name: str, at: int, value: bytes) -> Path:
     """A copy of the file in which some bytes of a parameter's record are others."""
     content = path.read_bytes()
     group, parameter = name.split(":")
-    layout = parse_c3d(path)
-    groups = {record.name: -record.group for record in layout.records if record.group < 0}
-    record = next(r for r in layout.records if (r.group, r.name) == (groups[group], parameter))
-    place = content.index(record.content) + record.data_at + at
+    records, _ = read_records(content, path)
+    number = next(-record.group for record in records if record.group < 0 and record.name == group)
+    record = next(record for record in records if (record.group, record.name) == (number, parameter))
+    head = 2 + len(parameter) + 2  # name and pointer; then type, number of dimensions and dimensions
+    place = content.index(record.content) + head + 2 + record.content[head + 1] + at
     path = path.with_name("changed.c3d")
     path.write_bytes(content[:place] + value + content[place + len(value) :])
     return path

@@ -127,7 +127,7 @@ def test_what_the_format_cannot_hold_is_refused(tmp_path: Path) -> None:
     assert refusal(
         write_c3d, path, made_points(labels=1300).assign_coords(point=[f"{n:0120}" for n in range(1300)])
     ) == (
-        f"{path}: the parameters need 309 blocks, a C3D file holds at most 255. "
+        f"{path}: the parameters need 311 blocks, a C3D file holds at most 255. "
         "Write fewer points or shorter labels."
     )
     assert refusal(write_c3d, tmp_path / "no" / "a.c3d", points) == (
