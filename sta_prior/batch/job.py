@@ -205,4 +205,5 @@ def _refuse_empty(solution: xr.Dataset, trial: Trial) -> None:
     if np.isfinite(solution["position"].values).all(axis=2).any():
         return
     words = str(solution.attrs["observability"]) or str(solution.attrs["stop_reason"])
-    raise InputError(message((trial.subject.id, trial.id), f"no pose is determined in any frame: {words}"))
+    wrong = f"no pose is determined in any frame: {words}"
+    raise InputError(message((trial.subject.id, trial.id), wrong, "Fill its gaps or leave it out."))

@@ -15,7 +15,7 @@ import xarray as xr
 
 from sta_prior.angles import joint_angles
 from sta_prior.checks import FloatArray
-from sta_prior.errors import InputError, StaPriorWarning, message
+from sta_prior.errors import InputError, StaPriorError, StaPriorWarning, message
 from sta_prior.pairs.align import skin_at
 from sta_prior.pairs.belonging import Belonging, check_belonging, distance_misfit
 from sta_prior.se3 import inverse, transform_points
@@ -199,7 +199,10 @@ def pair(
 def pair_with_report(
     study: Study, subjects: Sequence[str] | None = None, trials: Sequence[str] | None = None
 ) -> tuple[xr.Dataset, PairingReport]:
-    """Pair as `pair` does, returning the refused trials instead of warning of them."""
+    """Pair as `pair` does, returning the refused trials instead of warning of them.
+
+    A trial whose files cannot be used is refused like one whose reference does not belong to it.
+    """
     chosen = [trial for trial in study.select(subjects, trials) if trial.has_bone]
     if not chosen:
         raise InputError(
@@ -207,26 +210,42 @@ def pair_with_report(
         )
     paired: list[_PairedTrial] = []
     refused: list[tuple[str, str, str]] = []
+    errors: list[StaPriorError] = []
     for trial in chosen:
-        result = _pair_trial(trial, trial.subject.reference())
-        reasons = [
-            reason
-            for segment, fit in zip(study.lab.segments, result.fits, strict=True)
-            for reason in fit.reasons(segment.name)
-        ]
-        if result.time.size == 0:
-            reasons.append("no frame with bone truth in view")
-        if reasons:
-            advice = "Not paired: its reference does not belong to it; give it a reference of its own"
-            refused.append((trial.subject.id, trial.id, "; ".join(reasons) + ". " + advice))
+        try:
+            result = _pair_trial(trial, trial.subject.reference())
+        except StaPriorError as error:
+            errors.append(error)
+            refused.append(
+                (trial.subject.id, trial.id, str(error).removeprefix(message(trial.place, "")[:-1]))
+            )
+            continue
+        reason = _why_refused(study, result)
+        if reason:
+            refused.append((trial.subject.id, trial.id, reason))
         else:
             paired.append(result)
     _note_assumed_accuracy([item.trial for item in paired])
     report = PairingReport(tuple(refused))
     if not paired:
-        lines = "; ".join(report.lines())
-        raise InputError(message(study.path, f"no trial is left to pair: {lines}"))
+        if len(errors) == len(chosen) == 1:
+            raise errors[0]
+        more = f" (and {len(refused) - 1} more trials)" if len(refused) > 1 else ""
+        raise InputError(message(study.path, f"no trial is left to pair: {report.lines()[0]}{more}"))
     return _dataset(study, paired), report
+
+
+def _why_refused(study: Study, result: _PairedTrial) -> str:
+    """Words for what does not fit a trial's reference; empty where all is well."""
+    if result.time.size == 0:
+        return "no frame with bone truth in view. Not paired: check its bone table"
+    reasons = [
+        reason
+        for segment, fit in zip(study.lab.segments, result.fits, strict=True)
+        for reason in fit.reasons(segment.name)
+    ]
+    advice = ". Not paired: its reference does not belong to it; give it a reference of its own"
+    return "; ".join(reasons) + advice if reasons else ""
 
 
 def _note_assumed_accuracy(trials: list[Trial]) -> None:
@@ -234,10 +253,11 @@ def _note_assumed_accuracy(trials: list[Trial]) -> None:
     assumed = [trial for trial in trials if not trial.bone_sd_declared]
     if assumed:
         first = assumed[0]
+        more = f" and in {len(assumed) - 1} more trials" if len(assumed) > 1 else ""
         warnings.warn(
             message(
                 (first.subject.id, first.id),
-                f"bone_sd is not declared here and in {len(assumed) - 1} more trials, taken as "
+                f"bone_sd is not declared here{more}, taken as "
                 f"{1000 * first.bone_sd_position:g} mm and {np.degrees(first.bone_sd_rotation):g}°",
                 "Declare the accuracy of your bone truth in motion: it is taken out of the artifact.",
             ),
