@@ -1,7 +1,7 @@
 """Reading C3D files: byte orders, number formats, residuals, units, labels, events, damaged files.
 
-Outside checks: six files of one trial (sample set of C3D.org) and two independent reading libraries, ezc3d
-and c3d, on what each of them gets right. Rules: C3D file format user guide (C3D.org).
+Outside checks: six files of one trial (sample set of C3D.org) and files made byte by byte, which hold the two
+libraries to account. Rules: C3D file format user guide (C3D.org).
 """
 
 from __future__ import annotations
@@ -55,29 +55,43 @@ def test_six_variants_of_one_trial_give_the_same_points(name: str) -> None:
     assert variant.attrs["rate"] == 50.0
 
 
-@pytest.mark.parametrize("name", VARIANTS)
-def test_points_are_those_of_an_independent_library(name: str) -> None:
+@pytest.mark.parametrize("name", [name for name in VARIANTS if "sgi" not in name])
+def test_points_of_the_one_library_are_those_of_the_other(name: str) -> None:
     path = data("c3d_variants", name)
     ours, (position, residual) = read_c3d(path), with_other_library(path)
     np.testing.assert_allclose(ours["position"], position, rtol=0, atol=1e-6)
     np.testing.assert_allclose(ours["residual"], residual, rtol=0, atol=1e-9)
 
 
-@pytest.mark.parametrize("name", [name for name in VARIANTS if "sgi" not in name])
-def test_points_are_those_of_a_second_independent_library(name: str) -> None:
-    path = data("c3d_variants", name)
-    position = ezc3d.c3d(str(path))["data"]["points"][:3].transpose(2, 1, 0) / 1000
-    np.testing.assert_allclose(read_c3d(path)["position"], position, rtol=0, atol=1e-9)
+@ORDERS
+@FORMS
+def test_every_fourth_word_there_is(tmp_path: Path, processor: int, real: bool) -> None:
+    """Sign of the 16 bits: occluded; low byte: residual; float files hold negative words in two ways."""
+    word = np.arange(65536)
+    words = np.full((1024, 64, 4), 7.0)
+    words[::2, :, 0] = 1000.0
+    for stored in [word, (word + 32768) % 65536 - 32768] if real else [word]:
+        words[..., 3] = stored.reshape(1024, 64)
+        points = read_c3d(make_c3d(tmp_path / "a.c3d", words, processor=processor, real=real))
+        expected = np.where(word < 32768, (word & 0xFF) * SCALE * 1e-3, np.nan).reshape(1024, 64)
+        np.testing.assert_allclose(points["residual"], expected, rtol=1e-14)
+        assert np.array_equal(points["position"].isnull().all("axis"), np.isnan(expected))
+        assert np.array_equal(points["position"].isnull().any("axis"), np.isnan(expected))
 
 
 def test_word_ffff_hex_of_a_float_file_is_an_occluded_point() -> None:
-    """Gaps of 23 % in this file; both libraries take the word for a residual and see points at the origin."""
+    """Gaps of 23 % in this file; both libraries take the word for a residual and see points at the origin.
+
+    A version that does better makes io/c3d_residual needless: try to delete it.
+    """
     path = data("skin_only", "gappy-walk", "sample26_Walking_Hybrid_1_1.c3d")
     points = read_c3d(path)
     assert points["position"].isnull().all("axis").sum() == 3902
     assert not (points["position"] == 0).any()
     as_seen = ezc3d.c3d(str(path))["data"]["points"][:3]
     assert int((as_seen == 0).all(axis=0).sum()) == 3902
+    seen_by_other, _ = with_other_library(path)
+    assert int((seen_by_other == 0).all(axis=-1).sum()) == 3902
 
 
 @ORDERS
@@ -95,6 +109,15 @@ def test_made_file_is_read_to_the_last_digit(tmp_path: Path, processor: int, rea
         "position": "m",
         "residual": "m",
     }
+
+
+def test_analog_samples_without_their_rate_do_not_shift_the_points(tmp_path: Path) -> None:
+    """The one library shifts them; such a file goes to the other."""
+    words = cloud(frames=6, points=4)
+    path = make_c3d(tmp_path / "a.c3d", words, analog=3)
+    shifted = ezc3d.c3d(str(path))["data"]["points"][:3].transpose(2, 1, 0)
+    assert not np.array_equal(shifted, words[..., :3])
+    np.testing.assert_allclose(read_c3d(path)["position"], words[..., :3] * 1e-3, rtol=1e-14)
 
 
 @ORDERS
