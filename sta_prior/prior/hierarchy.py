@@ -27,6 +27,7 @@ from sta_prior.checks import BoolArray, FloatArray
 from sta_prior.gaussian import symmetrise
 
 UNISON_SHARE = 0.6
+POPULATION_WIDTH = 4.0
 
 
 @dataclass(frozen=True)
@@ -229,35 +230,40 @@ def trial_posterior(hierarchy: Hierarchy, trials: list[TrialStatistics], trial: 
 
 @dataclass(frozen=True)
 class Scale:
-    """Weak prior sizes, from the data's own magnitude: features (K,) m², residual m²."""
+    """Sizes of the weak priors, from the data's own magnitude: mean square displacement and residual, m²."""
 
-    features: FloatArray
+    displacement: float
     residual: float
 
 
 def scale_of(trials: list[TrialStatistics]) -> Scale:
-    """Sizes that make the weak priors proper: the mean square displacement, shared by feature power."""
+    """Mean square displacement of one output, and a tenth of it for the residual."""
     blocks = [block for trial in trials for block in trial.blocks]
-    weight = sum(block.weight for block in blocks)
     # Bounded below by a millimetre, so that data without artifact still gives a proper prior.
     size = sum(float(np.trace(block.output_gram)) for block in blocks)
     counted = sum(block.weight * int(block.seen.sum()) for block in blocks)
     variance = max(size / counted, 0.001**2)
-    power = np.diag(sum(block.feature_gram for block in blocks)) / weight
-    return Scale(features=variance / np.maximum(power, 1e-4), residual=0.1 * variance)
+    return Scale(variance, 0.1 * variance)
 
 
-def population_prior(trials: list[TrialStatistics], fixed_at_reference: BoolArray) -> Weights:
-    """Weak, proper belief about the population weights, sized by the data's own magnitude."""
-    scale = scale_of(trials)
+def population_prior(trials: list[TrialStatistics], relative: FloatArray) -> Weights:
+    """Weak, proper belief about the population weights, sized by the data's own magnitude.
+
+    Parameters
+    ----------
+    trials : what is learned from
+    relative : shape (K,), prior variance of each feature's weight against the mean square displacement;
+        the first feature, the constant, has no population weight: artifact is zero at the reference
+    """
     n = trials[0].blocks[0].seen.size
-    free = np.where(fixed_at_reference, 0.0, 4.0 * scale.features)
+    free = POPULATION_WIDTH * scale_of(trials).displacement * relative
+    free[0] = 0.0
     covariance = np.kron(np.diag(free), unison_covariance(n))
-    return Weights(np.zeros((scale.features.size, n)), covariance)
+    return Weights(np.zeros((relative.size, n)), covariance)
 
 
 def without_subject(
-    hierarchy: Hierarchy, trials: list[TrialStatistics], fixed_at_reference: BoolArray, subject: str
+    hierarchy: Hierarchy, trials: list[TrialStatistics], relative: FloatArray, subject: str
 ) -> Hierarchy:
     """Same covariances, population conditioned on every subject but one: nothing is counted twice."""
     size = hierarchy.population.covariance.shape[0]
@@ -269,7 +275,7 @@ def without_subject(
             if trial.subject == name
         ]
         messages.append(through(total_message(own, size), hierarchy.subject_covariance))
-    belief = population_prior(trials, fixed_at_reference)
+    belief = population_prior(trials, relative)
     return replace(hierarchy, population=condition_on(belief, total_message(messages, size)))
 
 
