@@ -187,6 +187,7 @@ def _from_dataset(data: xr.Dataset) -> Prior:
     validation = data[names].rename(
         {name: str(name).removeprefix("validation_") for name in {*names, *data[names].dims}}
     )
+    validation.attrs = {}
     joints = [JointLabel(**{**item, "dof": tuple(item["dof"])}) for item in json.loads(data.attrs["joints"])]
     return Prior(
         family=str(data.attrs["family"]),
