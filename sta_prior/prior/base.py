@@ -13,9 +13,11 @@ from pathlib import Path
 import numpy as np
 import xarray as xr
 
-from sta_prior.checks import BoolArray, FloatArray, IntArray, nearest
+from sta_prior.checks import FloatArray, IntArray, nearest
 from sta_prior.errors import MismatchError, StaPriorWarning, message
 from sta_prior.pairs.pairing import segment_side
+from sta_prior.prior.artifact import FeatureArtifact
+from sta_prior.prior.basis import Basis, Term
 from sta_prior.prior.hierarchy import (
     Hierarchy,
     TrialStatistics,
@@ -23,12 +25,15 @@ from sta_prior.prior.hierarchy import (
     new_subject,
     subject_posterior,
     trial_posterior,
+    unison_covariance,
     without_subject,
 )
 from sta_prior.prior.interface import Artifact
-from sta_prior.prior.linear import Basis, LinearArtifact, Term
 from sta_prior.prior.statistics import mirror_signs, segment_frames, summarise
 from sta_prior.study import Lab, Trial
+
+MAGNITUDE_SD = {"thigh": 0.010, "shank": 0.006}
+DEFAULT_SD = 0.008
 
 
 @dataclass(frozen=True)
@@ -72,9 +77,9 @@ class SegmentModel:
     inflation: float = 1.0
 
     @property
-    def fixed_at_reference(self) -> BoolArray:
-        """Features without a population weight: the constant one."""
-        return np.asarray(np.arange(self.basis.size) == 0)
+    def magnitude(self) -> FloatArray:
+        """Covariance that the spread grows by, far beyond the training data, (n, n) m²."""
+        return MAGNITUDE_SD.get(self.name, DEFAULT_SD) ** 2 * unison_covariance(3 * len(self.markers), 0.7)
 
 
 @dataclass(frozen=True)
@@ -280,7 +285,7 @@ class Prior:
         own = [item for item in model.trials if item.subject == subject]
         hierarchy = model.hierarchy
         if own:
-            hierarchy = without_subject(hierarchy, list(model.trials), model.fixed_at_reference, subject)
+            hierarchy = without_subject(hierarchy, list(model.trials), model.basis.relative_variance, subject)
         if own_data is not None and own_data.sizes["trial"]:
             dof = {joint.name: joint.dof for joint in self.joints}
             frames = segment_frames(own_data, model.name, model.markers, dof)
@@ -358,10 +363,13 @@ def _select(
     covariance = (weights.covariance * np.outer(both, both))[np.ix_(keep, keep)]
     residual = (model.hierarchy.residual * np.outer(signs, signs))[np.ix_(outputs, outputs)]
     terms = tuple(Term(joint_columns[term.joint], term.dof, term.power) for term in model.basis.terms)
-    return LinearArtifact(
-        basis=Basis(terms, model.basis.mixing),
+    waves = tuple(replace(wave, joint=joint_columns[wave.joint]) for wave in model.basis.waves)
+    reaches = tuple(replace(reach, joint=joint_columns[reach.joint]) for reach in model.basis.reaches)
+    return FeatureArtifact(
+        basis=replace(model.basis, terms=terms, waves=waves, reaches=reaches),
         weights=Weights((weights.mean * signs)[:, outputs], covariance),
         residual=residual,
         time_constant=model.time_constant,
         reference=reference_angles,
+        magnitude=(model.magnitude * np.outer(signs, signs))[np.ix_(outputs, outputs)],
     )

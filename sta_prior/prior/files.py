@@ -14,8 +14,8 @@ import xarray as xr
 from sta_prior.errors import InputError, message
 from sta_prior.io.netcdf import dataset_digest, read_dataset, write_dataset
 from sta_prior.prior.base import JointLabel, LearnedTrial, Prior, SegmentModel
+from sta_prior.prior.basis import Basis, Term
 from sta_prior.prior.hierarchy import Block, Hierarchy, TrialStatistics, Weights
-from sta_prior.prior.linear import Basis, Term
 
 _ONE, _METRE, _SQUARE = {"units": "1"}, {"units": "m"}, {"units": "m2"}
 Variables = dict[str, tuple[tuple[str, ...], object, dict[str, str]]]

@@ -17,7 +17,7 @@ memory).
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -112,7 +112,9 @@ def _split(state: _State) -> _Split:
     return _Split(inverse.T @ axes, axes.T @ factor.T, np.maximum(spread, 1e-12 * spread[-1]))
 
 
-def _solve(information: _Information, covariance: FloatArray, mean: FloatArray) -> tuple[FloatArray, FloatArray]:
+def _solve(
+    information: _Information, covariance: FloatArray, mean: FloatArray
+) -> tuple[FloatArray, FloatArray]:
     """(1 + ΛC)⁻¹ applied to Λ and to η − Λ·mean: needs no inverse of either."""
     innovation = information.shift - np.einsum("nkl,nl->nk", information.precision, mean)
     right = np.concatenate([information.precision, innovation[..., None]], axis=-1)
@@ -196,7 +198,9 @@ class _Prior:
     width: FloatArray
 
 
-def _weak_prior(trials: list[TrialStatistics], relative: FloatArray, total: float, settings: FitSettings) -> _Prior:
+def _weak_prior(
+    trials: list[TrialStatistics], relative: FloatArray, total: float, settings: FitSettings
+) -> _Prior:
     scale, n = scale_of(trials), trials[0].blocks[0].seen.size
     width = settings.population_width * scale.displacement * relative
     width[0] = 0.0
@@ -279,7 +283,11 @@ def _as_hierarchy(
 
 
 def _iteration(
-    state: _State, prior: _Prior, trials: list[TrialStatistics], means: list[FloatArray], settings: FitSettings
+    state: _State,
+    prior: _Prior,
+    trials: list[TrialStatistics],
+    means: list[FloatArray],
+    settings: FitSettings,
 ) -> tuple[_State, list[FloatArray]]:
     """One expectation and one maximisation; returns the new state and the trials' weights, (K, n) each."""
     split = _split(state)

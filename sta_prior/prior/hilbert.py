@@ -49,7 +49,9 @@ def covariance(distance: FloatArray, length: float, kind: Covariance) -> FloatAr
     return np.asarray((1.0 + scaled) * np.exp(-scaled))
 
 
-def boundary_factor(half_range: float, length: float, kind: Covariance, deficit: float = EDGE_DEFICIT) -> float:
+def boundary_factor(
+    half_range: float, length: float, kind: Covariance, deficit: float = EDGE_DEFICIT
+) -> float:
     """Smallest factor c with k(2S(c − 1)) ≤ deficit: L = c·S for data on [−S, S].
 
     The images of the data behind the boundary take variance away from the edge by k(2(L − S)); a rule of

@@ -18,8 +18,10 @@ from sta_prior.checks import FloatArray, nearest
 from sta_prior.errors import InputError, message
 from sta_prior.io.netcdf import dataset_digest
 from sta_prior.prior.base import JointLabel, LearnedTrial, Prior, SegmentModel
+from sta_prior.prior.basis import orthonormal
 from sta_prior.prior.fitting import fit_hierarchy
-from sta_prior.prior.linear import linear_basis, orthonormal
+from sta_prior.prior.linear import linear_basis
+from sta_prior.prior.reduced_rank import reduced_rank_basis
 from sta_prior.prior.statistics import (
     SegmentFrames,
     adjacent_joints,
@@ -29,7 +31,7 @@ from sta_prior.prior.statistics import (
 )
 from sta_prior.prior.validate import calibrate_inflation, leave_one_out, summarise_validation
 
-FAMILIES = ("linear",)
+FAMILIES = ("linear", "reduced-rank-gp")
 DEFAULT_FAMILY = "linear"
 
 
@@ -82,7 +84,9 @@ def _layout(pairs: xr.Dataset, segment: str, markers: Sequence[str]) -> FloatArr
     return mean
 
 
-def _learn_segment(pairs: xr.Dataset, segment: str, joints: tuple[JointLabel, ...]) -> SegmentModel:
+def _learn_segment(
+    pairs: xr.Dataset, segment: str, joints: tuple[JointLabel, ...], family: str
+) -> SegmentModel:
     markers = tuple(
         str(marker)
         for marker, own in zip(pairs["marker"].values, pairs["marker_segment"].values, strict=True)
@@ -95,11 +99,12 @@ def _learn_segment(pairs: xr.Dataset, segment: str, joints: tuple[JointLabel, ..
             message(("pairs", segment), "no frame has both a visible marker and all joint angles")
         )
     adjacent = adjacent_joints(pairs, segment, tuple(dof))
-    basis = orthonormal(
-        linear_basis(adjacent),
-        [item.angles for item in frames],
-        [item.reference_angles for item in frames],
-    )
+    angles, references = [item.angles for item in frames], [item.reference_angles for item in frames]
+    if family == "linear":
+        basis = linear_basis(adjacent)
+    else:
+        basis = reduced_rank_basis(adjacent, angles, references)
+    basis = orthonormal(basis, angles, references)
     constant = estimate_time_constant(frames, basis)
     trials = tuple(summarise(item, basis, constant) for item in frames)
     _refuse_unseen(segment, markers, frames)
@@ -108,7 +113,7 @@ def _learn_segment(pairs: xr.Dataset, segment: str, joints: tuple[JointLabel, ..
         markers=markers,
         layout=_layout(pairs, segment, markers),
         basis=basis,
-        hierarchy=fit_hierarchy(list(trials), np.arange(basis.size) == 0),
+        hierarchy=fit_hierarchy(list(trials), basis.relative_variance, basis.total_relative_variance),
         trials=trials,
         time_constant=constant,
     )
@@ -161,7 +166,7 @@ def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[st
     segments: dict[str, SegmentModel] = {}
     figures = []
     for name in (str(segment) for segment in chosen["segment"].values):
-        model = _learn_segment(chosen, name, joints)
+        model = _learn_segment(chosen, name, joints, family)
         frames = segment_frames(chosen, name, model.markers, dof)
         left_out = leave_one_out(model, frames)
         model = replace(model, inflation=calibrate_inflation(left_out))

@@ -15,8 +15,8 @@ import xarray as xr
 
 from sta_prior.checks import BoolArray, FloatArray
 from sta_prior.errors import MismatchError, message
+from sta_prior.prior.basis import Basis
 from sta_prior.prior.hierarchy import TrialStatistics, frame_weights, make_block
-from sta_prior.prior.linear import Basis
 from sta_prior.rigid import marker_jacobian
 
 LONGEST_TIME_CONSTANT = 0.1

@@ -23,10 +23,10 @@ from scipy.stats import t as student
 
 from sta_prior.checks import FloatArray
 from sta_prior.gaussian import crps_normal
+from sta_prior.prior.artifact import FeatureArtifact
 from sta_prior.prior.base import SegmentModel
-from sta_prior.prior.fitting import fit_hierarchy
+from sta_prior.prior.fitting import FitSettings, fit_hierarchy
 from sta_prior.prior.hierarchy import Weights, new_subject, trial_posterior, without_subject
-from sta_prior.prior.linear import LinearArtifact
 from sta_prior.prior.statistics import SegmentFrames, summarise
 
 LEVELS = (0.50, 0.90, 0.95)
@@ -52,8 +52,13 @@ class LeftOut:
 
 
 def _predict(model: SegmentModel, frames: SegmentFrames, weights: Weights, unit: str, kind: bool) -> LeftOut:
-    artifact = LinearArtifact(
-        model.basis, weights, model.hierarchy.residual, model.time_constant, frames.reference_angles
+    artifact = FeatureArtifact(
+        model.basis,
+        weights,
+        model.hierarchy.residual,
+        model.time_constant,
+        frames.reference_angles,
+        model.magnitude,
     )
     moments = artifact.moments(frames.angles)
     total = np.einsum("faa->fa", moments.covariance)
@@ -76,12 +81,13 @@ def leave_one_out(model: SegmentModel, frames: list[SegmentFrames]) -> list[Left
     """
     subjects = sorted({item.subject for item in frames})
     trials = list(model.trials)
-    fixed = model.fixed_at_reference
+    relative, total = model.basis.relative_variance, model.basis.total_relative_variance
+    settings = FitSettings(maximum_iterations=_REFIT_ITERATIONS)
     result = []
     if len(subjects) > 1:
         for name in subjects:
             others = [trial for trial in trials if trial.subject != name]
-            hierarchy = fit_hierarchy(others, fixed, model.hierarchy, _REFIT_ITERATIONS)
+            hierarchy = fit_hierarchy(others, relative, total, model.hierarchy, settings)
             weights = new_subject(hierarchy)
             refitted = replace(model, hierarchy=hierarchy)
             parts = [_predict(refitted, item, weights, name, True) for item in frames if item.subject == name]
@@ -89,7 +95,7 @@ def leave_one_out(model: SegmentModel, frames: list[SegmentFrames]) -> list[Left
         return result
     if len(frames) < 2:
         return []
-    hierarchy = without_subject(model.hierarchy, trials, fixed, subjects[0])
+    hierarchy = without_subject(model.hierarchy, trials, relative, subjects[0])
     for item in frames:
         own = [
             summarise(other, model.basis, model.time_constant)
