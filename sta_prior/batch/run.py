@@ -118,7 +118,7 @@ def solve_study(
     run = Run(tuple(outcomes))
     if len(run.failed) == len(outcomes):
         first = run.failed[0]
-        more = f" (and {len(outcomes) - 1} more trials failed)" if len(outcomes) > 1 else ""
+        more = f" {len(outcomes) - 1} more trials failed too." if len(outcomes) > 1 else ""
         raise InputError(f"{first.reason}{more}")
     _write_account(folder, jobs[0], outcomes, inputs, len(jobs))
     return run

@@ -230,8 +230,8 @@ def pair_with_report(
     if not paired:
         if len(errors) == len(chosen) == 1:
             raise errors[0]
-        more = f" (and {len(refused) - 1} more trials)" if len(refused) > 1 else ""
-        raise InputError(message(study.path, f"no trial is left to pair: {report.lines()[0]}{more}"))
+        more = f"{len(refused) - 1} more trials cannot be paired either." if len(refused) > 1 else ""
+        raise InputError(message(study.path, f"no trial is left to pair: {report.lines()[0]}", more))
     return _dataset(study, paired), report
 
 

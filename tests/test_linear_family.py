@@ -1,0 +1,173 @@
+"""The linear family: features, their derivative, moments of the artifact."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import made_priors as made
+import numpy as np
+import pytest
+from differences import central_difference
+
+from sta_prior.checks import FloatArray
+from sta_prior.prior.hierarchy import Weights, new_subject, without_subject
+from sta_prior.prior.interface import IsotropicArtifact
+from sta_prior.prior.linear import (
+    SMALLEST_POWER,
+    Basis,
+    LinearArtifact,
+    Term,
+    linear_basis,
+    orthonormal,
+)
+
+REFERENCE = np.array([[0.1, 0.02, -0.03], [-0.2, 0.01, 0.05]])
+
+
+def angles_of(generator: np.random.Generator, frames: int) -> FloatArray:
+    return np.asarray(generator.uniform(-0.5, 1.5, (frames, 2, 3)), dtype=np.float64)
+
+
+def learned_basis(generator: np.random.Generator, frames: int = 60) -> Basis:
+    parts = [angles_of(generator, frames), angles_of(generator, 2 * frames)]
+    return orthonormal(linear_basis((0, 1)), parts, [REFERENCE, 0.5 * REFERENCE])
+
+
+def artifact_of(generator: np.random.Generator) -> LinearArtifact:
+    basis = learned_basis(generator)
+    weights = Weights(
+        0.01 * generator.standard_normal((basis.size, 6)),
+        1e-5 * made.random_covariance(generator, 6 * basis.size),
+    )
+    return LinearArtifact(basis, weights, 1e-6 * made.random_covariance(generator, 6), 0.05, REFERENCE)
+
+
+def test_terms_are_flexion_and_its_square_at_every_adjacent_joint() -> None:
+    basis = linear_basis((0, 2))
+    assert basis.terms == (Term(0, 0, 1), Term(0, 0, 2), Term(2, 0, 1), Term(2, 0, 2))
+    np.testing.assert_array_equal(basis.mixing, np.eye(4))
+    assert basis.size == 5
+
+
+def test_values_by_hand() -> None:
+    basis = Basis((Term(1, 2, 1), Term(0, 0, 2)), np.array([[2.0, 0.0], [1.0, -3.0]]))
+    angles = np.array([[[0.5, 0.0, 0.0], [0.0, 0.0, 0.4]]])
+    # Raw: 0.4 − 0.05 = 0.35 and 0.25 − 0.01 = 0.24.
+    np.testing.assert_allclose(basis.values(angles, REFERENCE), [[1.0, 0.70, 0.35 - 0.72]], rtol=1e-14)
+
+
+def test_without_joints_only_the_constant_is_left() -> None:
+    basis = orthonormal(linear_basis(()), [np.zeros((3, 0, 3))], [np.zeros((0, 3))])
+    np.testing.assert_array_equal(basis.values(np.zeros((3, 0, 3)), np.zeros((0, 3))), np.ones((3, 1)))
+    assert basis.derivatives(np.zeros((3, 0, 3))).shape == (3, 1, 0, 3)
+
+
+def test_learned_features_are_orthonormal_over_the_training_frames() -> None:
+    """Up to the floor: M(G + s²1)Mᵀ = 1, so their Gram matrix is 1 − s²·MMᵀ."""
+    generator = np.random.default_rng(1)
+    parts = [angles_of(generator, 50), angles_of(generator, 80)]
+    references = [REFERENCE, 0.5 * REFERENCE]
+    basis = orthonormal(linear_basis((0, 1)), parts, references)
+    values = np.concatenate([basis.values(q, q0) for q, q0 in zip(parts, references, strict=True)])[:, 1:]
+    gram = values.T @ values / values.shape[0]
+    floor = SMALLEST_POWER**2 * basis.mixing @ basis.mixing.T
+    np.testing.assert_allclose(gram + floor, np.eye(4), atol=1e-12)
+    assert np.abs(gram - np.eye(4)).max() < 0.02
+    np.testing.assert_allclose(basis.mixing, np.tril(basis.mixing), atol=0)
+
+
+def test_an_angle_that_hardly_moves_is_not_blown_up() -> None:
+    still = np.broadcast_to(REFERENCE + 1e-6, (40, 2, 3))
+    basis = orthonormal(linear_basis((0,)), [still], [REFERENCE])
+    assert np.abs(basis.mixing).max() < 1.001 / SMALLEST_POWER
+    assert np.abs(basis.values(still, REFERENCE)[:, 1:]).max() < 1e-4
+
+
+def test_features_do_not_depend_on_the_order_of_frames_and_trials() -> None:
+    generator = np.random.default_rng(2)
+    parts = [angles_of(generator, 50), angles_of(generator, 80)]
+    one = orthonormal(linear_basis((0, 1)), parts, [REFERENCE, 2 * REFERENCE])
+    other = orthonormal(linear_basis((0, 1)), [parts[1][::-1], parts[0]], [2 * REFERENCE, REFERENCE])
+    np.testing.assert_allclose(one.mixing, other.mixing, rtol=1e-10)
+
+
+def test_derivative_of_the_mean_is_that_of_central_differences() -> None:
+    generator = np.random.default_rng(3)
+    artifact = artifact_of(generator)
+    angles = angles_of(generator, 5)
+
+    def mean(change: FloatArray) -> FloatArray:
+        return artifact.moments(angles + change.reshape(2, 3)).mean
+
+    expected = central_difference(mean, 6).reshape(5, 6, 2, 3)
+    got = artifact.moments(angles).mean_derivative
+    np.testing.assert_allclose(got, expected, rtol=1e-6, atol=1e-9)
+    assert np.abs(got[..., 0]).min() > 1e-5
+    assert not got[..., 1:].any()
+
+
+def test_moments_are_those_of_the_weights_by_dense_algebra() -> None:
+    generator = np.random.default_rng(4)
+    artifact = artifact_of(generator)
+    angles = angles_of(generator, 7)
+    moments = artifact.moments(angles)
+    for frame, z in enumerate(moments.features):
+        design = np.kron(z, np.eye(6))
+        np.testing.assert_allclose(
+            moments.mean[frame], design @ artifact.weights.mean.reshape(-1), rtol=1e-12
+        )
+        expected = design @ artifact.constant_covariance @ design.T + artifact.residual
+        np.testing.assert_allclose(moments.covariance[frame], expected, rtol=1e-10, atol=1e-18)
+    np.testing.assert_array_equal(moments.features, artifact.basis.values(angles, REFERENCE))
+    np.testing.assert_array_equal(moments.features[:, 0], 1.0)
+
+
+def test_covariance_is_positive_even_far_outside_the_data() -> None:
+    generator = np.random.default_rng(5)
+    artifact = replace(artifact_of(generator), residual=np.zeros((6, 6)))
+    far = np.concatenate([angles_of(generator, 20), 10.0 * angles_of(generator, 20), REFERENCE[None]])
+    covariance = artifact.moments(far).covariance
+    np.testing.assert_allclose(covariance, np.swapaxes(covariance, 1, 2), rtol=1e-12)
+    values = np.linalg.eigvalsh(covariance)
+    assert (values[:, 0] > -1e-14 * values[:, -1]).all()
+
+
+def test_population_mean_is_zero_at_the_reference_posture() -> None:
+    """Of a subject never imaged, exactly; only the spread of the constant and the residual are left there."""
+    generator = np.random.default_rng(6)
+    hierarchy = made.random_hierarchy(generator, 5, 6)
+    mean = generator.standard_normal((5, 6))
+    drawn = made.draw_trials(generator, hierarchy, [2, 2, 2], 8, mean=mean)
+    fixed = np.arange(5) == 0
+    known = without_subject(hierarchy, made.statistics_of(drawn), fixed, "")
+    weights = new_subject(known, 1.3)
+    assert np.abs(weights.mean[1:]).max() > 0.5
+    artifact = LinearArtifact(learned_basis(generator), weights, hierarchy.residual, 0.05, REFERENCE)
+    moments = artifact.moments(REFERENCE[None])
+    assert not moments.mean.any()
+    np.testing.assert_array_equal(moments.features, [[1.0, 0, 0, 0, 0]])
+    constant = known.subject_covariance[:6, :6] + known.trial_covariance[:6, :6]
+    np.testing.assert_allclose(moments.covariance[0], 1.3 * constant + hierarchy.residual, rtol=1e-12)
+
+
+def test_every_frame_stands_for_itself() -> None:
+    generator = np.random.default_rng(7)
+    artifact = artifact_of(generator)
+    angles = angles_of(generator, 4)
+    whole, single = artifact.moments(angles), artifact.moments(angles[2:3])
+    for name in ("mean", "mean_derivative", "features", "covariance"):
+        np.testing.assert_allclose(getattr(whole, name)[2:3], getattr(single, name), rtol=1e-12, atol=1e-20)
+
+
+@pytest.mark.parametrize("joints", [0, 2])
+def test_isotropic_artifact_is_least_squares_in_the_form_of_a_prior(joints: int) -> None:
+    artifact = IsotropicArtifact(outputs=6, sd=0.003)
+    moments = artifact.moments(np.zeros((4, joints, 3)))
+    assert moments.mean.shape == (4, 6)
+    assert moments.mean_derivative.shape == (4, 6, joints, 3)
+    assert moments.features.shape == (4, 0)
+    assert not moments.mean.any()
+    assert not moments.mean_derivative.any()
+    np.testing.assert_allclose(moments.covariance, np.broadcast_to(9e-6 * np.eye(6), (4, 6, 6)), rtol=1e-14)
+    assert artifact.constant_covariance.shape == (0, 0)
+    assert artifact.time_constant == 0.0
