@@ -17,7 +17,7 @@ from rich.console import Console
 
 from sta_prior import words
 from sta_prior.errors import StaPriorError, message
-from sta_prior.prior import DEFAULT_FAMILY, FAMILIES
+from sta_prior.prior import DEFAULT_FAMILY, known_families
 from sta_prior.screen import Screen, check_target, warnings_as_notes
 from sta_prior.solve import DEFAULT_ESTIMATOR, ESTIMATORS
 
@@ -81,7 +81,7 @@ def learn(
     pairs: Annotated[Path, typer.Argument(metavar="PAIRS.nc", help="Paired data.")],
     out: Annotated[Path, typer.Option("--out", metavar="PRIOR.nc", help="File to write.")],
     family: Annotated[
-        str, typer.Option("--family", metavar="NAME", help=f"One of: {', '.join(FAMILIES)}.")
+        str, typer.Option("--family", metavar="NAME", help=f"One of: {', '.join(known_families())}.")
     ] = (DEFAULT_FAMILY),
     hold_out: Annotated[
         str, typer.Option("--hold-out", metavar="ID,…", help="Subjects not to learn from.")

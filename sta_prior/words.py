@@ -124,11 +124,7 @@ def prior_lines(prior: Prior, found: xr.Dataset | None = None) -> list[Any]:
     for activity, counts in by_activity.items():
         lines.append(f"  {activity}: {len(counts)} trials, {sum(counts)} frames with bone truth")
     for name, model in prior.segments.items():
-        residual = 1000 * float(np.sqrt(np.diag(model.hierarchy.residual).mean()))
-        lines.append(
-            f"  {name}: {' '.join(model.markers)}; residual {residual:.1f} mm SD per axis, decay time "
-            f"{model.time_constant:.3f} s; fit: {model.hierarchy.stop_reason}"
-        )
+        lines.append(f"  {name}: {' '.join(model.markers)}; {model.describe()}")
     table = validation_table(prior.validation)
     if table is None:
         lines.append("Not validated: one subject with one trial leaves nothing to leave out.")
@@ -169,9 +165,8 @@ def prior_summary(prior: Prior, path: Path, found: xr.Dataset | None = None) -> 
         model = prior.segments[str(segment)]
         segments[str(segment)] = {
             "markers": list(model.markers),
-            "time_constant_s": model.time_constant,
             "inflation": model.inflation,
-            "stop_reason": model.hierarchy.stop_reason,
+            "learned": model.describe(),
             **_figures(data, index),
         }
     others = {}

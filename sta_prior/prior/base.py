@@ -13,27 +13,13 @@ from pathlib import Path
 import numpy as np
 import xarray as xr
 
-from sta_prior.checks import FloatArray, IntArray, nearest
+from sta_prior.checks import FloatArray, nearest
 from sta_prior.errors import MismatchError, StaPriorWarning, message
 from sta_prior.pairs.pairing import segment_side
-from sta_prior.prior.artifact import FeatureArtifact
-from sta_prior.prior.basis import Basis, Term
-from sta_prior.prior.hierarchy import (
-    Hierarchy,
-    TrialStatistics,
-    Weights,
-    new_subject,
-    subject_posterior,
-    trial_posterior,
-    unison_covariance,
-    without_subject,
-)
+from sta_prior.prior.family import Own, Posture, SegmentModel, restrict
 from sta_prior.prior.interface import Artifact
-from sta_prior.prior.statistics import mirror_signs, segment_frames, summarise
+from sta_prior.prior.statistics import SegmentFrames, segment_frames
 from sta_prior.study import Lab, Trial
-
-MAGNITUDE_SD = {"thigh": 0.010, "shank": 0.006}
-DEFAULT_SD = 0.008
 
 
 @dataclass(frozen=True)
@@ -56,30 +42,6 @@ class LearnedTrial:
     activity: str
     digest: str
     times: FloatArray
-
-
-@dataclass(frozen=True)
-class SegmentModel:
-    """What was learned of one segment.
-
-    markers: in output order; layout: (m, 3) m, mean reference positions, right side; basis, hierarchy,
-    trials: of the linear family; time_constant: s; inflation: factor on the spread of a new subject's
-    trial-constant weights, from left-out subjects.
-    """
-
-    name: str
-    markers: tuple[str, ...]
-    layout: FloatArray
-    basis: Basis
-    hierarchy: Hierarchy
-    trials: tuple[TrialStatistics, ...]
-    time_constant: float
-    inflation: float = 1.0
-
-    @property
-    def magnitude(self) -> FloatArray:
-        """Covariance that the spread grows by, far beyond the training data, (n, n) m²."""
-        return MAGNITUDE_SD.get(self.name, DEFAULT_SD) ** 2 * unison_covariance(3 * len(self.markers), 0.7)
 
 
 @dataclass(frozen=True)
@@ -168,19 +130,23 @@ class Prior:
         self._warn_of_a_stranger(trial)
         reference = trial.subject.reference()
         artifacts: dict[str, Artifact] = {}
-        for segment in lab.segments:
+        mirror = np.array([1.0, 1.0, -1.0])
+        for index, segment in enumerate(lab.segments):
             model = self._match_segment(segment.name, segment.markers, lab)
-            weights = self._weights(model, trial, own_data)
-            first = [3 * model.markers.index(marker) for marker in segment.markers]
-            outputs = (np.array(first)[:, None] + np.arange(3)).reshape(-1)
-            artifacts[segment.name] = _select(
-                model,
-                weights,
-                outputs,
-                joint_columns,
-                reference.angles,
-                segment_side(lab, segment.name),
+            side = segment_side(lab, segment.name)
+            own_markers = reference.markers[lab.marker_segment == index]
+            posture = Posture(
+                reference.angles[joint_columns],
+                own_markers * mirror if side == "left" else own_markers,
+                trial.activity,
             )
+            first = [
+                3 * (model.markers.index(marker) if model.markers else position)
+                for position, marker in enumerate(segment.markers)
+            ]
+            outputs = (np.array(first)[:, None] + np.arange(3)).reshape(-1)
+            inner = self._artifact(model, posture, trial, own_data)
+            artifacts[segment.name] = restrict(inner, outputs, side, joint_columns, len(lab.joints))
         times, words = self._what_informs(trial, own_data)
         return Binding(artifacts, times, words)
 
@@ -242,7 +208,7 @@ class Prior:
                 )
             )
         model = self.segments[name]
-        unknown = [marker for marker in markers if marker not in model.markers]
+        unknown = [marker for marker in markers if model.markers and marker not in model.markers]
         if unknown:
             raise MismatchError(
                 message(
@@ -277,38 +243,26 @@ class Prior:
         ]
         return personal.isel(trial=new)
 
-    def _weights(self, model: SegmentModel, trial: Trial, own_data: xr.Dataset | None) -> Weights:
+    def _artifact(
+        self, model: SegmentModel, posture: Posture, trial: Trial, own_data: xr.Dataset | None
+    ) -> Artifact:
         subject = trial.subject.id
-        wants_own = own_data is not None or (self.is_personal and subject in self.subjects)
-        if not wants_own:
-            return new_subject(model.hierarchy, model.inflation)
-        own = [item for item in model.trials if item.subject == subject]
-        hierarchy = model.hierarchy
-        if own:
-            hierarchy = without_subject(hierarchy, list(model.trials), model.basis.relative_variance, subject)
+        if own_data is None and not (self.is_personal and model.knows(subject)):
+            return model.for_new_subject(posture)
+        frames: list[SegmentFrames] = []
         if own_data is not None and own_data.sizes["trial"]:
             dof = {joint.name: joint.dof for joint in self.joints}
-            frames = segment_frames(own_data, model.name, model.markers, dof)
             # Another recording may bear the name of one that the prior learned from: the digest tells.
             names = self._digests_by_name(own_data)
-            own += [
-                summarise(replace(item, trial=names[item.trial]), model.basis, model.time_constant)
-                for item in frames
+            frames = [
+                replace(item, trial=names[item.trial])
+                for item in segment_frames(own_data, model.name, model.markers, dof)
             ]
-        if not own:
-            return new_subject(model.hierarchy, model.inflation)
         # A personal prior's own subject needs no widening for subjects that were not imaged.
-        factor = 1.0 if self.is_personal and subject in self.subjects else model.inflation
-        wider = replace(
-            hierarchy,
-            subject_features=factor * hierarchy.subject_features,
-            trial_features=factor * hierarchy.trial_features,
+        widened = not (self.is_personal and subject in self.subjects)
+        return model.for_subject(
+            posture, Own(subject, frames, self._trial_key(trial, own_data) or "", widened)
         )
-        key = self._trial_key(trial, own_data)
-        if key is None:
-            belief = subject_posterior(wider, own)
-            return Weights(belief.mean, belief.covariance + wider.trial_covariance)
-        return trial_posterior(wider, own, key)
 
     def _trial_key(self, trial: Trial, own_data: xr.Dataset | None) -> str | None:
         """Name under which this very trial's frames were learned; None if they were not."""
@@ -345,31 +299,3 @@ class Prior:
             if subject in self.subjects:
                 words = f"a prior of {len(self.subjects)} subject(s), this one among them"
         return informed, words
-
-
-def _select(
-    model: SegmentModel,
-    weights: Weights,
-    outputs: IntArray,
-    joint_columns: list[int],
-    reference_angles: FloatArray,
-    side: str,
-) -> Artifact:
-    """Keep a trial's markers, mirror to its side, and point the basis at the lab's joints."""
-    count, n = weights.mean.shape
-    signs = mirror_signs(len(model.markers)) if side == "left" else np.ones(n)
-    both = np.tile(signs, count)
-    keep = (n * np.arange(count)[:, None] + outputs).reshape(-1)
-    covariance = (weights.covariance * np.outer(both, both))[np.ix_(keep, keep)]
-    residual = (model.hierarchy.residual * np.outer(signs, signs))[np.ix_(outputs, outputs)]
-    terms = tuple(Term(joint_columns[term.joint], term.dof, term.power) for term in model.basis.terms)
-    waves = tuple(replace(wave, joint=joint_columns[wave.joint]) for wave in model.basis.waves)
-    reaches = tuple(replace(reach, joint=joint_columns[reach.joint]) for reach in model.basis.reaches)
-    return FeatureArtifact(
-        basis=replace(model.basis, terms=terms, waves=waves, reaches=reaches),
-        weights=Weights((weights.mean * signs)[:, outputs], covariance),
-        residual=residual,
-        time_constant=model.time_constant,
-        reference=reference_angles,
-        magnitude=(model.magnitude * np.outer(signs, signs))[np.ix_(outputs, outputs)],
-    )

@@ -13,54 +13,30 @@ import xarray as xr
 
 from sta_prior.errors import InputError, message
 from sta_prior.io.netcdf import dataset_digest, read_dataset, write_dataset
-from sta_prior.prior.base import JointLabel, LearnedTrial, Prior, SegmentModel
-from sta_prior.prior.basis import Basis, Term
-from sta_prior.prior.hierarchy import Block, Hierarchy, TrialStatistics, Weights
+from sta_prior.prior.base import JointLabel, LearnedTrial, Prior
+from sta_prior.prior.families import find_family
+from sta_prior.prior.family import SegmentModel, Values, Variable
 
-_ONE, _METRE, _SQUARE = {"units": "1"}, {"units": "m"}, {"units": "m2"}
 Variables = dict[str, tuple[tuple[str, ...], object, dict[str, str]]]
+_ONE = {"units": "1"}
 
 
 def _segment_variables(name: str, model: SegmentModel) -> Variables:
-    fit = model.hierarchy
-    blocks = [(trial, block) for trial in model.trials for block in trial.blocks]
-    feature, output, weight = f"feature_{name}", f"output_{name}", f"weight_{name}"
-    feature2, output2, weight2 = f"feature2_{name}", f"output2_{name}", f"weight2_{name}"
-    block, term, marker = f"block_{name}", f"term_{name}", f"marker_{name}"
-
-    def stack(field: str) -> object:
-        return np.array([getattr(item, field) for _, item in blocks])
-
-    terms = model.basis.terms
-    items: Variables = {
-        "layout": ((marker, "axis"), model.layout, _METRE),
-        "term_joint": ((term,), np.array([t.joint for t in terms], dtype=np.int64), _ONE),
-        "term_dof": ((term,), np.array([t.dof for t in terms], dtype=np.int64), _ONE),
-        "term_power": ((term,), np.array([t.power for t in terms], dtype=np.int64), _ONE),
-        "term_mixing": ((term, f"term2_{name}"), model.basis.mixing, _ONE),
-        "population_mean": ((feature, output), fit.population.mean, _METRE),
-        "population_covariance": ((weight, weight2), fit.population.covariance, _SQUARE),
-        "subject_features": ((feature, feature2), fit.subject_features, _SQUARE),
-        "subject_outputs": ((output, output2), fit.subject_outputs, _ONE),
-        "trial_features": ((feature, feature2), fit.trial_features, _SQUARE),
-        "trial_outputs": ((output, output2), fit.trial_outputs, _ONE),
-        "residual": ((output, output2), fit.residual, _SQUARE),
-        "observed_residual": ((output, output2), fit.observed_residual, _SQUARE),
-        "iterations": ((), np.int64(fit.iterations), _ONE),
-        "time_constant": ((), np.float64(model.time_constant), {"units": "s"}),
-        "inflation": ((), np.float64(model.inflation), _ONE),
-        "block_seen": ((block, output), np.asarray(stack("seen"), dtype=np.int8), _ONE),
-        "block_feature_gram": ((block, feature, feature2), stack("feature_gram"), _ONE),
-        "block_cross": ((block, feature, output), stack("cross"), _METRE),
-        "block_output_gram": ((block, output, output2), stack("output_gram"), _SQUARE),
-        "block_noise_gram": ((block, output, output2), stack("noise_gram"), _SQUARE),
-        "block_weight": ((block,), stack("weight"), _ONE),
-        "block_frames": ((block,), np.asarray(stack("frames"), dtype=np.int64), _ONE),
-        "block_subject": ((block,), np.array([trial.subject for trial, _ in blocks]), _ONE),
-        "block_trial": ((block,), np.array([trial.trial for trial, _ in blocks]), _ONE),
-        "markers": ((marker,), np.array(model.markers), _ONE),
+    """What a model stores, under the segment's name; layout, markers and inflation are every family's."""
+    stored = {
+        **model.variables(),
+        "markers": Variable(("marker",), np.array(model.markers, dtype=str)),
+        "layout": Variable(("marker", "axis"), model.layout, "m"),
+        "inflation": Variable((), np.array(model.inflation)),
     }
-    return {f"{name}_{key}": value for key, value in items.items()}
+    return {
+        f"{name}_{key}": (
+            tuple(dim if dim == "axis" else f"{dim}_{name}" for dim in variable.dims),
+            variable.values,
+            {"units": variable.units},
+        )
+        for key, variable in stored.items()
+    }
 
 
 def prior_to_dataset(prior: Prior) -> xr.Dataset:
@@ -84,7 +60,6 @@ def prior_to_dataset(prior: Prior) -> xr.Dataset:
         "family": prior.family,
         "joints": json.dumps([label.__dict__ for label in prior.joints]),
         "notes": json.dumps(list(prior.notes), ensure_ascii=False),
-        "stop_reasons": json.dumps({n: m.hierarchy.stop_reason for n, m in prior.segments.items()}),
         "covariates": json.dumps({name: dict(values) for name, values in prior.covariates.items()}),
         "pairs_digest": prior.pairs_digest,
     }
@@ -103,53 +78,14 @@ def write_prior(path: Path, prior: Prior) -> None:
     write_dataset(path, prior_to_dataset(prior), "prior", {"pairs": prior.pairs_digest})
 
 
-def _read_segment(data: xr.Dataset, name: str, stop_reason: str) -> SegmentModel:
-    def get(key: str) -> np.ndarray[tuple[int, ...], np.dtype[np.float64]]:
-        return np.asarray(data[f"{name}_{key}"].values, dtype=np.float64)
-
-    def texts(key: str) -> list[str]:
-        return [str(value) for value in data[f"{name}_{key}"].values]
-
-    grouped: dict[tuple[str, str], list[Block]] = {}
-    arrays = {
-        key: get(f"block_{key}")
-        for key in ("seen", "feature_gram", "cross", "output_gram", "noise_gram", "weight", "frames")
+def _stored(data: xr.Dataset, name: str) -> dict[str, Values]:
+    """Arrays that a segment's model stored, by their own names."""
+    prefix = f"{name}_"
+    return {
+        str(key).removeprefix(prefix): np.asarray(data[key].values)
+        for key in data.variables
+        if str(key).startswith(prefix)
     }
-    for index, key in enumerate(zip(texts("block_subject"), texts("block_trial"), strict=True)):
-        grouped.setdefault(key, []).append(
-            Block(
-                seen=arrays["seen"][index] > 0,
-                feature_gram=arrays["feature_gram"][index],
-                cross=arrays["cross"][index],
-                output_gram=arrays["output_gram"][index],
-                noise_gram=arrays["noise_gram"][index],
-                weight=float(arrays["weight"][index]),
-                frames=int(arrays["frames"][index]),
-            )
-        )
-    terms = zip(get("term_joint"), get("term_dof"), get("term_power"), strict=True)
-    return SegmentModel(
-        name=name,
-        markers=tuple(texts("markers")),
-        layout=get("layout"),
-        basis=Basis(
-            tuple(Term(int(joint), int(dof), int(power)) for joint, dof, power in terms), get("term_mixing")
-        ),
-        hierarchy=Hierarchy(
-            population=Weights(get("population_mean"), get("population_covariance")),
-            subject_features=get("subject_features"),
-            subject_outputs=get("subject_outputs"),
-            trial_features=get("trial_features"),
-            trial_outputs=get("trial_outputs"),
-            residual=get("residual"),
-            observed_residual=get("observed_residual"),
-            iterations=int(get("iterations")),
-            stop_reason=stop_reason,
-        ),
-        trials=tuple(TrialStatistics(s, t, tuple(blocks)) for (s, t), blocks in grouped.items()),
-        time_constant=float(get("time_constant")),
-        inflation=float(get("inflation")),
-    )
 
 
 def load_prior(path: str | Path) -> Prior:
@@ -170,12 +106,9 @@ def load_prior(path: str | Path) -> Prior:
 
 
 def _from_dataset(data: xr.Dataset) -> Prior:
-    if data.attrs["family"] != "linear":
-        raise ValueError(f"family {data.attrs['family']} is not known here")
-    reasons = json.loads(data.attrs["stop_reasons"])
-    segments = {
-        str(name): _read_segment(data, str(name), reasons[str(name)]) for name in data["segment_names"].values
-    }
+    family = find_family(str(data.attrs["family"]), "family of the prior")
+    names = [str(name) for name in data["segment_names"].values]
+    segments = {name: family.read(name, _stored(data, name)) for name in names}
     ends = np.cumsum(data["learned_frames"].values)
     times = np.split(np.asarray(data["learned_time"].values, dtype=np.float64), ends[:-1])
     columns = [
@@ -183,9 +116,9 @@ def _from_dataset(data: xr.Dataset) -> Prior:
         for field in ("subject", "trial", "activity", "digest")
     ]
     trials = tuple(LearnedTrial(*row) for row in zip(*columns, times, strict=True))
-    names = [name for name in data.variables if str(name).startswith("validation_")]
-    validation = data[names].rename(
-        {name: str(name).removeprefix("validation_") for name in {*names, *data[names].dims}}
+    figures = [name for name in data.variables if str(name).startswith("validation_")]
+    validation = data[figures].rename(
+        {name: str(name).removeprefix("validation_") for name in {*figures, *data[figures].dims}}
     )
     validation.attrs = {}
     joints = [JointLabel(**{**item, "dof": tuple(item["dof"])}) for item in json.loads(data.attrs["joints"])]

@@ -7,7 +7,6 @@ from __future__ import annotations
 
 import json
 from collections.abc import Sequence
-from dataclasses import replace
 from typing import cast
 
 import numpy as np
@@ -17,22 +16,11 @@ from sta_prior.angles import JointConvention, JointKind
 from sta_prior.checks import FloatArray, nearest
 from sta_prior.errors import InputError, message
 from sta_prior.io.netcdf import dataset_digest
-from sta_prior.prior.base import JointLabel, LearnedTrial, Prior, SegmentModel
-from sta_prior.prior.basis import orthonormal
-from sta_prior.prior.fitting import fit_hierarchy
-from sta_prior.prior.linear import linear_basis
-from sta_prior.prior.reduced_rank import reduced_rank_basis
-from sta_prior.prior.statistics import (
-    SegmentFrames,
-    adjacent_joints,
-    estimate_time_constant,
-    segment_frames,
-    summarise,
-)
+from sta_prior.prior.base import JointLabel, LearnedTrial, Prior
+from sta_prior.prior.families import DEFAULT_FAMILY, find_family
+from sta_prior.prior.family import SegmentData, SegmentModel
+from sta_prior.prior.statistics import SegmentFrames, adjacent_joints, segment_frames
 from sta_prior.prior.validate import calibrate_inflation, leave_one_out, summarise_validation
-
-FAMILIES = ("linear", "reduced-rank-gp")
-DEFAULT_FAMILY = "linear"
 
 
 def joint_labels(pairs: xr.Dataset) -> tuple[JointLabel, ...]:
@@ -84,9 +72,7 @@ def _layout(pairs: xr.Dataset, segment: str, markers: Sequence[str]) -> FloatArr
     return mean
 
 
-def _learn_segment(
-    pairs: xr.Dataset, segment: str, joints: tuple[JointLabel, ...], family: str
-) -> SegmentModel:
+def _segment_data(pairs: xr.Dataset, segment: str, joints: tuple[JointLabel, ...]) -> SegmentData:
     markers = tuple(
         str(marker)
         for marker, own in zip(pairs["marker"].values, pairs["marker_segment"].values, strict=True)
@@ -98,26 +84,14 @@ def _learn_segment(
         raise InputError(
             message(("pairs", segment), "no frame has both a visible marker and all joint angles")
         )
-    adjacent = adjacent_joints(pairs, segment, tuple(dof))
-    angles, references = [item.angles for item in frames], [item.reference_angles for item in frames]
-    if family == "linear":
-        basis = linear_basis(adjacent)
-    else:
-        basis = reduced_rank_basis(adjacent, angles, references)
-    basis = orthonormal(basis, angles, references)
-    constant = estimate_time_constant(frames, basis)
-    trials = tuple(summarise(item, basis, constant) for item in frames)
     _refuse_unseen(segment, markers, frames)
-    model = SegmentModel(
+    return SegmentData(
         name=segment,
         markers=markers,
         layout=_layout(pairs, segment, markers),
-        basis=basis,
-        hierarchy=fit_hierarchy(list(trials), basis.relative_variance, basis.total_relative_variance),
-        trials=trials,
-        time_constant=constant,
+        frames=frames,
+        adjacent=adjacent_joints(pairs, segment, tuple(dof)),
     )
-    return model
 
 
 def _refuse_unseen(segment: str, markers: tuple[str, ...], frames: list[SegmentFrames]) -> None:
@@ -139,7 +113,7 @@ def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[st
     Parameters
     ----------
     pairs : paired data, as from `pair`
-    family : "linear"
+    family : "reduced-rank-gp", "linear", or the name of a plug-in
     hold_out : subjects that must not be learned from
 
     Returns
@@ -150,31 +124,22 @@ def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[st
     ------
     InputError : unknown family or subject, or no usable frame.
     """
-    if family not in FAMILIES:
-        raise InputError(
-            message(
-                "--family",
-                f"no family {family} here, known: {', '.join(FAMILIES)}",
-                nearest(family, FAMILIES),
-            )
-        )
+    chosen_family = find_family(family)
     chosen = _without(pairs, hold_out) if hold_out else pairs
     joints = joint_labels(chosen)
     if not joints:
         raise InputError(message("pairs", "no joint, so no angle can drive the artifact", "Add a joint."))
-    dof = {joint.name: joint.dof for joint in joints}
     segments: dict[str, SegmentModel] = {}
-    figures = []
+    figures, used = [], set()
     for name in (str(segment) for segment in chosen["segment"].values):
-        model = _learn_segment(chosen, name, joints, family)
-        frames = segment_frames(chosen, name, model.markers, dof)
-        left_out = leave_one_out(model, frames)
-        model = replace(model, inflation=calibrate_inflation(left_out))
-        segments[name] = model
+        data = _segment_data(chosen, name, joints)
+        model = chosen_family.learn(data)
+        left_out = leave_one_out(model, data.frames)
+        segments[name] = model.with_inflation(calibrate_inflation(left_out))
         # Trials left out of one subject are predicted with that subject's own weights, unwidened.
         by_subject = bool(left_out) and left_out[0].by_subject
-        figures.append(summarise_validation(name, left_out, model.inflation if by_subject else 1.0))
-    used = {(item.subject, item.trial) for model in segments.values() for item in model.trials}
+        figures.append(summarise_validation(name, left_out, segments[name].inflation if by_subject else 1.0))
+        used |= {(item.subject, item.trial) for item in data.frames}
     trials = tuple(
         LearnedTrial(
             subject=str(chosen["trial_subject"].values[index]),

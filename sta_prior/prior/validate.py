@@ -14,7 +14,8 @@ Gneiting & Raftery (2007), JASA 102, 359–378 (CRPS).
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from collections.abc import Sequence
+from dataclasses import dataclass
 
 import numpy as np
 import xarray as xr
@@ -23,15 +24,12 @@ from scipy.stats import t as student
 
 from sta_prior.checks import FloatArray
 from sta_prior.gaussian import crps_normal
-from sta_prior.prior.artifact import FeatureArtifact
-from sta_prior.prior.base import SegmentModel
-from sta_prior.prior.fitting import FitSettings, fit_hierarchy
-from sta_prior.prior.hierarchy import Weights, new_subject, trial_posterior, without_subject
-from sta_prior.prior.statistics import SegmentFrames, summarise
+from sta_prior.prior.family import Own, Posture, SegmentModel
+from sta_prior.prior.interface import Artifact
+from sta_prior.prior.statistics import SegmentFrames
 
 LEVELS = (0.50, 0.90, 0.95)
 LARGEST_INFLATION = 4.0
-_REFIT_ITERATIONS = 10
 
 
 @dataclass(frozen=True)
@@ -51,63 +49,50 @@ class LeftOut:
     by_subject: bool
 
 
-def _predict(model: SegmentModel, frames: SegmentFrames, weights: Weights, unit: str, kind: bool) -> LeftOut:
-    artifact = FeatureArtifact(
-        model.basis,
-        weights,
-        model.hierarchy.residual,
-        model.time_constant,
-        frames.reference_angles,
-        model.magnitude,
-    )
+def _predict(artifact: Artifact, frames: SegmentFrames, unit: str, by_subject: bool) -> LeftOut:
     moments = artifact.moments(frames.angles)
     total = np.einsum("faa->fa", moments.covariance)
-    rest = np.diag(model.hierarchy.residual) + np.einsum("faa->fa", frames.noise)
+    residual = np.diag(artifact.residual)
+    rest = residual + np.einsum("faa->fa", frames.noise)
     seen = np.isfinite(frames.displacement)
     return LeftOut(
         unit=unit,
         error=(frames.displacement - moments.mean)[seen],
-        constant=(total - np.diag(model.hierarchy.residual))[seen],
+        constant=np.maximum(total - residual, 0.0)[seen],
         rest=rest[seen],
         size=frames.displacement[seen],
-        by_subject=kind,
+        by_subject=by_subject,
     )
 
 
-def leave_one_out(model: SegmentModel, frames: list[SegmentFrames]) -> list[LeftOut]:
+def _posture(model: SegmentModel, frames: SegmentFrames) -> Posture:
+    return Posture(frames.reference_angles, model.layout)
+
+
+def leave_one_out(model: SegmentModel, frames: Sequence[SegmentFrames]) -> list[LeftOut]:
     """Predict every subject from the others; with one subject, every trial from its others.
 
-    The covariances are fitted again without the left-out subject, from where they stood.
+    The model is learned again without the left-out unit, from where it stood.
     """
     subjects = sorted({item.subject for item in frames})
-    trials = list(model.trials)
-    relative, total = model.basis.relative_variance, model.basis.total_relative_variance
-    settings = FitSettings(maximum_iterations=_REFIT_ITERATIONS)
     result = []
     if len(subjects) > 1:
         for name in subjects:
-            others = [trial for trial in trials if trial.subject != name]
-            hierarchy = fit_hierarchy(others, relative, total, model.hierarchy, settings)
-            weights = new_subject(hierarchy)
-            refitted = replace(model, hierarchy=hierarchy)
-            parts = [_predict(refitted, item, weights, name, True) for item in frames if item.subject == name]
-            result.append(_merge(parts))
+            others = model.refitted([item for item in frames if item.subject != name])
+            result += predict_others(others, [item for item in frames if item.subject == name])
         return result
     if len(frames) < 2:
         return []
-    hierarchy = without_subject(model.hierarchy, trials, relative, subjects[0])
     for item in frames:
-        own = [
-            summarise(other, model.basis, model.time_constant)
-            for other in frames
-            if other.trial != item.trial
-        ]
-        weights = trial_posterior(hierarchy, own, item.trial)
-        result.append(_predict(model, item, weights, item.trial, False))
+        rest = [other for other in frames if other.trial != item.trial]
+        artifact = model.refitted(rest).for_subject(
+            _posture(model, item), Own(subjects[0], (), "", widened=False)
+        )
+        result.append(_predict(artifact, item, item.trial, False))
     return result
 
 
-def predict_others(model: SegmentModel, frames: list[SegmentFrames]) -> list[LeftOut]:
+def predict_others(model: SegmentModel, frames: Sequence[SegmentFrames]) -> list[LeftOut]:
     """Predict subjects that the prior has not learned from, one unit a subject.
 
     Parameters
@@ -115,9 +100,14 @@ def predict_others(model: SegmentModel, frames: list[SegmentFrames]) -> list[Lef
     model : of one segment
     frames : of subjects other than those it learned from
     """
-    weights = new_subject(model.hierarchy)
     return [
-        _merge([_predict(model, item, weights, name, True) for item in frames if item.subject == name])
+        _merge(
+            [
+                _predict(model.for_new_subject(_posture(model, item), 1.0), item, name, True)
+                for item in frames
+                if item.subject == name
+            ]
+        )
         for name in sorted({item.subject for item in frames})
     ]
 

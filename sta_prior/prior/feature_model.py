@@ -1,0 +1,267 @@
+"""Families that are linear in features of the joint angles: ``linear`` and ``reduced-rank-gp``.
+
+Kernel: arrays in, arrays out. Conventions: docs/conventions.md. The model: prior/hierarchy.py; the
+features: prior/basis.py.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from sta_prior.checks import FloatArray
+from sta_prior.prior.artifact import FeatureArtifact
+from sta_prior.prior.basis import Basis, Reach, Term, Wave, orthonormal
+from sta_prior.prior.family import Own, Posture, SegmentData, Values, Variable
+from sta_prior.prior.fitting import FitSettings, fit_hierarchy
+from sta_prior.prior.hierarchy import (
+    Block,
+    Hierarchy,
+    TrialStatistics,
+    Weights,
+    new_subject,
+    subject_posterior,
+    trial_posterior,
+    without_subject,
+)
+from sta_prior.prior.linear import linear_basis
+from sta_prior.prior.reduced_rank import reduced_rank_basis
+from sta_prior.prior.statistics import SegmentFrames, estimate_time_constant, summarise
+
+REFIT = FitSettings(maximum_iterations=10)
+
+
+@dataclass(frozen=True)
+class FeatureModel:
+    """Learned weights of features, with subject and trial levels.
+
+    trials: sufficient statistics of what was learned from; time_constant: s; magnitude: (n, n) m², what the
+    covariance gains far beyond the training data.
+    """
+
+    name: str
+    markers: tuple[str, ...]
+    layout: FloatArray
+    basis: Basis
+    hierarchy: Hierarchy
+    trials: tuple[TrialStatistics, ...]
+    time_constant: float
+    magnitude: FloatArray
+    inflation: float = 1.0
+
+    def knows(self, subject: str) -> bool:
+        """Whether it learned from this subject."""
+        return any(trial.subject == subject for trial in self.trials)
+
+    def with_inflation(self, inflation: float) -> FeatureModel:
+        """The same model with another factor."""
+        return replace(self, inflation=inflation)
+
+    def refitted(self, frames: Sequence[SegmentFrames]) -> FeatureModel:
+        """Fit the hierarchy to other frames, from where it stood; basis and time constant are kept."""
+        trials = tuple(summarise(item, self.basis, self.time_constant) for item in frames)
+        hierarchy = fit_hierarchy(
+            list(trials),
+            self.basis.relative_variance,
+            self.basis.total_relative_variance,
+            self.hierarchy,
+            REFIT,
+        )
+        return replace(self, hierarchy=hierarchy, trials=trials)
+
+    def _artifact(self, weights: Weights, posture: Posture) -> FeatureArtifact:
+        return FeatureArtifact(
+            self.basis,
+            weights,
+            self.hierarchy.residual,
+            self.time_constant,
+            posture.angles,
+            self.magnitude,
+        )
+
+    def for_new_subject(self, posture: Posture, inflation: float | None = None) -> FeatureArtifact:
+        """Artifact of a subject never imaged; the model's own inflation by default."""
+        factor = self.inflation if inflation is None else inflation
+        return self._artifact(new_subject(self.hierarchy, factor), posture)
+
+    def for_subject(self, posture: Posture, own: Own) -> FeatureArtifact:
+        """Artifact of a subject with paired frames of its own.
+
+        Frames that the model learned from are taken out of the population first: nothing counts twice.
+        """
+        known = [trial for trial in self.trials if trial.subject == own.subject]
+        hierarchy = self.hierarchy
+        if known:
+            hierarchy = without_subject(
+                hierarchy, list(self.trials), self.basis.relative_variance, own.subject
+            )
+        known += [summarise(item, self.basis, self.time_constant) for item in own.frames]
+        if not known:
+            return self.for_new_subject(posture)
+        factor = self.inflation if own.widened else 1.0
+        wider = replace(
+            hierarchy,
+            subject_features=factor * hierarchy.subject_features,
+            trial_features=factor * hierarchy.trial_features,
+        )
+        if own.trial:
+            return self._artifact(trial_posterior(wider, known, own.trial), posture)
+        belief = subject_posterior(wider, known)
+        return self._artifact(Weights(belief.mean, belief.covariance + wider.trial_covariance), posture)
+
+    def describe(self) -> str:
+        """One line about what was learned."""
+        residual = 1000.0 * float(np.sqrt(np.diag(self.hierarchy.residual).mean()))
+        return (
+            f"residual {residual:.1f} mm SD per axis, decay time {self.time_constant:.3f} s; "
+            f"fit: {self.hierarchy.stop_reason}"
+        )
+
+    def variables(self) -> dict[str, Variable]:
+        """All that has to be stored, as arrays."""
+        fit, basis = self.hierarchy, self.basis
+        blocks = [(trial, block) for trial in self.trials for block in trial.blocks]
+        features, outputs, weights = ("feature", "feature2"), ("output", "output2"), ("weight", "weight2")
+
+        def stack(field: str, kind: type = float) -> Values:
+            return np.array([getattr(block, field) for _, block in blocks], dtype=kind)
+
+        waves = [
+            [w.joint, w.dof, w.centre, w.limit, w.length, w.count, w.kind == "matern-3/2", w.scale]
+            for w in basis.waves
+        ]
+        reaches = [[r.joint, r.dof, r.low, r.high] for r in basis.reaches]
+        return {
+            "terms": Variable(
+                ("term", "term_field"),
+                np.array([[t.joint, t.dof, t.power] for t in basis.terms], dtype=np.int64).reshape(-1, 3),
+            ),
+            "mixing": Variable(("term", "term2"), basis.mixing),
+            "waves": Variable(("wave", "wave_field"), np.array(waves, dtype=float).reshape(-1, 8)),
+            "reaches": Variable(("reach", "reach_field"), np.array(reaches, dtype=float).reshape(-1, 4)),
+            "population_mean": Variable(("feature", "output"), fit.population.mean, "m"),
+            "population_covariance": Variable(weights, fit.population.covariance, "m2"),
+            "subject_features": Variable(features, fit.subject_features, "m2"),
+            "subject_outputs": Variable(outputs, fit.subject_outputs),
+            "trial_features": Variable(features, fit.trial_features, "m2"),
+            "trial_outputs": Variable(outputs, fit.trial_outputs),
+            "residual": Variable(outputs, fit.residual, "m2"),
+            "observed_residual": Variable(outputs, fit.observed_residual, "m2"),
+            "iterations": Variable((), np.array(fit.iterations, dtype=np.int64)),
+            "stop_reason": Variable((), np.array(fit.stop_reason)),
+            "time_constant": Variable((), np.array(self.time_constant), "s"),
+            "magnitude": Variable(outputs, self.magnitude, "m2"),
+            "block_seen": Variable(("block", "output"), stack("seen").astype(np.int8)),
+            "block_feature_gram": Variable(("block", *features), stack("feature_gram")),
+            "block_cross": Variable(("block", "feature", "output"), stack("cross"), "m"),
+            "block_output_gram": Variable(("block", *outputs), stack("output_gram"), "m2"),
+            "block_noise_gram": Variable(("block", *outputs), stack("noise_gram"), "m2"),
+            "block_weight": Variable(("block",), stack("weight")),
+            "block_frames": Variable(("block",), stack("frames", int)),
+            "block_subject": Variable(("block",), np.array([trial.subject for trial, _ in blocks])),
+            "block_trial": Variable(("block",), np.array([trial.trial for trial, _ in blocks])),
+        }
+
+
+@dataclass(frozen=True)
+class FeatureFamily:
+    """A family told by its basis: adjacent joints, training angles and reference angles to a Basis."""
+
+    name: str
+    basis: Callable[[tuple[int, ...], list[FloatArray], list[FloatArray]], Basis]
+
+    def learn(self, data: SegmentData) -> FeatureModel:
+        """Learn one segment."""
+        angles = [item.angles for item in data.frames]
+        references = [item.reference_angles for item in data.frames]
+        basis = orthonormal(self.basis(data.adjacent, angles, references), angles, references)
+        constant = estimate_time_constant(list(data.frames), basis)
+        trials = tuple(summarise(item, basis, constant) for item in data.frames)
+        hierarchy = fit_hierarchy(list(trials), basis.relative_variance, basis.total_relative_variance)
+        return FeatureModel(
+            name=data.name,
+            markers=data.markers,
+            layout=data.layout,
+            basis=basis,
+            hierarchy=hierarchy,
+            trials=trials,
+            time_constant=constant,
+            magnitude=beyond_data(data.name, data.layout),
+        )
+
+    def read(self, name: str, stored: Mapping[str, Values]) -> FeatureModel:
+        """Make the model of a segment from what its ``variables`` stored."""
+        return read_feature_model(name, stored)
+
+
+def _blocks(stored: Mapping[str, Values]) -> tuple[TrialStatistics, ...]:
+    grouped: dict[tuple[str, str], list[Block]] = {}
+    owners = zip(stored["block_subject"].tolist(), stored["block_trial"].tolist(), strict=True)
+    for index, owner in enumerate(owners):
+        grouped.setdefault(owner, []).append(
+            Block(
+                seen=stored["block_seen"][index] > 0,
+                feature_gram=stored["block_feature_gram"][index],
+                cross=stored["block_cross"][index],
+                output_gram=stored["block_output_gram"][index],
+                noise_gram=stored["block_noise_gram"][index],
+                weight=float(stored["block_weight"][index]),
+                frames=int(stored["block_frames"][index]),
+            )
+        )
+    return tuple(
+        TrialStatistics(subject, trial, tuple(blocks)) for (subject, trial), blocks in grouped.items()
+    )
+
+
+def read_feature_model(name: str, stored: Mapping[str, Values]) -> FeatureModel:
+    """Make a FeatureModel from stored arrays; KeyError where one is missing."""
+    waves = tuple(
+        Wave(
+            int(joint), int(dof), centre, limit, length, int(count),
+            "matern-3/2" if matern else "squared-exponential", scale,
+        )
+        for joint, dof, centre, limit, length, count, matern, scale in stored["waves"].tolist()
+    )  # fmt: skip
+    reaches = tuple(
+        Reach(int(joint), int(dof), low, high) for joint, dof, low, high in stored["reaches"].tolist()
+    )
+    terms = tuple(Term(int(joint), int(dof), int(power)) for joint, dof, power in stored["terms"].tolist())
+    return FeatureModel(
+        name=name,
+        markers=tuple(str(marker) for marker in stored["markers"]),
+        layout=stored["layout"],
+        basis=Basis(terms, stored["mixing"], waves, reaches),
+        hierarchy=Hierarchy(
+            population=Weights(stored["population_mean"], stored["population_covariance"]),
+            subject_features=stored["subject_features"],
+            subject_outputs=stored["subject_outputs"],
+            trial_features=stored["trial_features"],
+            trial_outputs=stored["trial_outputs"],
+            residual=stored["residual"],
+            observed_residual=stored["observed_residual"],
+            iterations=int(stored["iterations"]),
+            stop_reason=str(stored["stop_reason"]),
+        ),
+        trials=_blocks(stored),
+        time_constant=float(stored["time_constant"]),
+        magnitude=stored["magnitude"],
+        inflation=float(stored["inflation"]),
+    )
+
+
+def beyond_data(segment: str, layout: FloatArray) -> FloatArray:
+    """Covariance of the magnitude prior for a segment, (3m, 3m) m²: what the spread grows by off-range."""
+    from sta_prior.prior.hierarchy import unison_covariance
+
+    sd = next((size for word, size in _SIZES.items() if word in segment.lower()), _ANY_SIZE)
+    return sd**2 * unison_covariance(3 * layout.shape[0], 0.7)
+
+
+_SIZES = {"thigh": 0.010, "shank": 0.006}
+_ANY_SIZE = 0.008
+
+LINEAR = FeatureFamily("linear", lambda adjacent, angles, references: linear_basis(adjacent))
+REDUCED_RANK = FeatureFamily("reduced-rank-gp", reduced_rank_basis)
