@@ -90,16 +90,16 @@ def validation_table(data: xr.Dataset, others: bool = False) -> Table | None:
     by_subject = bool(data["by_subject"].values[0])
     rows = []
     for index, segment in enumerate(data["segment"].values):
-        covered = data["coverage"].values[index].mean(axis=0)
+        covered = np.nanmean(data["coverage"].values[index], axis=0)
         row = [str(segment)]
         for column, level in enumerate(data["level"].values):
             low, high = binomial_bound(units, float(level))
             row.append(f"{100 * covered[column]:.0f} ({100 * low:.0f}–{100 * high:.0f})")
         error, zero = data["rms_error"].values[index], data["rms_zero"].values[index]
         row += [
-            f"{1000 * np.sqrt((error**2).mean()):.1f}",
-            f"{1000 * np.sqrt((zero**2).mean()):.1f}",
-            f"{1000 * data['crps'].values[index].mean():.2f}",
+            f"{1000 * np.sqrt(np.nanmean(error**2)):.1f}",
+            f"{1000 * np.sqrt(np.nanmean(zero**2)):.1f}",
+            f"{1000 * np.nanmean(data['crps'].values[index]):.2f}",
             f"{float(data['inflation'].values[index]):.2f}",
         ]
         rows.append(row)
@@ -145,15 +145,15 @@ def _figures(data: xr.Dataset, index: int) -> dict[str, Any]:
     """Validation of one segment: coverage by level, error with and without the prior."""
     if not data.sizes.get("unit", 0):
         return {}
-    covered = data["coverage"].values[index].mean(axis=0)
+    covered = np.nanmean(data["coverage"].values[index], axis=0)
     return {
         "units": [str(unit) for unit in data["unit"].values],
         "coverage": {
             f"{100 * float(level):.0f}": round(float(share), 4)
             for level, share in zip(data["level"].values, covered, strict=True)
         },
-        "rms_error_mm": round(1000 * float(data["rms_error"].values[index].mean()), 3),
-        "rms_without_prior_mm": round(1000 * float(data["rms_zero"].values[index].mean()), 3),
+        "rms_error_mm": round(1000 * float(np.nanmean(data["rms_error"].values[index])), 3),
+        "rms_without_prior_mm": round(1000 * float(np.nanmean(data["rms_zero"].values[index])), 3),
     }
 
 

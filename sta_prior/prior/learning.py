@@ -134,7 +134,7 @@ def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[st
     for name in (str(segment) for segment in chosen["segment"].values):
         data = _segment_data(chosen, name, joints)
         model = chosen_family.learn(data)
-        left_out = leave_one_out(model, data.frames)
+        left_out = leave_one_out(model, data.frames, data.adjacent)
         segments[name] = model.with_inflation(calibrate_inflation(left_out))
         # Trials left out of one subject are predicted with that subject's own weights, unwidened.
         by_subject = bool(left_out) and left_out[0].by_subject

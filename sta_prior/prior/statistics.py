@@ -203,31 +203,28 @@ def summarise(frames: SegmentFrames, basis: Basis, time_constant: float) -> Tria
 
 
 def estimate_time_constant(trials: list[SegmentFrames], basis: Basis) -> float:
-    """Decay time of what the basis leaves over, s, from neighbouring frames of unbroken windows.
+    """Decay time of what the basis leaves over, s, from frames of unbroken windows.
 
-    Each trial is fitted by itself with a weak ridge; the lag-one correlation of the residuals,
-    pooled over trials and outputs, gives the constant. Capped at LONGEST_TIME_CONSTANT.
+    Each trial is fitted by itself with a weak ridge. White noise, of the bone truth or the markers, adds to
+    the variance of the residuals but not to their products at lags of one and two frames, so the ratio of
+    these, pooled over trials and outputs, gives the decay. Capped at LONGEST_TIME_CONSTANT.
     """
-    product, power, noise, steps = 0.0, 0.0, 0.0, []
+    near, far, steps = 0.0, 0.0, []
     for frames in trials:
         features = basis.values(frames.angles, frames.reference_angles)
         outputs = np.where(np.isfinite(frames.displacement), frames.displacement, 0.0)
         seen: BoolArray = np.isfinite(frames.displacement)
         gram = features.T @ features
         ridge = 1e-3 * np.trace(gram) / gram.shape[0] * np.eye(gram.shape[0])
-        residual = np.where(
-            seen, outputs - features @ np.linalg.solve(gram + ridge, features.T @ outputs), 0.0
-        )
-        same = np.diff(frames.window) == 0
-        both = seen[1:] & seen[:-1] & same[:, None]
-        product += float((residual[1:] * residual[:-1])[both].sum())
-        power += float((0.5 * (residual[1:] ** 2 + residual[:-1] ** 2))[both].sum())
-        # Bone-truth noise is white: it adds to the variance, not to the product of neighbours.
-        noise += float(np.einsum("faa->fa", frames.noise)[1:][both].sum())
+        fitted = features @ np.linalg.solve(gram + ridge, features.T @ outputs)
+        residual = np.where(seen, outputs - fitted, 0.0)
+        for lag in (1, 2):
+            same = frames.window[lag:] == frames.window[:-lag]
+            both = seen[lag:] & seen[:-lag] & same[:, None]
+            product = float((residual[lag:] * residual[:-lag])[both].sum())
+            near, far = (near + product, far) if lag == 1 else (near, far + product)
         steps.append(frames.step)
-    power -= noise
-    if power <= 0.0 or product <= 0.0:
+    if near <= 0.0 or far <= 0.0:
         return LONGEST_TIME_CONSTANT
-    correlation = min(product / power, 0.999)
-    constant = -float(np.median(steps)) / np.log(correlation)
+    constant = -float(np.median(steps)) / np.log(min(far / near, 0.999))
     return float(np.clip(constant, 1e-3, LONGEST_TIME_CONSTANT))

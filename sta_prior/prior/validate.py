@@ -23,22 +23,28 @@ from scipy.stats import binom, norm
 from scipy.stats import t as student
 
 from sta_prior.checks import FloatArray
-from sta_prior.gaussian import crps_normal
+from sta_prior.gaussian import crps_normal, log_density, nearest_psd
+from sta_prior.prior.basis import Basis
 from sta_prior.prior.family import Own, Posture, SegmentModel
 from sta_prior.prior.interface import Artifact
+from sta_prior.prior.linear import linear_basis
 from sta_prior.prior.statistics import SegmentFrames
 
 LEVELS = (0.50, 0.90, 0.95)
 LARGEST_INFLATION = 4.0
+PIT_BINS = 10
+SMALLEST_SD = 0.0003
 
 
 @dataclass(frozen=True)
 class LeftOut:
-    """Prediction errors of one left-out unit.
+    """Prediction of one left-out unit.
 
     unit: subject (or trial) left out; error: (values,) m, measured minus predicted; constant,
     rest: (values,) m², variance from trial-constant weights, and from residual and bone truth;
-    size: (values,) m, displacement itself; by_subject: False where only trials could be left out.
+    size: (values,) m, displacement itself; by_subject: False where only trials could be left out;
+    log_score, log_score_zero, log_score_pooled: nats a value, mean log density of whole frames under the
+    prior, under a zero-mean law and under one regression for all subjects.
     """
 
     unit: str
@@ -47,21 +53,84 @@ class LeftOut:
     rest: FloatArray
     size: FloatArray
     by_subject: bool
+    log_score: float = float("nan")
+    log_score_zero: float = float("nan")
+    log_score_pooled: float = float("nan")
 
 
-def _predict(artifact: Artifact, frames: SegmentFrames, unit: str, by_subject: bool) -> LeftOut:
+@dataclass(frozen=True)
+class Rivals:
+    """Two plain laws that a prior must beat, learned from the same frames.
+
+    zero: (n, n) m², second moment of displacement; basis, weights: (K, n) of one regression on flexion
+    and its square for all subjects; pooled: (n, n) m², what it leaves over.
+    """
+
+    zero: FloatArray
+    basis: Basis
+    weights: FloatArray
+    pooled: FloatArray
+
+
+def learn_rivals(frames: Sequence[SegmentFrames], adjacent: tuple[int, ...]) -> Rivals:
+    """Second moment of displacement, and one least-squares regression for all subjects alike."""
+    basis = linear_basis(adjacent)
+    features = np.concatenate([basis.values(item.angles, item.reference_angles)[:, 1:] for item in frames])
+    outputs = np.concatenate([item.displacement for item in frames])
+    seen = np.isfinite(outputs)
+    clean = np.where(seen, outputs, 0.0)
+    gram = features.T @ features
+    ridge = 1e-6 * max(float(np.trace(gram)), 1e-12) * np.eye(gram.shape[0])
+    weights = np.linalg.solve(gram + ridge, features.T @ clean)
+    rest = np.where(seen, clean - features @ weights, 0.0)
+    counts = np.maximum(seen.T.astype(float) @ seen.astype(float), 1.0)
+    floor = SMALLEST_SD**2 * np.eye(outputs.shape[1])
+    return Rivals(
+        zero=nearest_psd(clean.T @ clean / counts) + floor,
+        basis=basis,
+        weights=np.concatenate([np.zeros((1, outputs.shape[1])), weights]),
+        pooled=nearest_psd(rest.T @ rest / counts) + floor,
+    )
+
+
+def _log_score(error: FloatArray, covariance: FloatArray) -> float:
+    """Mean log density of whole frames, nats a value; hidden outputs (NaN) are left out exactly."""
+    seen = np.isfinite(error)
+    total = 0.0
+    for pattern in np.unique(seen, axis=0):
+        here = (seen == pattern).all(axis=1)
+        inner = covariance[here][:, pattern][:, :, pattern]
+        total += float(log_density(error[here][:, pattern], inner).sum())
+    return total / max(int(seen.sum()), 1)
+
+
+def _predict(
+    artifact: Artifact, frames: SegmentFrames, unit: str, by_subject: bool, rivals: Rivals | None = None
+) -> LeftOut:
     moments = artifact.moments(frames.angles)
     total = np.einsum("faa->fa", moments.covariance)
     residual = np.diag(artifact.residual)
     rest = residual + np.einsum("faa->fa", frames.noise)
     seen = np.isfinite(frames.displacement)
+    error = frames.displacement - moments.mean
+    scores = {"log_score": _log_score(error, moments.covariance + frames.noise)}
+    if rivals is not None:
+        count, n = error.shape
+        pooled = rivals.basis.values(frames.angles, frames.reference_angles) @ rivals.weights
+        scores["log_score_zero"] = _log_score(
+            frames.displacement, np.broadcast_to(rivals.zero, (count, n, n))
+        )
+        scores["log_score_pooled"] = _log_score(
+            frames.displacement - pooled, np.broadcast_to(rivals.pooled, (count, n, n))
+        )
     return LeftOut(
         unit=unit,
-        error=(frames.displacement - moments.mean)[seen],
+        error=error[seen],
         constant=np.maximum(total - residual, 0.0)[seen],
         rest=rest[seen],
         size=frames.displacement[seen],
         by_subject=by_subject,
+        **scores,
     )
 
 
@@ -69,7 +138,9 @@ def _posture(model: SegmentModel, frames: SegmentFrames) -> Posture:
     return Posture(frames.reference_angles, model.layout)
 
 
-def leave_one_out(model: SegmentModel, frames: Sequence[SegmentFrames]) -> list[LeftOut]:
+def leave_one_out(
+    model: SegmentModel, frames: Sequence[SegmentFrames], adjacent: tuple[int, ...] = ()
+) -> list[LeftOut]:
     """Predict every subject from the others; with one subject, every trial from its others.
 
     The model is learned again without the left-out unit, from where it stood.
@@ -78,8 +149,9 @@ def leave_one_out(model: SegmentModel, frames: Sequence[SegmentFrames]) -> list[
     result = []
     if len(subjects) > 1:
         for name in subjects:
-            others = model.refitted([item for item in frames if item.subject != name])
-            result += predict_others(others, [item for item in frames if item.subject == name])
+            kept = [item for item in frames if item.subject != name]
+            mine = [item for item in frames if item.subject == name]
+            result += predict_others(model.refitted(kept), mine, learn_rivals(kept, adjacent))
         return result
     if len(frames) < 2:
         return []
@@ -92,7 +164,9 @@ def leave_one_out(model: SegmentModel, frames: Sequence[SegmentFrames]) -> list[
     return result
 
 
-def predict_others(model: SegmentModel, frames: Sequence[SegmentFrames]) -> list[LeftOut]:
+def predict_others(
+    model: SegmentModel, frames: Sequence[SegmentFrames], rivals: Rivals | None = None
+) -> list[LeftOut]:
     """Predict subjects that the prior has not learned from, one unit a subject.
 
     Parameters
@@ -103,7 +177,7 @@ def predict_others(model: SegmentModel, frames: Sequence[SegmentFrames]) -> list
     return [
         _merge(
             [
-                _predict(model.for_new_subject(_posture(model, item), 1.0), item, name, True)
+                _predict(model.for_new_subject(_posture(model, item), 1.0), item, name, True, rivals)
                 for item in frames
                 if item.subject == name
             ]
@@ -120,7 +194,16 @@ def _merge(parts: list[LeftOut]) -> LeftOut:
         rest=np.concatenate([part.rest for part in parts]),
         size=np.concatenate([part.size for part in parts]),
         by_subject=parts[0].by_subject,
+        log_score=_mean_score(parts, "log_score"),
+        log_score_zero=_mean_score(parts, "log_score_zero"),
+        log_score_pooled=_mean_score(parts, "log_score_pooled"),
     )
+
+
+def _mean_score(parts: list[LeftOut], name: str) -> float:
+    """Mean over all values of a unit's trials."""
+    counts = [part.error.size for part in parts]
+    return float(np.average([getattr(part, name) for part in parts], weights=counts))
 
 
 def coverage(left_out: LeftOut, level: float, inflation: float = 1.0) -> float:
@@ -167,8 +250,8 @@ def summarise_validation(segment: str, left_out: list[LeftOut], inflation: float
     """Left-out figures of one segment as a Dataset with dims segment, unit, level.
 
     Variables: coverage by unit and level (with the inflation in force), rms_error and rms_zero (m,
-    of the prediction and of predicting no artifact), crps and crps_zero (m), units, by_subject,
-    inflation.
+    of the prediction and of predicting no artifact), crps and crps_zero (m), log_score and its rivals (nats a
+    value), pit (share of a unit's probability integral transforms in tenths), by_subject, inflation.
     """
     units = [item.unit for item in left_out]
     covered = np.array([[coverage(item, level, inflation) for level in LEVELS] for item in left_out]).reshape(
@@ -182,11 +265,25 @@ def summarise_validation(segment: str, left_out: list[LeftOut], inflation: float
         float(crps_normal(0.0, np.full(item.size.size, z), item.size).mean())
         for z, item in zip(zero, left_out, strict=True)
     ]
+    edges = np.linspace(0.0, 1.0, PIT_BINS + 1)
+    pit = np.array(
+        [
+            np.histogram(norm.cdf(item.error / s), edges)[0] / item.error.size
+            for s, item in zip(sd, left_out, strict=True)
+        ]
+    ).reshape(1, len(units), PIT_BINS)
     metre, one = {"units": "m"}, {"units": "1"}
     by_subject = int(bool(left_out) and left_out[0].by_subject)
 
-    def row(values: list[float]) -> tuple[tuple[str, str], FloatArray, dict[str, str]]:
-        return ("segment", "unit"), np.array(values, dtype=np.float64).reshape(1, len(units)), metre
+    def row(
+        values: list[float], units_of: dict[str, str] = metre
+    ) -> tuple[tuple[str, str], FloatArray, dict[str, str]]:
+        return ("segment", "unit"), np.array(values, dtype=np.float64).reshape(1, len(units)), units_of
+
+    scores = {
+        name: row([getattr(item, name) for item in left_out], one)
+        for name in ("log_score", "log_score_zero", "log_score_pooled")
+    }
 
     return xr.Dataset(
         {
@@ -195,6 +292,8 @@ def summarise_validation(segment: str, left_out: list[LeftOut], inflation: float
             "rms_zero": row(zero),
             "crps": row(crps),
             "crps_zero": row(crps_zero),
+            **scores,
+            "pit": (("segment", "unit", "bin"), pit, one),
             "inflation": (("segment",), np.array([inflation]), one),
             "by_subject": (("segment",), np.array([by_subject]), one),
         },
@@ -202,5 +301,6 @@ def summarise_validation(segment: str, left_out: list[LeftOut], inflation: float
             "segment": [segment],
             "unit": np.array(units, dtype=str),
             "level": ("level", np.array(LEVELS), one),
+            "bin": ("bin", 0.5 * (edges[1:] + edges[:-1]), one),
         },
     )
