@@ -17,6 +17,8 @@ Nothing here was measured. Physical simplifications, on purpose:
 - Bone truth has white noise; image registration errs in smoother, pose-dependent ways.
 - Clocks and lab frames of skin and bone systems are the same.
 
+A second mechanism, ``bulge-slide-wobble``, stands in simulate/mechanisms.py.
+
 Sizes: thigh 10–15 mm and shank 4–6 mm RMS, about 45 % of the mean square between subjects
 (common practice, no source). The part of them that falls into walking has the order of
 Andersen et al. (2012), doi 10.1016/j.gaitpost.2011.11.032 (largest artifact), and Benoit
@@ -27,6 +29,7 @@ plausibility, not validation. Conventions: docs/conventions.md.
 from __future__ import annotations
 
 from sta_prior.simulate.artifact import Population, PopulationSettings, SegmentSettings
+from sta_prior.simulate.mechanisms import MECHANISMS
 from sta_prior.simulate.motion import TASKS, MotionStyle, TaskMotion
 from sta_prior.simulate.study import SimulatedStudy, simulate_population, simulate_study, write_study
 from sta_prior.simulate.subject import (
@@ -43,6 +46,7 @@ from sta_prior.simulate.subject import (
 __all__ = [
     "LANDMARKS",
     "MARKERS",
+    "MECHANISMS",
     "SEGMENTS",
     "TASKS",
     "Body",

@@ -19,6 +19,7 @@ from scipy.signal import lfilter
 from sta_prior.checks import FloatArray
 from sta_prior.errors import InputError, message
 from sta_prior.rigid import marker_jacobian
+from sta_prior.simulate.mechanisms import AverageTissue
 
 _DEGREE = np.pi / 180.0
 DRIVES = ("flexion", "saturating_flexion", "internal_rotation", "adduction")
@@ -154,10 +155,14 @@ class SegmentPopulation:
 
 @dataclass(frozen=True)
 class Population:
-    """Everything subjects have in common: settings and the drawn artifact of thigh and shank."""
+    """Everything subjects have in common: settings and the drawn artifact of thigh and shank.
+
+    tissue: what they share in the mechanism bulge-slide-wobble; None where the drives act.
+    """
 
     settings: PopulationSettings
     segments: tuple[SegmentPopulation, SegmentPopulation]
+    tissue: tuple[AverageTissue, AverageTissue] | None = None
 
 
 def drives(angles: FloatArray, reference_angles: FloatArray) -> FloatArray:

@@ -5,7 +5,7 @@ Conventions: docs/conventions.md; files: docs/files.md.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -20,6 +20,7 @@ from sta_prior.io.points import points_dataset
 from sta_prior.io.text import write_bone_table
 from sta_prior.se3 import position_of, rotation_of
 from sta_prior.simulate.artifact import Population, PopulationSettings, draw_population, drives
+from sta_prior.simulate.mechanisms import TISSUE_SD, AverageTissue, check_mechanism, draw_average, scaled
 from sta_prior.simulate.motion import RATE, TASKS, draw_style, task_motion
 from sta_prior.simulate.subject import (
     LANDMARKS,
@@ -99,13 +100,16 @@ class SimulatedStudy:
     subjects: tuple[SimulatedSubject, ...]
 
 
-def simulate_population(generator: Generator, settings: PopulationSettings | None = None) -> Population:
+def simulate_population(
+    generator: Generator, settings: PopulationSettings | None = None, mechanism: str = "drives"
+) -> Population:
     """Draw a population whose artifact has its stated size over the four tasks.
 
     Parameters
     ----------
     generator : source of all randomness
     settings : sizes; the default is the invented study
+    mechanism : of the artifact, one of mechanisms.MECHANISMS
 
     Returns
     -------
@@ -113,19 +117,59 @@ def simulate_population(generator: Generator, settings: PopulationSettings | Non
 
     Raises
     ------
-    InputError : sizes that do not fit together.
+    InputError : an unknown mechanism, or sizes that do not fit together.
     """
+    if check_mechanism(mechanism) != "drives":
+        settings = settings if settings is not None else PopulationSettings(tissue_sd=TISSUE_SD)
     moments = []
     for _ in range(_MOMENT_STYLES):
         style = draw_style(generator)
         for task in TASKS:
             drive = drives(task_motion(task, style, (0.42, 0.40), generator).angles, style.reference_angles)
             moments.append(drive.T @ drive / len(drive))
-    return draw_population(generator, average_layouts(), np.mean(moments, axis=0), settings)
+    population = draw_population(generator, average_layouts(), np.mean(moments, axis=0), settings)
+    return population if mechanism == "drives" else _with_tissue(population, generator)
+
+
+def _with_tissue(population: Population, generator: Generator) -> Population:
+    """The population with tissue of the second mechanism, its artifact of the stated size."""
+    drawn = replace(population, tissue=draw_average(generator))
+    schedule = tuple((task, 1) for task in TASKS)
+    people = [simulate_subject("", False, drawn, schedule, generator) for _ in range(_MOMENT_STYLES)]
+    trials = [trial for person in people for trial in person.trials]
+    first, tissue = 0, []
+    for segment, sizes, average in zip(
+        population.segments,
+        (population.settings.thigh, population.settings.shank),
+        drawn.tissue or (),
+        strict=True,
+    ):
+        own = slice(first, first + len(segment.layout))
+        first = own.stop
+        systematic = [trial.systematic[:, own] for trial in trials]
+        wobbling = [trial.displacement[:, own] - trial.systematic[:, own] for trial in trials]
+        explained = np.sqrt(sizes.displacement_rms**2 - sizes.residual_rms**2)
+        tissue.append(
+            scaled(
+                average,
+                float(explained / _root_mean_square(systematic)),
+                float(sizes.residual_rms / _root_mean_square(wobbling)),
+            )
+        )
+    pair: tuple[AverageTissue, AverageTissue] = (tissue[0], tissue[1])
+    return replace(population, tissue=pair)
+
+
+def _root_mean_square(vectors: list[FloatArray]) -> float:
+    """Of the lengths of vectors (..., 3), over all arrays."""
+    return float(np.sqrt((np.concatenate(vectors) ** 2).sum(axis=-1).mean()))
 
 
 def simulate_study(
-    seed: int, size: str = "demo", settings: PopulationSettings | None = None
+    seed: int,
+    size: str = "demo",
+    settings: PopulationSettings | None = None,
+    mechanism: str = "drives",
 ) -> SimulatedStudy:
     """Make the invented study in memory.
 
@@ -135,6 +179,7 @@ def simulate_study(
     size : "demo" (nine imaged and six archived subjects, two trials a task) or "small"
         (the first four and two of them, one trial a task)
     settings : sizes of artifact and noise; the default is the invented study
+    mechanism : of the artifact, one of mechanisms.MECHANISMS
 
     Returns
     -------
@@ -142,7 +187,7 @@ def simulate_study(
 
     Raises
     ------
-    InputError : an unknown size, or settings that do not fit together.
+    InputError : an unknown size or mechanism, or settings that do not fit together.
     """
     if size not in _SIZES:
         known = ", ".join(_SIZES)
@@ -150,7 +195,7 @@ def simulate_study(
     imaged, archived, repetitions = _SIZES[size]
     # One child for each possible subject: subject K03 is the same person in every size.
     first, *children = np.random.default_rng(seed).spawn(1 + IMAGED_COUNT + ARCHIVED_COUNT)
-    population = simulate_population(first, settings)
+    population = simulate_population(first, settings, mechanism)
     numbers = [*range(imaged), *range(IMAGED_COUNT, IMAGED_COUNT + archived)]
     schedule = tuple((task, repetition) for repetition in range(1, repetitions + 1) for task in TASKS)
     subjects = tuple(
@@ -161,14 +206,18 @@ def simulate_study(
 
 
 def write_study(
-    folder: str | Path, seed: int, size: str = "demo", settings: PopulationSettings | None = None
+    folder: str | Path,
+    seed: int,
+    size: str = "demo",
+    settings: PopulationSettings | None = None,
+    mechanism: str = "drives",
 ) -> SimulatedStudy:
     """Make the invented study and write it as files of the contract.
 
     Parameters
     ----------
     folder : to write into; must be new, empty, or hold an earlier invented study
-    seed, size, settings : as simulate_study
+    seed, size, settings, mechanism : as simulate_study
 
     Returns
     -------
@@ -185,7 +234,7 @@ def write_study(
     """
     target = Path(folder)
     _refuse_foreign(target)
-    study = simulate_study(seed, size, settings)
+    study = simulate_study(seed, size, settings, mechanism)
     target.mkdir(parents=True, exist_ok=True)
     _write_text(target / "README.txt", _README.format(size=size, seed=seed))
     _write_text(target / "lab.toml", _LAB.format(title=_TITLE))

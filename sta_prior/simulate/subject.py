@@ -19,9 +19,19 @@ from sta_prior.simulate.artifact import (
     residual_displacement,
     systematic_displacement,
 )
+from sta_prior.simulate.mechanisms import (
+    HIDDEN_SHARE,
+    SegmentTissue,
+    bulge_and_slide,
+    draw_tissue,
+    scattered_windows,
+    strikes_of,
+    wobble,
+)
 from sta_prior.simulate.motion import (
     RATE,
     MotionStyle,
+    TaskMotion,
     draw_style,
     joint_travel,
     leg_poses,
@@ -110,6 +120,7 @@ class SimulatedSubject:
     reference_pose : shape (2, 4, 4), lab_from_bone in the static trial
     static_points : shape (k, 17, 3), m, lab: ten markers, then seven landmarks
     trials : movement trials
+    tissue : of thigh and shank in the mechanism bulge-slide-wobble, which then replaces the weights
     """
 
     id: str
@@ -121,6 +132,7 @@ class SimulatedSubject:
     reference_pose: FloatArray
     static_points: FloatArray
     trials: tuple[SimulatedTrial, ...]
+    tissue: tuple[SegmentTissue, SegmentTissue] | None = None
 
 
 def average_layouts() -> tuple[FloatArray, FloatArray]:
@@ -224,6 +236,13 @@ def simulate_subject(
     subject = SimulatedSubject(
         identifier, imaged, body, style, weights, tissue_factor, pose, static_points, trials=()
     )
+    if population.tissue is not None:
+        own = _by_segment(body.markers)
+        thigh, shank = (
+            draw_tissue(average, markers, tissue_factor, generator)
+            for average, markers in zip(population.tissue, own, strict=True)
+        )
+        subject = replace(subject, tissue=(thigh, shank))
     children = generator.spawn(len(schedule))
     trials = tuple(
         simulate_trial(subject, population, task, repetition, child)
@@ -259,18 +278,8 @@ def simulate_trial(
     motion = task_motion(task, style, body.leg_lengths, generator)
     travel = joint_travel(style, motion.angles)
     poses = leg_poses(motion.thigh_angles, motion.hip_position, motion.angles, travel, body.centres)
-    drive = drives(motion.angles, style.reference_angles)
     frames = len(motion.time)
-    systematic = np.concatenate([systematic_displacement(w, drive) for w in subject.weights], axis=1)
-    residual = np.concatenate(
-        [
-            residual_displacement(
-                segment.residual_factor, frames, 1 / RATE, settings.correlation_time, generator
-            )
-            for segment in population.segments
-        ],
-        axis=1,
-    )
+    systematic, residual = _artifact(subject, population, task, motion, poses, generator)
     displacement = systematic + residual
     split = MARKER_COUNTS[0]
     exact = np.concatenate(
@@ -281,10 +290,11 @@ def simulate_trial(
         axis=1,
     )
     points = exact + settings.instrument_sd * generator.standard_normal(exact.shape)
-    points[_occlusions(frames, generator)] = np.nan
+    points[_occlusions(frames, generator, HIDDEN_SHARE if subject.tissue else 1 / 6)] = np.nan
     noise = np.array([settings.bone_sd_rotation] * 3 + [settings.bone_sd_position] * 3)
     imaged_pose = poses @ exp(noise * generator.standard_normal((frames, len(SEGMENTS), 6)))
-    in_view = _windows(motion.time, generator) & subject.imaged
+    windows = scattered_windows(frames, generator) if subject.tissue else _windows(motion.time, generator)
+    in_view = windows & subject.imaged
     imaged_pose[~in_view] = np.nan
     return SimulatedTrial(
         id=f"{task}_{repetition:02d}",
@@ -300,6 +310,41 @@ def simulate_trial(
         systematic=systematic,
         cycles=motion.cycles,
     )
+
+
+def _by_segment(values: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Values of the ten markers, first axis, as those of thigh and shank."""
+    split = MARKER_COUNTS[0]
+    return values[:split], values[split:]
+
+
+def _artifact(
+    subject: SimulatedSubject,
+    population: Population,
+    task: str,
+    motion: TaskMotion,
+    poses: FloatArray,
+    generator: Generator,
+) -> tuple[FloatArray, FloatArray]:
+    """Artifact that the angles explain and the rest, each (n, 10, 3) m."""
+    settings, reference = population.settings, subject.style.reference_angles
+    if subject.tissue is not None:
+        strikes = strikes_of(task, motion.cycles)
+        systematic = [bulge_and_slide(tissue, motion.angles, reference) for tissue in subject.tissue]
+        rest = [
+            wobble(tissue, poses[:, index], motion.time, strikes, generator)
+            for index, tissue in enumerate(subject.tissue)
+        ]
+    else:
+        drive = drives(motion.angles, reference)
+        systematic = [systematic_displacement(weights, drive) for weights in subject.weights]
+        rest = [
+            residual_displacement(
+                segment.residual_factor, len(motion.time), 1 / RATE, settings.correlation_time, generator
+            )
+            for segment in population.segments
+        ]
+    return np.concatenate(systematic, axis=1), np.concatenate(rest, axis=1)
 
 
 def _standing_pose(body: Body, style: MotionStyle) -> FloatArray:
@@ -323,13 +368,13 @@ def _in_segments(pose: FloatArray, markers: FloatArray, landmarks: FloatArray) -
     )
 
 
-def _occlusions(frames: int, generator: Generator) -> BoolArray:
-    """Hidden (frames, 10): in one trial of six one or two markers are lost for 0.1–0.3 s."""
+def _occlusions(frames: int, generator: Generator, share: float) -> BoolArray:
+    """Hidden (frames, 10): in a share of the trials one or two markers are lost for 0.1–0.3 s."""
     hidden = np.zeros((frames, len(MARKERS)), dtype=np.bool_)
     chosen = generator.permutation(len(MARKERS))[: generator.integers(1, 3)]
     starts = generator.integers(0, frames - 30, len(chosen))
     lengths = generator.integers(10, 31, len(chosen))
-    if generator.uniform() < 1 / 6:
+    if generator.uniform() < share:
         frame = np.arange(frames)[:, None]
         hidden[:, chosen] = (frame >= starts) & (frame < starts + lengths)
     return hidden
