@@ -18,6 +18,7 @@ from sta_prior.errors import MismatchError, StaPriorWarning, message
 from sta_prior.pairs.pairing import segment_side
 from sta_prior.prior.family import Own, Posture, SegmentModel, restrict
 from sta_prior.prior.interface import Artifact
+from sta_prior.prior.personal import LearnedTrial, OwnPairs, own_pairs
 from sta_prior.prior.statistics import SegmentFrames, segment_frames
 from sta_prior.study import Lab, Trial
 
@@ -31,17 +32,6 @@ class JointLabel:
     proximal: str
     distal: str
     dof: tuple[str, ...]
-
-
-@dataclass(frozen=True)
-class LearnedTrial:
-    """A trial that the prior learned from: digest of its skin file, instants used, s."""
-
-    subject: str
-    trial: str
-    activity: str
-    digest: str
-    times: FloatArray
 
 
 @dataclass(frozen=True)
@@ -126,7 +116,7 @@ class Prior:
         """
         lab = trial.subject.lab
         joint_columns = self._match_joints(lab)
-        own_data = self._personal_pairs(trial, personal)
+        own = own_pairs(trial.subject.id, personal, self.trials) if personal is not None else None
         self._warn_of_a_stranger(trial)
         reference = trial.subject.reference()
         artifacts: dict[str, Artifact] = {}
@@ -145,9 +135,9 @@ class Prior:
                 for position, marker in enumerate(segment.markers)
             ]
             outputs = (np.array(first)[:, None] + np.arange(3)).reshape(-1)
-            inner = self._artifact(model, posture, trial, own_data)
+            inner = self._artifact(model, posture, trial, own)
             artifacts[segment.name] = restrict(inner, outputs, side, joint_columns, len(lab.joints))
-        times, words = self._what_informs(trial, own_data)
+        times, words = self._what_informs(trial, own)
         return Binding(artifacts, times, words)
 
     def _warn_of_a_stranger(self, trial: Trial) -> None:
@@ -219,83 +209,40 @@ class Prior:
             )
         return model
 
-    def _personal_pairs(self, trial: Trial, personal: xr.Dataset | None) -> xr.Dataset | None:
-        """The subject's own trials of the personal pairs that the prior has not learned from."""
-        if personal is None:
-            return None
-        mine = [str(name) == trial.subject.id for name in personal["trial_subject"].values]
-        if not any(mine):
-            warnings.warn(
-                message(
-                    (trial.subject.id, trial.id),
-                    "the personal pairs hold no frames of this subject",
-                    "Solved with the prior alone.",
-                ),
-                StaPriorWarning,
-                stacklevel=3,
-            )
-            return None
-        known = {item.digest for item in self.trials}
-        new = [
-            index
-            for index, is_mine in enumerate(mine)
-            if is_mine and str(personal["trial_digest"].values[index]) not in known
-        ]
-        return personal.isel(trial=new)
-
     def _artifact(
-        self, model: SegmentModel, posture: Posture, trial: Trial, own_data: xr.Dataset | None
+        self, model: SegmentModel, posture: Posture, trial: Trial, own: OwnPairs | None
     ) -> Artifact:
         subject = trial.subject.id
-        if own_data is None and not (self.is_personal and model.knows(subject)):
+        if own is None and not (self.is_personal and model.knows(subject)):
             return model.for_new_subject(posture)
         frames: list[SegmentFrames] = []
-        if own_data is not None and own_data.sizes["trial"]:
+        if own is not None and not own.empty:
             dof = {joint.name: joint.dof for joint in self.joints}
-            # Another recording may bear the name of one that the prior learned from: the digest tells.
-            names = self._digests_by_name(own_data)
             frames = [
-                replace(item, trial=names[item.trial])
-                for item in segment_frames(own_data, model.name, model.markers, dof)
+                replace(item, trial=own.keys[item.trial])
+                for item in segment_frames(own.data, model.name, model.markers, dof)
             ]
         # A personal prior's own subject needs no widening for subjects that were not imaged.
         widened = not (self.is_personal and subject in self.subjects)
-        return model.for_subject(
-            posture, Own(subject, frames, self._trial_key(trial, own_data) or "", widened)
-        )
+        return model.for_subject(posture, Own(subject, frames, self._trial_key(trial, own), widened))
 
-    def _trial_key(self, trial: Trial, own_data: xr.Dataset | None) -> str | None:
-        """Name under which this very trial's frames were learned; None if they were not."""
+    def _trial_key(self, trial: Trial, own: OwnPairs | None) -> str:
+        """Name under which this very trial's frames are known; empty if none are."""
         digest = trial.digest()
         for item in self.trials:
             if item.subject == trial.subject.id and item.digest == digest:
                 return item.trial
-        if own_data is not None and digest in self._digests_by_name(own_data).values():
-            return digest
-        return None
+        return digest if own is not None and own.times_of(digest).size else ""
 
-    @staticmethod
-    def _digests_by_name(own_data: xr.Dataset) -> dict[str, str]:
-        """Digest of the skin file of each of a subject's own trials."""
-        rows = zip(own_data["trial_id"].values, own_data["trial_digest"].values, strict=True)
-        return {str(name): str(digest) for name, digest in rows}
-
-    def _what_informs(self, trial: Trial, own_data: xr.Dataset | None) -> tuple[FloatArray, str]:
+    def _what_informs(self, trial: Trial, own: OwnPairs | None) -> tuple[FloatArray, str]:
         subject, digest = trial.subject.id, trial.digest()
         times = [item.times for item in self.trials if item.subject == subject and item.digest == digest]
-        own_frames = own_data is not None or (self.is_personal and subject in self.subjects)
-        if own_data is not None:
-            for index, other in enumerate(own_data["trial_digest"].values):
-                if str(other) == digest:
-                    here = (own_data["subject"].values == subject) & (
-                        own_data["trial"].values == own_data["trial_id"].values[index]
-                    )
-                    times.append(own_data["time"].values[here])
+        if own is not None:
+            times.append(own.times_of(digest))
         informed = np.concatenate(times) if times else np.zeros(0)
-        if own_frames and (subject in self.subjects or (own_data is not None and own_data.sizes["trial"])):
-            words = "the subject's own paired frames and the prior"
-        else:
-            words = f"a prior of {len(self.subjects)} other subject(s)"
-            if subject in self.subjects:
-                words = f"a prior of {len(self.subjects)} subject(s), this one among them"
-        return informed, words
+        known = subject in self.subjects
+        if (own is not None and (known or not own.empty)) or (self.is_personal and known):
+            return informed, "the subject's own paired frames and the prior"
+        if known:
+            return informed, f"a prior of {len(self.subjects)} subject(s), this one among them"
+        return informed, f"a prior of {len(self.subjects)} other subject(s)"

@@ -97,7 +97,7 @@ class FeatureModel:
             hierarchy = without_subject(
                 hierarchy, list(self.trials), self.basis.relative_variance, own.subject
             )
-        known += [summarise(item, self.basis, self.time_constant) for item in own.frames]
+        known = merged([*known, *(summarise(item, self.basis, self.time_constant) for item in own.frames)])
         if not known:
             return self.for_new_subject(posture)
         factor = self.inflation if own.widened else 1.0
@@ -250,6 +250,15 @@ def read_feature_model(name: str, stored: Mapping[str, Values]) -> FeatureModel:
         magnitude=stored["magnitude"],
         inflation=float(stored["inflation"]),
     )
+
+
+def merged(trials: Sequence[TrialStatistics]) -> list[TrialStatistics]:
+    """One item a trial: new windows of a known recording share that trial's own deviation."""
+    blocks: dict[tuple[str, str], tuple[Block, ...]] = {}
+    for trial in trials:
+        key = (trial.subject, trial.trial)
+        blocks[key] = blocks.get(key, ()) + trial.blocks
+    return [TrialStatistics(subject, trial, own) for (subject, trial), own in blocks.items()]
 
 
 def beyond_data(segment: str, layout: FloatArray) -> FloatArray:

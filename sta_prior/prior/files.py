@@ -13,9 +13,10 @@ import xarray as xr
 
 from sta_prior.errors import InputError, message
 from sta_prior.io.netcdf import dataset_digest, read_dataset, write_dataset
-from sta_prior.prior.base import JointLabel, LearnedTrial, Prior
+from sta_prior.prior.base import JointLabel, Prior
 from sta_prior.prior.families import find_family
 from sta_prior.prior.family import SegmentModel, Values, Variable
+from sta_prior.prior.personal import LearnedTrial
 
 Variables = dict[str, tuple[tuple[str, ...], object, dict[str, str]]]
 _ONE = {"units": "1"}

@@ -16,9 +16,10 @@ from sta_prior.angles import JointConvention, JointKind
 from sta_prior.checks import FloatArray, nearest
 from sta_prior.errors import InputError, message
 from sta_prior.io.netcdf import dataset_digest
-from sta_prior.prior.base import JointLabel, LearnedTrial, Prior
+from sta_prior.prior.base import JointLabel, Prior
 from sta_prior.prior.families import DEFAULT_FAMILY, find_family
 from sta_prior.prior.family import SegmentData, SegmentModel
+from sta_prior.prior.personal import LearnedTrial
 from sta_prior.prior.statistics import SegmentFrames, adjacent_joints, segment_frames
 from sta_prior.prior.validate import calibrate_inflation, leave_one_out, summarise_validation
 
