@@ -61,7 +61,7 @@ class FeatureModel:
 
     def refitted(self, frames: Sequence[SegmentFrames]) -> FeatureModel:
         """Fit the hierarchy to other frames, from where it stood; basis and time constant are kept."""
-        trials = tuple(summarise(item, self.basis, self.time_constant) for item in frames)
+        trials = tuple(summarise(item, self.basis) for item in frames)
         hierarchy = fit_hierarchy(
             list(trials),
             self.basis.relative_variance,
@@ -97,7 +97,7 @@ class FeatureModel:
             hierarchy = without_subject(
                 hierarchy, list(self.trials), self.basis.relative_variance, own.subject
             )
-        known = merged([*known, *(summarise(item, self.basis, self.time_constant) for item in own.frames)])
+        known = merged([*known, *(summarise(item, self.basis) for item in own.frames)])
         if not known:
             return self.for_new_subject(posture)
         factor = self.inflation if own.widened else 1.0
@@ -178,7 +178,7 @@ class FeatureFamily:
         references = [item.reference_angles for item in data.frames]
         basis = orthonormal(self.basis(data.adjacent, angles, references), angles, references)
         constant = estimate_time_constant(list(data.frames), basis)
-        trials = tuple(summarise(item, basis, constant) for item in data.frames)
+        trials = tuple(summarise(item, basis) for item in data.frames)
         hierarchy = fit_hierarchy(list(trials), basis.relative_variance, basis.total_relative_variance)
         return FeatureModel(
             name=data.name,

@@ -187,8 +187,14 @@ def segment_frames(
     return result
 
 
-def summarise(frames: SegmentFrames, basis: Basis, time_constant: float) -> TrialStatistics:
-    """Sufficient statistics of one trial, a block for every set of markers seen together."""
+def summarise(
+    frames: SegmentFrames, basis: Basis, time_constant: float = LONGEST_TIME_CONSTANT
+) -> TrialStatistics:
+    """Sufficient statistics of one trial, a block for every set of markers seen together.
+
+    Frames count as if the residual decayed as slowly as it may: a constant fitted to short windows comes out
+    too small, and then each window counts as more than it is worth.
+    """
     features = basis.values(frames.angles, frames.reference_angles)
     correlation = np.full(frames.time.size, np.exp(-frames.step / max(time_constant, 1e-6)))
     weights = frame_weights(frames.window, correlation)
