@@ -16,6 +16,7 @@ from sta_prior.prior.artifact import FeatureArtifact
 from sta_prior.prior.basis import Basis, Reach, Term, Wave, orthonormal
 from sta_prior.prior.family import Own, Posture, SegmentData, Values, Variable
 from sta_prior.prior.fitting import FitSettings, fit_hierarchy
+from sta_prior.prior.gain import flexion_gains
 from sta_prior.prior.hierarchy import (
     Block,
     Hierarchy,
@@ -26,7 +27,7 @@ from sta_prior.prior.hierarchy import (
     trial_posterior,
     without_subject,
 )
-from sta_prior.prior.linear import linear_basis
+from sta_prior.prior.linear import flexion_reaches, linear_basis
 from sta_prior.prior.reduced_rank import reduced_rank_basis
 from sta_prior.prior.statistics import SegmentFrames, estimate_time_constant, summarise
 
@@ -114,9 +115,12 @@ class FeatureModel:
     def describe(self) -> str:
         """One line about what was learned."""
         residual = 1000.0 * float(np.sqrt(np.diag(self.hierarchy.residual).mean()))
+        weights = new_subject(self.hierarchy, self.inflation)
+        gains = flexion_gains(self.basis, weights, self.layout)
         return (
             f"residual {residual:.1f} mm SD per axis, decay time {self.time_constant:.3f} s; "
-            f"fit: {self.hierarchy.stop_reason}"
+            + "".join(f"{gain.words()}; " for gain in gains)
+            + f"fit: {self.hierarchy.stop_reason}"
         )
 
     def variables(self) -> dict[str, Variable]:
@@ -272,5 +276,12 @@ def beyond_data(segment: str, layout: FloatArray) -> FloatArray:
 _SIZES = {"thigh": 0.010, "shank": 0.006}
 _ANY_SIZE = 0.008
 
-LINEAR = FeatureFamily("linear", lambda adjacent, angles, references: linear_basis(adjacent))
+
+def _held_linear_basis(
+    adjacent: tuple[int, ...], angles: list[FloatArray], references: list[FloatArray]
+) -> Basis:
+    return replace(linear_basis(adjacent), reaches=flexion_reaches(adjacent, angles, references))
+
+
+LINEAR = FeatureFamily("linear", _held_linear_basis)
 REDUCED_RANK = FeatureFamily("reduced-rank-gp", reduced_rank_basis)

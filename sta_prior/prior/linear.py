@@ -11,9 +11,12 @@ hence the square.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 
-from sta_prior.prior.basis import Basis, Term
+from sta_prior.checks import FloatArray
+from sta_prior.prior.basis import Basis, Reach, Term
 
 FLEXION = 0
 
@@ -31,3 +34,22 @@ def linear_basis(adjacent_joints: tuple[int, ...]) -> Basis:
     """
     terms = tuple(Term(joint, FLEXION, power) for joint in adjacent_joints for power in (1, 2))
     return Basis(terms, np.eye(len(terms)))
+
+
+def flexion_reaches(
+    adjacent_joints: tuple[int, ...], angles: Sequence[FloatArray], references: Sequence[FloatArray]
+) -> tuple[Reach, ...]:
+    """Range of flexion of every adjacent joint over the training frames and reference postures.
+
+    Parameters
+    ----------
+    adjacent_joints : positions of the joints that touch the segment
+    angles : of each training trial, shape (frames, joints, 3), rad
+    references : of each training trial, shape (joints, 3), rad
+    """
+    reaches = []
+    for joint in adjacent_joints:
+        seen = [*(q[:, joint, FLEXION] for q in angles), *(q[joint : joint + 1, FLEXION] for q in references)]
+        every = np.concatenate(seen)
+        reaches.append(Reach(joint, FLEXION, float(every.min()), float(every.max())))
+    return tuple(reaches)
