@@ -270,7 +270,8 @@ def made_lab(
 
 def made_trial(lab: Lab, subject: str, trial: str, reference_angles: FloatArray, digest: str = "") -> Trial:
     """Stand-in for a trial: what a prior asks of one to be bound to it, and nothing else."""
-    reference = SimpleNamespace(angles=reference_angles)
+    markers = 0.1 * np.random.default_rng(0).standard_normal((len(lab.markers), 3))
+    reference = SimpleNamespace(angles=reference_angles, markers=markers)
     owner = SimpleNamespace(id=subject, lab=lab, reference=lambda: reference)
     whole = digest or f"digest of {subject} {trial}"
-    return cast(Trial, SimpleNamespace(id=trial, subject=owner, digest=lambda: whole))
+    return cast(Trial, SimpleNamespace(id=trial, subject=owner, activity="walk", digest=lambda: whole))

@@ -10,16 +10,11 @@ import pytest
 from differences import central_difference
 
 from sta_prior.checks import FloatArray
+from sta_prior.prior.artifact import GROWTH_LENGTH, FeatureArtifact
+from sta_prior.prior.basis import SMALLEST_POWER, Basis, Term, orthonormal
 from sta_prior.prior.hierarchy import Weights, new_subject, without_subject
 from sta_prior.prior.interface import IsotropicArtifact
-from sta_prior.prior.linear import (
-    SMALLEST_POWER,
-    Basis,
-    LinearArtifact,
-    Term,
-    linear_basis,
-    orthonormal,
-)
+from sta_prior.prior.linear import flexion_reaches, linear_basis
 
 REFERENCE = np.array([[0.1, 0.02, -0.03], [-0.2, 0.01, 0.05]])
 
@@ -33,13 +28,14 @@ def learned_basis(generator: np.random.Generator, frames: int = 60) -> Basis:
     return orthonormal(linear_basis((0, 1)), parts, [REFERENCE, 0.5 * REFERENCE])
 
 
-def artifact_of(generator: np.random.Generator) -> LinearArtifact:
+def artifact_of(generator: np.random.Generator) -> FeatureArtifact:
     basis = learned_basis(generator)
     weights = Weights(
         0.01 * generator.standard_normal((basis.size, 6)),
         1e-5 * made.random_covariance(generator, 6 * basis.size),
     )
-    return LinearArtifact(basis, weights, 1e-6 * made.random_covariance(generator, 6), 0.05, REFERENCE)
+    residual, magnitude = (1e-6 * made.random_covariance(generator, 6) for _ in range(2))
+    return FeatureArtifact(basis, weights, residual, 0.05, REFERENCE, magnitude)
 
 
 def test_terms_are_flexion_and_its_square_at_every_adjacent_joint() -> None:
@@ -138,16 +134,63 @@ def test_population_mean_is_zero_at_the_reference_posture() -> None:
     hierarchy = made.random_hierarchy(generator, 5, 6)
     mean = generator.standard_normal((5, 6))
     drawn = made.draw_trials(generator, hierarchy, [2, 2, 2], 8, mean=mean)
-    fixed = np.arange(5) == 0
-    known = without_subject(hierarchy, made.statistics_of(drawn), fixed, "")
+    known = without_subject(hierarchy, made.statistics_of(drawn), np.ones(5), "")
     weights = new_subject(known, 1.3)
     assert np.abs(weights.mean[1:]).max() > 0.5
-    artifact = LinearArtifact(learned_basis(generator), weights, hierarchy.residual, 0.05, REFERENCE)
+    magnitude = np.eye(6)
+    artifact = FeatureArtifact(
+        learned_basis(generator), weights, hierarchy.residual, 0.05, REFERENCE, magnitude
+    )
     moments = artifact.moments(REFERENCE[None])
     assert not moments.mean.any()
     np.testing.assert_array_equal(moments.features, [[1.0, 0, 0, 0, 0]])
     constant = known.subject_covariance[:6, :6] + known.trial_covariance[:6, :6]
     np.testing.assert_allclose(moments.covariance[0], 1.3 * constant + hierarchy.residual, rtol=1e-12)
+
+
+def held_artifact(generator: np.random.Generator) -> FeatureArtifact:
+    """The linear family as it is learned: flexion of both joints held between −0.5 and 1.5 rad."""
+    parts = [np.concatenate([angles_of(generator, 30), np.full((1, 2, 3), -0.5), np.full((1, 2, 3), 1.5)])]
+    artifact = artifact_of(generator)
+    reaches = flexion_reaches((0, 1), parts, [REFERENCE])
+    return replace(artifact, basis=replace(artifact.basis, reaches=reaches))
+
+
+def test_beyond_the_data_the_mean_stays_at_the_edge() -> None:
+    generator = np.random.default_rng(8)
+    artifact = held_artifact(generator)
+    assert [(r.joint, r.dof, r.low, r.high) for r in artifact.basis.reaches] == [
+        (0, 0, -0.5, 1.5),
+        (1, 0, -0.5, 1.5),
+    ]
+    edge, beyond = np.full((1, 2, 3), 1.5), np.full((1, 2, 3), 1.5)
+    beyond[0, 0, 0] = 2.5
+    at_edge, far = artifact.moments(edge), artifact.moments(beyond)
+    np.testing.assert_array_equal(far.mean, at_edge.mean)
+    np.testing.assert_array_equal(far.features, at_edge.features)
+    assert not far.mean_derivative[:, :, 0].any()
+    # The other joint is still at its edge, not beyond it: there the mean moves.
+    assert np.abs(far.mean_derivative[0, :, 1, 0]).min() > 1e-5
+
+
+def test_beyond_the_data_the_spread_grows_towards_the_magnitude() -> None:
+    """By the square of the distance at first, all of it in the end: 1 − exp(−½(e/ℓ)²)."""
+    artifact = held_artifact(np.random.default_rng(9))
+    distance = np.array([0.0, 0.1, 0.3, 0.6, 1.2, 5.0])
+    angles = np.zeros((distance.size, 2, 3))
+    angles[:, 0, 0] = 1.5 + distance
+    covariance = artifact.moments(angles).covariance
+    growth = 1.0 - np.exp(-0.5 * (distance / GROWTH_LENGTH) ** 2)
+    expected = covariance[0] + growth[:, None, None] * artifact.magnitude
+    np.testing.assert_allclose(covariance, expected, rtol=1e-12)
+    assert growth[-1] == pytest.approx(1.0)
+    more = np.linalg.eigvalsh(np.diff(covariance, axis=0))
+    assert (more[:, 0] > -1e-12 * more[:, -1]).all()
+    # Sideways of both joints at once: the distance is Euclidean, 3-4-5.
+    angles[0, :, 0] = [1.5 + 0.3, 1.5 + 0.4]
+    both = artifact.moments(angles[:1]).covariance[0]
+    np.testing.assert_allclose(both, artifact.moments(np.full((1, 2, 3), 1.5)).covariance[0]
+        + (1.0 - np.exp(-0.5)) * artifact.magnitude, rtol=1e-12)
 
 
 def test_every_frame_stands_for_itself() -> None:

@@ -14,8 +14,11 @@ import xarray as xr
 from made_studies import says, warns
 
 from sta_prior.errors import MismatchError
-from sta_prior.prior import Prior, learn
+from sta_prior.prior import DEFAULT_FAMILY, Prior, learn
+from sta_prior.prior.artifact import FeatureArtifact
 from sta_prior.prior.base import Binding
+from sta_prior.prior.family import Restricted
+from sta_prior.prior.feature_model import FeatureModel
 from sta_prior.prior.hierarchy import (
     Hierarchy,
     Weights,
@@ -24,7 +27,6 @@ from sta_prior.prior.hierarchy import (
     trial_posterior,
     without_subject,
 )
-from sta_prior.prior.linear import LinearArtifact
 from sta_prior.prior.statistics import mirror_signs, segment_frames, summarise
 from sta_prior.study import Trial
 
@@ -41,8 +43,8 @@ def all_pairs() -> xr.Dataset:
 
 
 @cache
-def prior_of_four() -> Prior:
-    return learn(all_pairs(), hold_out=["P05"])
+def prior_of_four(family: str = DEFAULT_FAMILY) -> Prior:
+    return learn(all_pairs(), family, hold_out=["P05"])
 
 
 @cache
@@ -50,12 +52,28 @@ def prior_of_one() -> Prior:
     return learn(made.only(all_pairs(), ["P01"]))
 
 
-def artifact(binding: Binding, segment: str = "thigh") -> LinearArtifact:
-    return cast(LinearArtifact, binding.artifacts[segment])
+def restricted(binding: Binding, segment: str = "thigh") -> Restricted:
+    """What the solver gets: the trial's markers, side and joints."""
+    return cast(Restricted, binding.artifacts[segment])
+
+
+def artifact(binding: Binding, segment: str = "thigh") -> FeatureArtifact:
+    """What the family gave: all markers, right side, the prior's joints."""
+    return cast(FeatureArtifact, restricted(binding, segment).inner)
 
 
 def weights(binding: Binding, segment: str = "thigh") -> Weights:
     return artifact(binding, segment).weights
+
+
+def added_variance(binding: Binding) -> float:
+    """Variance of the artifact over ANGLES that comes from the weights, m², summed."""
+    got = restricted(binding)
+    return float(np.einsum("faa->", got.moments(ANGLES).covariance - got.residual))
+
+
+def model_of(prior: Prior, segment: str = "thigh") -> FeatureModel:
+    return cast(FeatureModel, prior.segments[segment])
 
 
 def assert_same(got: Weights, expected: Weights, rtol: float = 1e-12) -> None:
@@ -69,7 +87,7 @@ def trial_of(subject: str, trial: str = "walk_1", side: str = "right", digest: s
 
 
 def widened(prior: Prior, hierarchy: Hierarchy) -> Hierarchy:
-    factor = prior.segments["thigh"].inflation
+    factor = model_of(prior).inflation
     return replace(
         hierarchy,
         subject_features=factor * hierarchy.subject_features,
@@ -130,14 +148,19 @@ def test_a_marker_that_the_prior_lacks_is_refused() -> None:
 def test_a_subject_never_imaged_gets_population_and_spread_widened() -> None:
     prior = prior_of_four()
     bound = prior.bind(trial_of("P05"))
-    for name, model in prior.segments.items():
-        got = artifact(bound, name)
+    for name in prior.segments:
+        model, got = model_of(prior, name), artifact(bound, name)
         assert_same(got.weights, new_subject(model.hierarchy, model.inflation), 0.0)
         np.testing.assert_array_equal(got.residual, model.hierarchy.residual)
         assert got.time_constant == model.time_constant
         assert got.basis.terms == model.basis.terms
         np.testing.assert_array_equal(got.reference, REFERENCE)
-        moments = got.moments(ANGLES)
+        moments, whole = got.moments(ANGLES), restricted(bound, name).moments(ANGLES)
+        # The lab has all markers, on the right side: nothing is left out and nothing turned.
+        for part in ("mean", "mean_derivative", "features", "covariance"):
+            np.testing.assert_array_equal(getattr(whole, part), getattr(moments, part))
+        for part in ("residual", "constant_covariance", "time_constant"):
+            np.testing.assert_array_equal(getattr(restricted(bound, name), part), getattr(got, part))
         assert not moments.mean[2].any()
         assert (np.linalg.eigvalsh(moments.covariance)[:, 0] > 0).all()
     assert bound.informed_times.size == 0
@@ -155,7 +178,7 @@ def test_a_subject_learned_from_is_told_so_where_its_own_frames_are_not_used() -
 
 def test_the_left_side_gets_mirrored_moments() -> None:
     prior = prior_of_four()
-    right, left = (artifact(prior.bind(trial_of("P05", side=side))) for side in ("right", "left"))
+    right, left = (restricted(prior.bind(trial_of("P05", side=side))) for side in ("right", "left"))
     one, other = right.moments(ANGLES), left.moments(ANGLES)
     signs = mirror_signs(3)
     np.testing.assert_allclose(other.mean, one.mean * signs, rtol=1e-14)
@@ -165,14 +188,17 @@ def test_the_left_side_gets_mirrored_moments() -> None:
     np.testing.assert_allclose(other.covariance, one.covariance * np.outer(signs, signs), rtol=1e-10)
     np.testing.assert_array_equal(other.features, one.features)
     np.testing.assert_array_equal(left.residual, right.residual * np.outer(signs, signs))
+    count = right.constant_covariance.shape[0] // 9
+    both = np.tile(signs, count)
+    np.testing.assert_array_equal(left.constant_covariance, right.constant_covariance * np.outer(both, both))
 
 
 @pytest.mark.parametrize("side", ["right", "left"])
 def test_a_subset_of_the_markers_in_another_order_gives_the_marginal(side: str) -> None:
     prior = prior_of_four()
     lab = made.made_lab(segments={"thigh": ("TC", "TA"), "shank": made.SEGMENTS["shank"]}, side=side)
-    part = artifact(prior.bind(made.made_trial(lab, "P05", "walk_1", REFERENCE)))
-    whole = artifact(prior.bind(trial_of("P05", side=side)))
+    part = restricted(prior.bind(made.made_trial(lab, "P05", "walk_1", REFERENCE)))
+    whole = restricted(prior.bind(trial_of("P05", side=side)))
     columns = np.array([6, 7, 8, 0, 1, 2])
     got, expected = part.moments(ANGLES), whole.moments(ANGLES)
     np.testing.assert_array_equal(got.mean, expected.mean[:, columns])
@@ -181,6 +207,11 @@ def test_a_subset_of_the_markers_in_another_order_gives_the_marginal(side: str) 
         got.covariance, expected.covariance[:, columns[:, None], columns[None, :]], rtol=1e-12
     )
     np.testing.assert_array_equal(part.residual, whole.residual[np.ix_(columns, columns)])
+    count = got.features.shape[1]
+    constant = (9 * np.arange(count)[:, None] + columns).reshape(-1)
+    np.testing.assert_array_equal(
+        part.constant_covariance, whole.constant_covariance[np.ix_(constant, constant)]
+    )
 
 
 def test_joints_may_stand_elsewhere_in_the_lab() -> None:
@@ -189,7 +220,8 @@ def test_joints_may_stand_elsewhere_in_the_lab() -> None:
     lab = made.made_lab(joints=(("ankle", "ankle", "shank", "foot"), made.KNEE), segments=segments)
     bound = prior.bind(made.made_trial(lab, "P05", "walk_1", np.concatenate([9 + REFERENCE, REFERENCE])))
     angles = np.concatenate([np.random.default_rng(2).standard_normal((3, 1, 3)), ANGLES], axis=1)
-    got, expected = artifact(bound).moments(angles), artifact(prior.bind(trial_of("P05"))).moments(ANGLES)
+    got = restricted(bound).moments(angles)
+    expected = restricted(prior.bind(trial_of("P05"))).moments(ANGLES)
     np.testing.assert_array_equal(got.mean, expected.mean)
     np.testing.assert_array_equal(got.covariance, expected.covariance)
     assert not got.mean_derivative[:, :, 0].any()
@@ -198,12 +230,12 @@ def test_joints_may_stand_elsewhere_in_the_lab() -> None:
 
 def test_a_personal_prior_is_the_same_with_and_without_the_pairs_it_learned_from() -> None:
     prior, pairs = prior_of_one(), all_pairs()
-    model = prior.segments["thigh"]
+    model = model_of(prior)
     for name in ("walk_2", "walk_9"):
         trial = trial_of("P01", name)
         one, other = prior.bind(trial), prior.bind(trial, personal=pairs)
         assert_same(weights(other), weights(one), 0.0)
-        alone = without_subject(model.hierarchy, list(model.trials), model.fixed_at_reference, "P01")
+        alone = without_subject(model.hierarchy, list(model.trials), model.basis.relative_variance, "P01")
         assert_same(weights(one), trial_posterior(alone, list(model.trials), name))
         assert one.basis_of_belief == other.basis_of_belief == "the subject's own paired frames and the prior"
         np.testing.assert_array_equal(one.informed_times, other.informed_times)
@@ -217,7 +249,7 @@ def test_a_personal_prior_warns_of_anybody_else() -> None:
         "Its spread between subjects is assumed, not learned; trust neither mean nor interval."
     ):
         bound = prior.bind(trial_of("P05"))
-    model = prior.segments["thigh"]
+    model = model_of(prior)
     assert model.inflation == 4.0
     assert_same(weights(bound), new_subject(model.hierarchy, 4.0), 0.0)
 
@@ -226,10 +258,10 @@ def test_a_personal_prior_warns_of_anybody_else() -> None:
 def test_frames_already_learned_are_not_counted_twice(name: str) -> None:
     """Own frames of a subject in the prior: out of the population, then in as its own, each once."""
     prior, pairs = prior_of_four(), all_pairs()
-    model = prior.segments["thigh"]
+    model = model_of(prior)
     trial = trial_of("P02", name)
     known = [item for item in model.trials if item.subject == "P02"]
-    others = without_subject(model.hierarchy, list(model.trials), model.fixed_at_reference, "P02")
+    others = without_subject(model.hierarchy, list(model.trials), model.basis.relative_variance, "P02")
     expected = trial_posterior(widened(prior, others), known, name)
     for personal in (pairs, made.only(pairs, ["P02"]), made.only(pairs, ["P02"], ["walk_3"])):
         assert_same(weights(prior.bind(trial, personal)), expected)
@@ -238,29 +270,31 @@ def test_frames_already_learned_are_not_counted_twice(name: str) -> None:
     assert np.trace(twice.covariance) < 0.999 * np.trace(expected.covariance)
 
 
-def test_own_frames_of_a_subject_never_imaged_sharpen_its_weights() -> None:
-    prior = prior_of_four()
+@pytest.mark.parametrize("family", ["linear", "reduced-rank-gp"])
+def test_own_frames_of_a_subject_never_imaged_sharpen_its_weights(family: str) -> None:
+    prior = prior_of_four(family)
     pairs = made.only(all_pairs(), ["P05"], ["walk_1", "walk_2"])
     second = made.only(pairs, ["P05"], ["walk_2"])
-    stranger = weights(prior.bind(trial_of("P05", "walk_1")))
-    other = weights(prior.bind(trial_of("P05", "walk_1"), second))
-    same = weights(prior.bind(trial_of("P05", "walk_1"), pairs))
-    another = weights(prior.bind(trial_of("P05", "walk_9"), pairs))
+    stranger = prior.bind(trial_of("P05", "walk_1"))
+    other = prior.bind(trial_of("P05", "walk_1"), second)
+    same = prior.bind(trial_of("P05", "walk_1"), pairs)
+    another = prior.bind(trial_of("P05", "walk_9"), pairs)
     # In the order of positive matrices: what is known of other trials helps, the very frames help more.
     for wide, sharp in ((stranger, other), (other, another), (other, same)):
-        gain = np.linalg.eigvalsh(wide.covariance - sharp.covariance)
+        gain = np.linalg.eigvalsh(weights(wide).covariance - weights(sharp).covariance)
         assert gain[0] > -1e-9 * gain[-1]
-        assert np.trace(sharp.covariance) < 0.95 * np.trace(wide.covariance)
-    model = prior.segments["thigh"]
+        # What the weights add at the angles; waves that hardly move there stay as unknown as they were.
+        assert added_variance(sharp) < 0.95 * added_variance(wide)
+    model = model_of(prior)
     dof = {joint.name: joint.dof for joint in prior.joints}
     own = [
-        summarise(item, model.basis, model.time_constant)
+        summarise(item, model.basis)
         for item in segment_frames(pairs, "thigh", model.markers, dof)
     ]
     wider = widened(prior, model.hierarchy)
-    assert_same(same, trial_posterior(wider, own, "walk_1"))
+    assert_same(weights(same), trial_posterior(wider, own, "walk_1"))
     belief = subject_posterior(wider, own)
-    assert_same(another, Weights(belief.mean, belief.covariance + wider.trial_covariance))
+    assert_same(weights(another), Weights(belief.mean, belief.covariance + wider.trial_covariance))
 
 
 def test_own_frames_inform_and_say_so() -> None:
@@ -291,8 +325,7 @@ def test_personal_pairs_without_the_subject_change_nothing() -> None:
     for subject in ("P05", "P03"):
         plain = prior.bind(trial_of(subject))
         with warns(
-            f"{subject}, walk_1: the personal pairs hold no frames of this subject. "
-            "Solved with the prior alone."
+            f"{subject}: the personal pairs hold no frames of this subject. Solved with the prior alone."
         ):
             bound = prior.bind(trial_of(subject), pairs)
         assert_same(weights(bound), weights(plain), 0.0)
@@ -316,11 +349,21 @@ def test_personal_pairs_of_a_left_side_are_mirrored_twice() -> None:
     left = made.make_pairs(generator, made.subjects_of(5), trials=3, left=["P05"])
     np.testing.assert_array_equal(left["displacement"].values[:40], all_pairs()["displacement"].values[:40])
     prior = prior_of_four()
-    one = weights(prior.bind(trial_of("P05", "walk_2"), all_pairs()))
-    other = weights(prior.bind(trial_of("P05", "walk_2", side="left"), left))
-    signs = np.tile(mirror_signs(3), 3)
-    mirrored = Weights(one.mean * mirror_signs(3), one.covariance * np.outer(signs, signs))
-    assert_same(other, mirrored)
+    one = prior.bind(trial_of("P05", "walk_2"), all_pairs())
+    other = prior.bind(trial_of("P05", "walk_2", side="left"), left)
+    # The family always sees a right side; only what the solver gets is turned.
+    assert_same(weights(other), weights(one))
+    right, mirrored = restricted(one).moments(ANGLES), restricted(other).moments(ANGLES)
+    signs = mirror_signs(3)
+    assert np.abs(right.mean[:, signs < 0]).max() > 1e-4
+    np.testing.assert_allclose(mirrored.mean, right.mean * signs, rtol=1e-9, atol=1e-12)
+    expected = right.covariance * np.outer(signs, signs)
+    np.testing.assert_allclose(mirrored.covariance, expected, rtol=0, atol=1e-10 * expected.max())
+    both = np.tile(signs, weights(one).mean.shape[0])
+    constant = restricted(one).constant_covariance * np.outer(both, both)
+    np.testing.assert_allclose(
+        restricted(other).constant_covariance, constant, rtol=0, atol=1e-10 * constant.max()
+    )
 
 
 def test_personal_pairs_may_have_their_joints_in_another_order() -> None:
@@ -353,7 +396,7 @@ def test_artifact_of_a_foot_follows_dorsiflexion() -> None:
     pairs = made.make_pairs(np.random.default_rng(5), made.subjects_of(4), joints=CHAIN, segments=FEET)
     prior = learn(pairs)
     lab = made.made_lab(CHAIN, FEET)
-    foot = artifact(prior.bind(made.made_trial(lab, "P09", "walk_1", np.zeros((2, 3)))), "foot")
+    foot = restricted(prior.bind(made.made_trial(lab, "P09", "walk_1", np.zeros((2, 3)))), "foot")
 
     def change(joint: int, angle: int) -> float:
         moved = np.zeros((1, 2, 3))

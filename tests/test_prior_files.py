@@ -17,7 +17,7 @@ from made_studies import says
 from sta_prior.errors import InputError
 from sta_prior.io.netcdf import read_dataset, write_dataset
 from sta_prior.pairs import pair
-from sta_prior.prior import Prior, learn, load_prior
+from sta_prior.prior import Prior, known_families, learn, load_prior
 from sta_prior.prior.files import prior_to_dataset
 from sta_prior.simulate import write_study
 from sta_prior.study import read_study
@@ -111,7 +111,7 @@ def test_plain_xarray_opens_it(prior: Prior, saved: Path) -> None:
     with xr.open_dataset(saved, engine="h5netcdf") as data:
         assert data.attrs["sta_prior_kind"] == "prior"
         assert data.attrs["schema_version"] == 1
-        assert data.attrs["family"] == "linear"
+        assert data.attrs["family"] == "reduced-rank-gp"
         assert data.attrs["invented_data"] == 1
         assert json.loads(data.attrs["input_digests"]) == {"pairs": prior.pairs_digest}
         assert json.loads(data.attrs["notes"]) == list(prior.notes)
@@ -121,7 +121,9 @@ def test_plain_xarray_opens_it(prior: Prior, saved: Path) -> None:
         residual = data["thigh_residual"]
         assert residual.dims == ("output_thigh", "output2_thigh")
         assert residual.attrs["units"] == "m2"
-        np.testing.assert_array_equal(residual.values, prior.segments["thigh"].hierarchy.residual)
+        stored = prior.segments["thigh"].variables()["residual"]
+        np.testing.assert_array_equal(residual.values, stored.values)
+        assert stored.values.shape == (9, 9)
         assert data["validation_coverage"].dims == (
             "validation_segment",
             "validation_unit",
@@ -179,10 +181,11 @@ def test_a_truncated_file_is_refused(saved: Path, tmp_path: Path, share: float) 
 
 def test_an_unknown_family_is_refused(prior: Prior, tmp_path: Path) -> None:
     path = tmp_path / "prior.nc"
-    replace(prior, family="magnitude").save(path)
+    replace(prior, family="reduced-rank-gps").save(path)
     with says(
         InputError,
-        f"{path}: not a whole prior file (family magnitude is not known here). Learn the prior again.",
+        "family of the prior: no family reduced-rank-gps here, "
+        f"known: {', '.join(known_families())}. Did you mean reduced-rank-gp?",
     ):
         load_prior(path)
 
@@ -198,14 +201,16 @@ def with_attribute(name: str, value: str) -> Callable[[xr.Dataset], xr.Dataset]:
 @pytest.mark.parametrize(
     ("damage", "reason"),
     [
-        (without("shank_residual"), "shank_residual"),
+        (without("shank_residual"), "'residual'"),
         (without("learned_time"), "learned_time"),
         (with_attribute("joints", '[{"name": "knee"}]'), "dof"),
         (with_attribute("joints", '[{"name": "knee", "dof": ["flexion"], "colour": "red"}]'), "colour"),
         (with_attribute("notes", "{"), "Expecting"),
-        (with_attribute("stop_reasons", "[1]"), "list indices"),
+        (without("thigh_block_subject"), "'block_subject'"),
+        (without("segment_names"), "segment_names"),
+        (with_attribute("covariates", "["), "Expecting"),
     ],
-    ids=["residual", "times", "joint short", "joint long", "notes", "reasons"],
+    ids=["residual", "times", "joint short", "joint long", "notes", "blocks", "segments", "covariates"],
 )
 def test_a_file_that_lacks_a_part_is_refused(
     prior: Prior, tmp_path: Path, damage: Callable[[xr.Dataset], xr.Dataset], reason: str
