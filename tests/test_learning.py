@@ -17,7 +17,7 @@ from sta_prior.io.files import read_points
 from sta_prior.io.netcdf import dataset_digest
 from sta_prior.io.text import read_bone_table, write_bone_table
 from sta_prior.pairs import pair
-from sta_prior.prior import Prior, learn
+from sta_prior.prior import DEFAULT_FAMILY, Prior, known_families, learn
 from sta_prior.prior.learning import joint_labels
 from sta_prior.simulate import write_study
 from sta_prior.study import read_study
@@ -35,6 +35,14 @@ def assert_same_prior(one: Prior, other: Prior, rtol: float = 1e-9) -> None:
         assert model.markers == twin.markers
         assert model.basis.terms == twin.basis.terms
         np.testing.assert_allclose(model.basis.mixing, twin.basis.mixing, rtol=1e-8)
+        assert [(w.joint, w.dof, w.count, w.kind) for w in model.basis.waves] == [
+            (w.joint, w.dof, w.count, w.kind) for w in twin.basis.waves
+        ]
+        for part in ("centre", "limit", "length", "scale"):
+            a, b = ([getattr(w, part) for w in m.basis.waves] for m in (model, twin))
+            np.testing.assert_allclose(a, b, rtol=1e-9, err_msg=part)
+        assert model.basis.reaches == twin.basis.reaches
+        np.testing.assert_allclose(model.magnitude, twin.magnitude, rtol=1e-12)
         assert model.time_constant == pytest.approx(twin.time_constant, rel=1e-9)
         assert model.inflation == pytest.approx(twin.inflation, rel=1e-9)
         np.testing.assert_allclose(model.layout, twin.layout, rtol=1e-12)
@@ -47,7 +55,7 @@ def assert_same_prior(one: Prior, other: Prior, rtol: float = 1e-9) -> None:
     np.testing.assert_allclose(
         one.validation["coverage"].values, other.validation["coverage"].values, atol=1e-12
     )
-    for part in ("rms_error", "crps"):
+    for part in ("rms_error", "crps", "log_score", "log_score_zero", "log_score_pooled"):
         np.testing.assert_allclose(one.validation[part].values, other.validation[part].values, rtol=1e-7)
 
 
@@ -57,7 +65,7 @@ def test_a_prior_holds_what_it_learned_from() -> None:
     pairs.attrs["invented_data"] = 1
     pairs.attrs["covariates"] = '{"P01": {"mass_kg": 71.5}, "P03": {"mass_kg": 64.0}}'
     prior = learn(pairs, hold_out=["P03"])
-    assert prior.family == "linear"
+    assert prior.family == DEFAULT_FAMILY == "reduced-rank-gp"
     assert prior.subjects == ("P01", "P02")
     assert not prior.is_personal
     assert prior.invented
@@ -81,16 +89,20 @@ def test_a_prior_holds_what_it_learned_from() -> None:
     assert shank.hierarchy.stop_reason == "relative change of the covariances below 0.001"
 
 
-def test_learning_predicts_subjects_left_out() -> None:
+@pytest.mark.parametrize("family", ["linear", "reduced-rank-gp"])
+def test_learning_predicts_subjects_left_out(family: str) -> None:
     """Artifact a radian: 4 mm shared, 2 mm of one's own. Expected share left: √(2²·1.2)/√(4² + 2²) = 0.49.
 
     Bound 0.75, for six subjects draw few shared weights, and residual and bone noise are left over too.
     """
-    prior = learn(made.make_pairs(np.random.default_rng(2), made.subjects_of(6)))
+    prior = learn(made.make_pairs(np.random.default_rng(2), made.subjects_of(6)), family)
+    assert prior.family == family
     for name in prior.segments:
         figures = prior.validation.sel(segment=name)
         assert figures["rms_error"].mean() < 0.75 * figures["rms_zero"].mean()
         assert figures["crps"].mean() < 0.75 * figures["crps_zero"].mean()
+        for rival in ("log_score_zero", "log_score_pooled"):
+            assert figures["log_score"].mean() > figures[rival].mean()
 
 
 def test_hold_out_is_learning_without() -> None:
@@ -113,7 +125,9 @@ def test_holding_out_everybody_is_refused() -> None:
 
 def test_an_unknown_family_is_refused_with_the_nearest() -> None:
     pairs = made.make_pairs(np.random.default_rng(6), ["P01"])
-    with says(InputError, "--family: no family liner here, known: linear. Did you mean linear?"):
+    known = ", ".join(known_families())
+    assert known.startswith("reduced-rank-gp, linear")
+    with says(InputError, f"--family: no family liner here, known: {known}. Did you mean linear?"):
         learn(pairs, family="liner")
 
 
@@ -186,7 +200,7 @@ def test_only_subjects_that_were_learned_from_count() -> None:
 
 def test_one_trial_cannot_be_validated() -> None:
     prior = learn(made.make_pairs(np.random.default_rng(12), ["P01"], trials=1))
-    assert dict(prior.validation.sizes) == {"segment": 2, "unit": 0, "level": 3}
+    assert dict(prior.validation.sizes) == {"segment": 2, "unit": 0, "level": 3, "bin": 10}
     assert prior.validation["by_subject"].values.tolist() == [0, 0]
     assert prior.segments["thigh"].inflation == 4.0
 
@@ -213,6 +227,8 @@ def test_angles_of_an_ankle_are_taken_in_its_own_order() -> None:
     prior = learn(pairs)
     foot = prior.segments["foot"]
     assert [(term.joint, term.dof, term.power) for term in foot.basis.terms] == [(1, 0, 1), (1, 0, 2)]
+    assert [(wave.joint, wave.dof) for wave in foot.basis.waves] == [(1, 0)]
+    assert [(reach.joint, reach.dof) for reach in foot.basis.reaches] == [(1, 0)]
     assert [term.joint for term in prior.segments["shank"].basis.terms] == [0, 0, 1, 1]
     # Features of dorsiflexion, which moves by half a radian; internal rotation stands still in this data.
     values = foot.trials[0].blocks[0].feature_gram
