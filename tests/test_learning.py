@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import shutil
 from pathlib import Path
+from typing import cast
 
 import made_priors as made
 import numpy as np
@@ -18,6 +19,7 @@ from sta_prior.io.netcdf import dataset_digest
 from sta_prior.io.text import read_bone_table, write_bone_table
 from sta_prior.pairs import pair
 from sta_prior.prior import DEFAULT_FAMILY, Prior, known_families, learn
+from sta_prior.prior.feature_model import FeatureModel
 from sta_prior.prior.learning import joint_labels
 from sta_prior.simulate import write_study
 from sta_prior.study import read_study
@@ -28,10 +30,15 @@ PERSONAL = (
 )
 
 
+def models(prior: Prior) -> dict[str, FeatureModel]:
+    """The segments of a prior of a family that is linear in features."""
+    return {name: cast(FeatureModel, model) for name, model in prior.segments.items()}
+
+
 def assert_same_prior(one: Prior, other: Prior, rtol: float = 1e-9) -> None:
     assert tuple(one.segments) == tuple(other.segments)
-    for name, model in one.segments.items():
-        twin = other.segments[name]
+    for name, model in models(one).items():
+        twin = models(other)[name]
         assert model.markers == twin.markers
         assert model.basis.terms == twin.basis.terms
         np.testing.assert_allclose(model.basis.mixing, twin.basis.mixing, rtol=1e-8)
@@ -81,7 +88,7 @@ def test_a_prior_holds_what_it_learned_from() -> None:
         ("P02", "walk_2", "walk", "digest of P02 walk_2", 40),
     ]
     np.testing.assert_array_equal(prior.trials[0].times, pairs["time"].values[:40])
-    shank = prior.segments["shank"]
+    shank = models(prior)["shank"]
     assert shank.markers == ("SA", "SB", "SC")
     mirrored = pairs["reference"].values[:2, 3:] * np.array([[[1, 1, 1]], [[1, 1, -1]]])
     np.testing.assert_allclose(shank.layout, mirrored.mean(axis=0), rtol=1e-14)
@@ -225,11 +232,11 @@ def test_angles_of_an_ankle_are_taken_in_its_own_order() -> None:
         ("dorsiflexion", "inversion", "internal_rotation"),
     ]
     prior = learn(pairs)
-    foot = prior.segments["foot"]
+    foot = models(prior)["foot"]
     assert [(term.joint, term.dof, term.power) for term in foot.basis.terms] == [(1, 0, 1), (1, 0, 2)]
     assert [(wave.joint, wave.dof) for wave in foot.basis.waves] == [(1, 0)]
     assert [(reach.joint, reach.dof) for reach in foot.basis.reaches] == [(1, 0)]
-    assert [term.joint for term in prior.segments["shank"].basis.terms] == [0, 0, 1, 1]
+    assert [term.joint for term in models(prior)["shank"].basis.terms] == [0, 0, 1, 1]
     # Features of dorsiflexion, which moves by half a radian; internal rotation stands still in this data.
     values = foot.trials[0].blocks[0].feature_gram
     assert np.diag(values)[1] / values[0, 0] > 0.1
@@ -257,8 +264,8 @@ def test_order_of_everything_in_the_pairs_does_not_matter() -> None:
 def test_order_of_markers_does_not_matter() -> None:
     pairs = made.make_pairs(np.random.default_rng(16), made.subjects_of(3))
     order = [2, 0, 1, 5, 3, 4]
-    one = learn(pairs).segments["thigh"]
-    other = learn(pairs.isel(marker=order)).segments["thigh"]
+    one = models(learn(pairs))["thigh"]
+    other = models(learn(pairs.isel(marker=order)))["thigh"]
     assert other.markers == ("TC", "TA", "TB")
     columns = (3 * np.array([2, 0, 1])[:, None] + np.arange(3)).reshape(-1)
     expected = one.hierarchy.residual[np.ix_(columns, columns)]
@@ -324,8 +331,8 @@ def test_a_mirrored_copy_of_a_study_gives_the_same_prior(tmp_path: Path) -> None
         left["displacement"].values * signs, right["displacement"].values, atol=1e-7, equal_nan=True
     )
     one, other = learn(left), learn(right)
-    for name, model in one.segments.items():
-        twin = other.segments[name]
+    for name, model in models(one).items():
+        twin = models(other)[name]
         scale = np.abs(twin.hierarchy.population.mean).max()
         np.testing.assert_allclose(
             model.hierarchy.population.mean, twin.hierarchy.population.mean, atol=1e-4 * scale

@@ -287,10 +287,7 @@ def test_own_frames_of_a_subject_never_imaged_sharpen_its_weights(family: str) -
         assert added_variance(sharp) < 0.95 * added_variance(wide)
     model = model_of(prior)
     dof = {joint.name: joint.dof for joint in prior.joints}
-    own = [
-        summarise(item, model.basis)
-        for item in segment_frames(pairs, "thigh", model.markers, dof)
-    ]
+    own = [summarise(item, model.basis) for item in segment_frames(pairs, "thigh", model.markers, dof)]
     wider = widened(prior, model.hierarchy)
     assert_same(weights(same), trial_posterior(wider, own, "walk_1"))
     belief = subject_posterior(wider, own)

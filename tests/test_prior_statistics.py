@@ -233,14 +233,15 @@ def ar1_frames(
 def test_decay_time_is_recovered_though_the_bone_truth_is_noisy(noise_sd: float) -> None:
     """τ = 20 ms, ρ = 0.607, less what three features take from 160 frames; tolerance 5 % (Monte Carlo).
 
-    Of an AR(1) that varies faster than the features they take b = 3/160·(1 + ρ)/(1 − ρ) from variance and
-    covariance of neighbours alike, of white noise 3/160. First order, worked by hand.
+    Of an AR(1) that varies faster than the features they take b = 3/160·(1 + ρ)/(1 − ρ) from the products at
+    lags one and two alike, of white noise 3/160. A window of 80 frames has 79 pairs at lag one and 78 at lag
+    two. First order, worked by hand.
     """
     frames = ar1_frames(np.random.default_rng(14), 0.02, noise_sd)
     rho = np.exp(-0.5)
     taken = 3 / 160 * (1 + rho) / (1 - rho) + 3 / 160 * noise_sd**2
-    expected = -0.01 / np.log((rho - taken) / (1 - taken))
-    assert expected == pytest.approx(0.0178, abs=4e-4)
+    expected = -0.01 / np.log(78 * (rho**2 - taken) / (79 * (rho - taken)))
+    assert expected == pytest.approx(0.0160, abs=5e-4)
     assert estimate_time_constant(frames, linear_basis((0,))) == pytest.approx(expected, rel=0.05)
 
 
@@ -248,8 +249,28 @@ def test_decay_time_is_capped_at_both_ends() -> None:
     generator = np.random.default_rng(15)
     basis = linear_basis((0,))
     assert estimate_time_constant(ar1_frames(generator, 1.0, 0.0, trials=4), basis) == LONGEST_TIME_CONSTANT
-    drowned = [replace(item, noise=100.0 * item.noise) for item in ar1_frames(generator, 0.02, 1.0, trials=4)]
-    assert estimate_time_constant(drowned, basis) == LONGEST_TIME_CONSTANT
+    # Neighbours that have nothing in common tell no decay time: the slowest, which counts frames least.
+    white = ar1_frames(generator, 0.0, 0.0, trials=4)
+    assert estimate_time_constant(white, basis) == LONGEST_TIME_CONSTANT
+
+
+def test_decay_time_is_never_shorter_than_a_millisecond() -> None:
+    """Products of neighbours 2, of next but one c, a block of five frames: τ = −10 ms/ln(c/2)."""
+    basis, time = linear_basis(()), np.arange(400) / 100.0
+    nothing, noise = np.zeros((400, 0, 3)), np.zeros((400, 3, 3))
+    for product, expected in ((0.5, 0.007213475), (1e-4, 0.001009746), (2e-5, 0.001)):
+        block = np.array([1.0, 2.0 / (1.0 + product), product, 0.0, 0.0])
+        displacement = np.zeros((400, 3))
+        displacement[:, 0] = np.tile(np.concatenate([block, -block]), 40)
+        frames = SegmentFrames("S", "t", nothing, np.zeros((0, 3)), displacement, noise, time)
+        assert estimate_time_constant([frames], basis) == pytest.approx(expected, rel=1e-6)
+
+
+def test_decay_time_does_not_ask_how_noisy_the_bone_truth_was_said_to_be() -> None:
+    basis = linear_basis((0,))
+    frames = ar1_frames(np.random.default_rng(18), 0.02, 1.0, trials=4)
+    louder = [replace(item, noise=100.0 * item.noise) for item in frames]
+    assert estimate_time_constant(louder, basis) == estimate_time_constant(frames, basis) < 0.03
 
 
 def test_decay_time_looks_only_at_neighbours_of_one_window() -> None:

@@ -8,13 +8,23 @@ from dataclasses import replace
 import numpy as np
 import pytest
 from scipy.signal import lfilter
+from scipy.stats import multivariate_normal
 
 from sta_prior.checks import FloatArray
-from sta_prior.prior.base import SegmentModel
+from sta_prior.prior.artifact import FeatureArtifact
+from sta_prior.prior.family import Posture, SegmentData
+from sta_prior.prior.feature_model import LINEAR, REDUCED_RANK, REFIT, FeatureFamily, FeatureModel
 from sta_prior.prior.fitting import fit_hierarchy
-from sta_prior.prior.hierarchy import new_subject, trial_posterior, unison_covariance, without_subject
-from sta_prior.prior.linear import LinearArtifact, linear_basis, orthonormal
-from sta_prior.prior.statistics import SegmentFrames, estimate_time_constant, summarise
+from sta_prior.prior.hierarchy import (
+    Hierarchy,
+    TrialStatistics,
+    new_subject,
+    trial_posterior,
+    unison_covariance,
+    without_subject,
+)
+from sta_prior.prior.linear import linear_basis
+from sta_prior.prior.statistics import SegmentFrames, summarise
 from sta_prior.prior.validate import (
     LARGEST_INFLATION,
     LeftOut,
@@ -22,6 +32,7 @@ from sta_prior.prior.validate import (
     calibrate_inflation,
     coverage,
     few_subjects_factor,
+    learn_rivals,
     leave_one_out,
     predict_others,
     summarise_validation,
@@ -69,14 +80,18 @@ def draw_population(generator: np.random.Generator, subjects: int, trials: int =
     return made_frames
 
 
-def model_of(frames: list[SegmentFrames]) -> SegmentModel:
+def model_of(frames: list[SegmentFrames], family: FeatureFamily = LINEAR) -> FeatureModel:
     """Learn one segment as prior.learning does."""
-    angles, references = [item.angles for item in frames], [item.reference_angles for item in frames]
-    basis = orthonormal(linear_basis((0,)), angles, references)
-    constant = estimate_time_constant(frames, basis)
-    trials = tuple(summarise(item, basis, constant) for item in frames)
-    fit = fit_hierarchy(list(trials), np.arange(3) == 0)
-    return SegmentModel("thigh", ("TA", "TB"), np.zeros((2, 3)), basis, fit, trials, constant)
+    return family.learn(SegmentData("thigh", ("TA", "TB"), np.zeros((2, 3)), frames, (0,)))
+
+
+def refit(model: FeatureModel, trials: list[TrialStatistics]) -> Hierarchy:
+    """Fit to other trials from where the model stood."""
+    relative, total = model.basis.relative_variance, model.basis.total_relative_variance
+    return fit_hierarchy(trials, relative, total, model.hierarchy, REFIT)
+
+
+both_families = pytest.mark.parametrize("family", [LINEAR, REDUCED_RANK], ids=lambda family: family.name)
 
 
 def left_out(error: FloatArray, constant: float = 1.0, rest: float = 0.0, unit: str = "A") -> LeftOut:
@@ -147,7 +162,7 @@ def test_figures_by_hand() -> None:
     """CRPS of the normal law (Gneiting & Raftery 2007): 0.2336949773 at y = 0, 0.6024413576 at y = 1."""
     units = [left_out(np.array([0.0, 1.0]), unit="A"), left_out(np.array([3.0, 4.0]), unit="B")]
     data = summarise_validation("thigh", units, 1.0)
-    assert dict(data.sizes) == {"segment": 1, "unit": 2, "level": 3}
+    assert dict(data.sizes) == {"segment": 1, "unit": 2, "level": 3, "bin": 10}
     assert data["level"].values.tolist() == [0.50, 0.90, 0.95]
     assert data["unit"].values.tolist() == ["A", "B"]
     np.testing.assert_allclose(data["coverage"].values[0], [[0.5, 1.0, 1.0], [0.0, 0.0, 0.0]])
@@ -159,23 +174,31 @@ def test_figures_by_hand() -> None:
     bracket = at * math.erf(1.0) + 2 * math.exp(-1.0) / math.sqrt(2 * math.pi) - 1 / math.sqrt(math.pi)
     assert data["crps_zero"].values[0, 0] == pytest.approx(at * (0.2336949773 + bracket) / 2, rel=1e-9)
     assert (data["by_subject"].item(), data["inflation"].item()) == (1, 1.0)
+    # Φ(0) = 0.5, Φ(1) = 0.84; Φ(3) and Φ(4) are nearly 1. Table.
+    pit = np.zeros((2, 10))
+    pit[0, 5] = pit[0, 8] = 0.5
+    pit[1, 9] = 1.0
+    np.testing.assert_array_equal(data["pit"].values[0], pit)
+    np.testing.assert_allclose(data["bin"].values, 0.05 + 0.1 * np.arange(10))
+    assert np.isnan(data["log_score"].values).all()
     wide = summarise_validation("thigh", units, 4.0)
     np.testing.assert_allclose(wide["coverage"].values[0, 1], [0, 0.5, 0.5])
     assert all(data[name].attrs["units"] in ("1", "m") for name in data.data_vars)
 
 
-def test_a_subject_left_out_is_predicted_as_one_never_imaged() -> None:
+@both_families
+def test_a_subject_left_out_is_predicted_as_one_never_imaged(family: FeatureFamily) -> None:
     frames = draw_population(np.random.default_rng(1), 4)
-    model = model_of(frames)
+    model = model_of(frames, family)
     units = leave_one_out(model, frames)
     assert [unit.unit for unit in units] == ["S00", "S01", "S02", "S03"]
     own = [item for item in frames if item.subject == "S02"]
     others = [trial for trial in model.trials if trial.subject != "S02"]
-    fit = fit_hierarchy(others, model.fixed_at_reference, model.hierarchy, 10)
+    fit = refit(model, others)
     weights = new_subject(fit)
     predicted = [
-        LinearArtifact(
-            model.basis, weights, fit.residual, model.time_constant, item.reference_angles
+        FeatureArtifact(
+            model.basis, weights, fit.residual, model.time_constant, item.reference_angles, model.magnitude
         ).moments(item.angles)
         for item in own
     ]
@@ -188,14 +211,63 @@ def test_a_subject_left_out_is_predicted_as_one_never_imaged() -> None:
     np.testing.assert_allclose(units[2].rest, np.tile(np.diag(fit.residual), 160), rtol=1e-12)
 
 
-def test_what_a_left_out_subject_did_does_not_change_its_own_prediction() -> None:
-    frames = draw_population(np.random.default_rng(2), 4)
+def test_log_scores_are_mean_log_densities_of_whole_frames() -> None:
+    """By SciPy, frame by frame; a frame with a hidden marker counts with the other one alone."""
+    frames = draw_population(np.random.default_rng(6), 3)
+    displacement = frames[4].displacement.copy()
+    displacement[7, 3:] = np.nan
+    frames[4] = replace(frames[4], displacement=displacement)
     model = model_of(frames)
+    kept = frames[:4]
+    (unit,) = [item for item in leave_one_out(model, frames, (0,)) if item.unit == "S02"]
+    fresh = model.refitted(kept)
+    rivals = learn_rivals(kept, (0,))
+    totals, count = np.zeros(3), 0
+    for item in frames[4:]:
+        artifact = fresh.for_new_subject(Posture(item.reference_angles, np.zeros((2, 3))), 1.0)
+        moments = artifact.moments(item.angles)
+        change = linear_basis((0,)).values(item.angles, item.reference_angles)
+        for at in range(80):
+            seen = np.isfinite(item.displacement[at])
+            laws = (
+                (moments.mean[at], moments.covariance[at]),
+                (np.zeros(OUTPUTS), rivals.zero),
+                (change[at] @ rivals.weights, rivals.pooled),
+            )
+            for index, (mean, covariance) in enumerate(laws):
+                law = multivariate_normal(mean[seen], covariance[np.ix_(seen, seen)])
+                totals[index] += law.logpdf(item.displacement[at][seen])
+            count += int(seen.sum())
+    got = (unit.log_score, unit.log_score_zero, unit.log_score_pooled)
+    # The scores of a subject's trials are averaged by their values.
+    np.testing.assert_allclose(got, totals / count, rtol=1e-9)
+
+
+def test_rivals_are_second_moment_and_least_squares() -> None:
+    frames = draw_population(np.random.default_rng(7), 3)
+    rivals = learn_rivals(frames, (0,))
+    outputs = np.concatenate([item.displacement for item in frames])
+    np.testing.assert_allclose(
+        rivals.zero, outputs.T @ outputs / len(outputs) + 9e-8 * np.eye(OUTPUTS), rtol=1e-9
+    )
+    basis = linear_basis((0,))
+    features = np.concatenate([basis.values(item.angles, item.reference_angles)[:, 1:] for item in frames])
+    weights, *_ = np.linalg.lstsq(features, outputs, rcond=None)
+    np.testing.assert_allclose(rivals.weights[1:], weights, atol=1e-4 * np.abs(weights).max())
+    assert not rivals.weights[0].any()
+    rest = outputs - features @ rivals.weights[1:]
+    np.testing.assert_allclose(rivals.pooled, rest.T @ rest / len(rest) + 9e-8 * np.eye(OUTPUTS), rtol=1e-9)
+
+
+@both_families
+def test_what_a_left_out_subject_did_does_not_change_its_own_prediction(family: FeatureFamily) -> None:
+    frames = draw_population(np.random.default_rng(2), 4)
+    model = model_of(frames, family)
     wild = [
         replace(item, displacement=7.0 * item.displacement + 0.01) if item.subject == "S01" else item
         for item in frames
     ]
-    trials = tuple(summarise(item, model.basis, model.time_constant) for item in wild)
+    trials = tuple(summarise(item, model.basis) for item in wild)
     one, other = leave_one_out(model, frames)[1], leave_one_out(replace(model, trials=trials), wild)[1]
     np.testing.assert_array_equal(one.constant, other.constant)
     np.testing.assert_array_equal(one.rest, other.rest)
@@ -203,13 +275,14 @@ def test_what_a_left_out_subject_did_does_not_change_its_own_prediction() -> Non
     assert np.abs(one.error - other.error).max() > 0.01
 
 
-def test_a_refit_from_where_it_stood_is_a_refit_from_scratch() -> None:
+@both_families
+def test_a_refit_from_where_it_stood_is_a_refit_from_scratch(family: FeatureFamily) -> None:
     """Left-out fits start from the whole one; what that keeps of the left-out subject is below 1 %."""
     frames = draw_population(np.random.default_rng(3), 6)
-    model = model_of(frames)
+    model = model_of(frames, family)
     others = [trial for trial in model.trials if trial.subject != "S00"]
-    warm = fit_hierarchy(others, model.fixed_at_reference, model.hierarchy, 10)
-    cold = fit_hierarchy(others, model.fixed_at_reference)
+    warm = refit(model, others)
+    cold = fit_hierarchy(others, model.basis.relative_variance, model.basis.total_relative_variance)
     for part in ("subject_covariance", "trial_covariance", "residual"):
         np.testing.assert_allclose(
             np.trace(getattr(warm, part)), np.trace(getattr(cold, part)), rtol=0.01, err_msg=part
@@ -222,8 +295,11 @@ def test_one_subject_is_validated_by_its_trials() -> None:
     units = leave_one_out(model, frames)
     assert [unit.unit for unit in units] == ["t0", "t1", "t2"]
     assert not any(unit.by_subject for unit in units)
-    alone = without_subject(model.hierarchy, list(model.trials), model.fixed_at_reference, "S00")
-    weights = trial_posterior(alone, [model.trials[0], model.trials[2]], "t1")
+    # Learned from the two other trials, which count as the subject's own and not as the population's.
+    rest = [model.trials[0], model.trials[2]]
+    relative = model.basis.relative_variance
+    alone = without_subject(refit(model, rest), rest, relative, "S00")
+    weights = trial_posterior(alone, rest, "t1")
     mean = model.basis.values(frames[1].angles, frames[1].reference_angles) @ weights.mean
     np.testing.assert_allclose(units[1].error, (frames[1].displacement - mean).ravel(), rtol=1e-9, atol=1e-15)
     assert leave_one_out(model, frames[:1]) == []
