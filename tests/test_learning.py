@@ -46,8 +46,8 @@ def assert_same_prior(one: Prior, other: Prior, rtol: float = 1e-9) -> None:
             (w.joint, w.dof, w.count, w.kind) for w in twin.basis.waves
         ]
         for part in ("centre", "limit", "length", "scale"):
-            a, b = ([getattr(w, part) for w in m.basis.waves] for m in (model, twin))
-            np.testing.assert_allclose(a, b, rtol=1e-9, err_msg=part)
+            got, expected = ([getattr(w, part) for w in m.basis.waves] for m in (model, twin))
+            np.testing.assert_allclose(got, expected, rtol=1e-9, err_msg=part)
         assert model.basis.reaches == twin.basis.reaches
         np.testing.assert_allclose(model.magnitude, twin.magnitude, rtol=1e-12)
         assert model.time_constant == pytest.approx(twin.time_constant, rel=1e-9)

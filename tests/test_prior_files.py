@@ -82,7 +82,7 @@ def test_the_digest_is_that_of_the_content(prior: Prior, saved: Path, tmp_path: 
     load_prior(saved).save(tmp_path / "again.nc")
     assert load_prior(tmp_path / "again.nc").digest == prior.digest
     thigh = prior.segments["thigh"]
-    other = replace(prior, segments={**prior.segments, "thigh": replace(thigh, inflation=1.01)})
+    other = replace(prior, segments={**prior.segments, "thigh": thigh.with_inflation(1.01)})
     assert other.digest != prior.digest
     assert replace(prior, notes=("another",)).digest != prior.digest
     assert len(prior.digest) == 64
