@@ -79,7 +79,8 @@ def satterthwaite_rule(freedom: float) -> Rule:
 
 def coverage(units: Sequence[LeftOut], rule: Rule) -> FloatArray:
     """Mean over subjects, (3,)."""
-    return np.mean([(np.abs(u.error) <= rule(u.constant, u.rest)).mean(axis=1) for u in units], axis=0)
+    inside = [(np.abs(u.error) <= rule(u.constant, u.rest)).mean(axis=1) for u in units]
+    return np.asarray(np.mean(inside, axis=0), dtype=np.float64)
 
 
 def ratios(units: Sequence[LeftOut], factor: float) -> list[FloatArray]:

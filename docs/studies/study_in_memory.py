@@ -158,5 +158,6 @@ def solve_trial(
         SegmentProblem(0, points[:, :SPLIT], reference[:SPLIT], artifacts[0]),
         SegmentProblem(1, points[:, SPLIT:], reference[SPLIT:], artifacts[1]),
     ]
-    joints = [JointProblem(0, 1, KNEE, *subject.body.centres, travel_sd)]
+    proximal, distal = subject.body.centres
+    joints = [JointProblem(0, 1, KNEE, proximal, distal, travel_sd)]
     return solve_frames(segments, joints, bridge(first_look(segments, 2)[0], joints))
