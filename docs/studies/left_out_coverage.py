@@ -88,8 +88,8 @@ def ratios(units: Sequence[LeftOut], factor: float) -> list[FloatArray]:
     return [unit.error / np.sqrt(factor * unit.constant + unit.rest) for unit in units]
 
 
-def run_study(seed: int, mechanism: str, family: str, subjects: int) -> Outcome:
-    """Make, learn, leave out, predict and solve one study."""
+def run_study(seed: int, mechanism: str, family: str, subjects: int, solving: bool = True) -> Outcome:
+    """Make, learn, leave out and predict one study; solving: the fresh subjects' trials too."""
     couriers = make_couriers(seed, mechanism, subjects, FRESH)
     pairs = pairs_of(couriers.learned, couriers.population)
     others = pairs_of(couriers.fresh, couriers.population)
@@ -127,6 +127,8 @@ def run_study(seed: int, mechanism: str, family: str, subjects: int) -> Outcome:
         ("factor of n − 1", former_factor(subjects)),
         ("factor of n + 1", factor),
     ):
+        if not solving:
+            break
         solved[words], solved_sd[words] = _solve(couriers.fresh, models, inflation)
     return Outcome(
         {name: np.array(left_out[name]) for name in names},
