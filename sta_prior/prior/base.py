@@ -16,8 +16,10 @@ import xarray as xr
 from sta_prior.checks import FloatArray, nearest
 from sta_prior.errors import MismatchError, StaPriorWarning, message
 from sta_prior.pairs.pairing import segment_side
+from sta_prior.prior.augmented import Augmented
 from sta_prior.prior.family import Own, Posture, SegmentModel, restrict
 from sta_prior.prior.interface import Artifact
+from sta_prior.prior.magnitude import magnitude_for, words
 from sta_prior.prior.personal import LearnedTrial, OwnPairs, own_pairs
 from sta_prior.prior.statistics import SegmentFrames, segment_frames
 from sta_prior.study import Lab, Trial
@@ -124,21 +126,25 @@ class Prior:
         for index, segment in enumerate(lab.segments):
             model = self._match_segment(segment.name, segment.markers, lab)
             side = segment_side(lab, segment.name)
-            own_markers = reference.markers[lab.marker_segment == index]
+            positions = reference.markers[lab.marker_segment == index]
             posture = Posture(
                 reference.angles[joint_columns],
-                own_markers * mirror if side == "left" else own_markers,
+                positions * mirror if side == "left" else positions,
                 trial.activity,
             )
+            inner = self._artifact(model, posture, trial, own)
+            known = [marker for marker in segment.markers if not model.markers or marker in model.markers]
             first = [
-                3 * (model.markers.index(marker) if model.markers else position)
-                for position, marker in enumerate(segment.markers)
+                3 * (model.markers.index(marker) if model.markers else place)
+                for place, marker in enumerate(known)
             ]
             outputs = (np.array(first)[:, None] + np.arange(3)).reshape(-1)
-            inner = self._artifact(model, posture, trial, own)
-            artifacts[segment.name] = restrict(inner, outputs, side, joint_columns, len(lab.joints))
-        times, words = self._what_informs(trial, own)
-        return Binding(artifacts, times, words)
+            bound: Artifact = restrict(inner, outputs, side, joint_columns, len(lab.joints))
+            if len(known) < len(segment.markers):
+                bound = self._with_strangers(bound, model, segment.markers, posture, side, lab, joint_columns)
+            artifacts[segment.name] = bound
+        times, belief = self._what_informs(trial, own)
+        return Binding(artifacts, times, belief)
 
     def _warn_of_a_stranger(self, trial: Trial) -> None:
         """Say so where a personal prior meets another subject."""
@@ -189,6 +195,9 @@ class Prior:
 
     def _match_segment(self, name: str, markers: tuple[str, ...], lab: Lab) -> SegmentModel:
         if name not in self.segments:
+            alias = [key for key, model in self.segments.items() if not model.markers and key in words(name)]
+            if alias:
+                return self.segments[alias[0]]
             known = ", ".join(self.segments)
             raise MismatchError(
                 message(
@@ -198,16 +207,59 @@ class Prior:
                 )
             )
         model = self.segments[name]
-        unknown = [marker for marker in markers if model.markers and marker not in model.markers]
-        if unknown:
+        if model.markers and not set(markers) & set(model.markers):
             raise MismatchError(
                 message(
                     (lab.path, f"segment.{name}"),
                     f"prior expects {name} markers {' '.join(model.markers)}, lab has {' '.join(markers)}",
-                    f"Rename {unknown[0]} or learn a prior with it.",
+                    f"Rename {markers[0]} or learn a prior with it.",
                 )
             )
         return model
+
+    def _with_strangers(
+        self,
+        bound: Artifact,
+        model: SegmentModel,
+        markers: tuple[str, ...],
+        posture: Posture,
+        side: str,
+        lab: Lab,
+        joint_columns: list[int],
+    ) -> Artifact:
+        """Give markers that the prior does not know an artifact of published size, and say so."""
+        strange = [place for place, marker in enumerate(markers) if marker not in model.markers]
+        names = " ".join(markers[place] for place in strange)
+        adjacent = tuple(
+            index for index, joint in enumerate(self.joints) if model.name in (joint.proximal, joint.distal)
+        )
+        try:
+            size = magnitude_for(
+                model.name, posture.markers[strange], posture.activity, posture.angles, adjacent
+            )
+        except MismatchError as error:
+            raise MismatchError(
+                message(
+                    (lab.path, f"segment.{model.name}"),
+                    f"prior expects {model.name} markers {' '.join(model.markers)}, "
+                    f"lab has {' '.join(markers)}",
+                    f"Rename {markers[strange[0]]} or learn a prior with it.",
+                )
+            ) from error
+        warnings.warn(
+            message(
+                (lab.path, f"segment.{model.name}"),
+                f"the prior does not know marker {names}: artifact of published size is assumed there",
+                "Rename it, or learn a prior with it.",
+            ),
+            StaPriorWarning,
+            stacklevel=4,
+        )
+        every = np.arange(3 * len(strange))
+        others = restrict(size, every, side, joint_columns, len(lab.joints))
+        places = np.arange(3 * len(markers)).reshape(-1, 3)
+        rest = [place for place in range(len(markers)) if place not in strange]
+        return Augmented(bound, others, places[rest].reshape(-1), places[strange].reshape(-1))
 
     def _artifact(
         self, model: SegmentModel, posture: Posture, trial: Trial, own: OwnPairs | None

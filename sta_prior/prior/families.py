@@ -12,9 +12,10 @@ from sta_prior.checks import nearest
 from sta_prior.errors import InputError, message
 from sta_prior.prior.family import Family
 from sta_prior.prior.feature_model import LINEAR, REDUCED_RANK
+from sta_prior.prior.other_models import EXACT, MAGNITUDE
 
 GROUP = "sta_prior.priors"
-BUILT_IN: dict[str, Family] = {family.name: family for family in (REDUCED_RANK, LINEAR)}
+BUILT_IN: dict[str, Family] = {family.name: family for family in (REDUCED_RANK, LINEAR, EXACT, MAGNITUDE)}
 DEFAULT_FAMILY = REDUCED_RANK.name
 
 

@@ -28,6 +28,7 @@ from sta_prior.prior.hierarchy import (
     without_subject,
 )
 from sta_prior.prior.linear import flexion_reaches, linear_basis
+from sta_prior.prior.other_models import beyond_data
 from sta_prior.prior.reduced_rank import reduced_rank_basis
 from sta_prior.prior.statistics import SegmentFrames, estimate_time_constant, summarise
 
@@ -263,18 +264,6 @@ def merged(trials: Sequence[TrialStatistics]) -> list[TrialStatistics]:
         key = (trial.subject, trial.trial)
         blocks[key] = blocks.get(key, ()) + trial.blocks
     return [TrialStatistics(subject, trial, own) for (subject, trial), own in blocks.items()]
-
-
-def beyond_data(segment: str, layout: FloatArray) -> FloatArray:
-    """Covariance of the magnitude prior for a segment, (3m, 3m) m²: what the spread grows by off-range."""
-    from sta_prior.prior.hierarchy import unison_covariance
-
-    sd = next((size for word, size in _SIZES.items() if word in segment.lower()), _ANY_SIZE)
-    return sd**2 * unison_covariance(3 * layout.shape[0], 0.7)
-
-
-_SIZES = {"thigh": 0.010, "shank": 0.006}
-_ANY_SIZE = 0.008
 
 
 def _held_linear_basis(

@@ -46,11 +46,11 @@ def prior_to_dataset(prior: Prior) -> xr.Dataset:
     for name, model in prior.segments.items():
         variables.update(_segment_variables(name, model))
     times = [trial.times for trial in prior.trials]
-    variables["learned_time"] = (("learned_frame",), np.concatenate(times), {"units": "s"})
+    variables["learned_time"] = (("learned_frame",), np.concatenate([np.zeros(0), *times]), {"units": "s"})
     counts = np.array([time.size for time in times], dtype=np.int64)
     variables["learned_frames"] = (("learned_trial",), counts, _ONE)
     for field in ("subject", "trial", "activity", "digest"):
-        values = np.array([getattr(trial, field) for trial in prior.trials])
+        values = np.array([getattr(trial, field) for trial in prior.trials], dtype=str)
         variables[f"learned_{field}"] = (("learned_trial",), values, _ONE)
     data = xr.Dataset(variables)
     for figure in prior.validation.data_vars:
@@ -111,7 +111,9 @@ def _from_dataset(data: xr.Dataset) -> Prior:
     names = [str(name) for name in data["segment_names"].values]
     segments = {name: family.read(name, _stored(data, name)) for name in names}
     ends = np.cumsum(data["learned_frames"].values)
-    times = np.split(np.asarray(data["learned_time"].values, dtype=np.float64), ends[:-1])
+    times = (
+        np.split(np.asarray(data["learned_time"].values, dtype=np.float64), ends[:-1]) if ends.size else []
+    )
     columns = [
         [str(value) for value in data[f"learned_{field}"].values]
         for field in ("subject", "trial", "activity", "digest")
