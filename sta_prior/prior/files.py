@@ -27,7 +27,7 @@ def _segment_variables(name: str, model: SegmentModel) -> Variables:
     stored = {
         **model.variables(),
         "markers": Variable(("marker",), np.array(model.markers, dtype=str)),
-        "layout": Variable(("marker", "axis"), model.layout, "m"),
+        "layout": Variable(("place", "axis"), model.layout, "m"),
         "inflation": Variable((), np.array(model.inflation)),
     }
     return {

@@ -7,7 +7,7 @@ prior/magnitude.py.
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, fields, replace
+from dataclasses import dataclass, field, fields, replace
 
 import numpy as np
 
@@ -86,10 +86,10 @@ class ExactModel:
     def variables(self) -> dict[str, Variable]:
         """All that has to be stored, as arrays; a dimension for every field of the fit."""
         stored = {}
-        for field in fields(ExactFit):
-            values = np.asarray(getattr(self.fit, field.name))
-            dims = tuple(f"{field.name}_{axis}" for axis in range(values.ndim))
-            stored[field.name] = Variable(dims, values, _UNITS.get(field.name, "1"))
+        for item in fields(ExactFit):
+            values = np.asarray(getattr(self.fit, item.name))
+            dims = tuple(f"{item.name}_{axis}" for axis in range(values.ndim))
+            stored[item.name] = Variable(dims, values, _UNITS.get(item.name, "1"))
         return stored
 
 
@@ -107,12 +107,12 @@ class ExactFamily:
     def read(self, name: str, stored: Mapping[str, Values]) -> ExactModel:
         """Make the model of a segment from what its ``variables`` stored."""
         items: dict[str, object] = {}
-        for field in fields(ExactFit):
-            values = stored[field.name]
-            if field.type in ("tuple[str, ...]", tuple):
-                items[field.name] = tuple(str(value) for value in values)
+        for item in fields(ExactFit):
+            values = stored[item.name]
+            if item.type == "tuple[str, ...]":
+                items[item.name] = tuple(str(value) for value in values)
             else:
-                items[field.name] = values.item() if values.ndim == 0 else values
+                items[item.name] = values.item() if values.ndim == 0 else values
         return ExactModel(
             name=name,
             markers=tuple(str(marker) for marker in stored["markers"]),
@@ -133,7 +133,7 @@ class MagnitudeModel:
     name: str
     adjacent: tuple[int, ...] = ()
     markers: tuple[str, ...] = ()
-    layout: FloatArray = np.zeros((0, 3))  # noqa: RUF009
+    layout: FloatArray = field(default_factory=lambda: np.zeros((0, 3)))
     inflation: float = 1.0
 
     def knows(self, subject: str) -> bool:
