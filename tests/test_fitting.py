@@ -10,13 +10,7 @@ import pytest
 from scipy.linalg import block_diag
 
 from sta_prior.checks import FloatArray
-from sta_prior.prior.fitting import (
-    BETWEEN_SHARE,
-    FEATURE_SHRINKAGE,
-    OUTPUT_SHRINKAGE,
-    PSEUDO_UNITS,
-    fit_hierarchy,
-)
+from sta_prior.prior.fitting import FitSettings, fit_hierarchy
 from sta_prior.prior.hierarchy import (
     Hierarchy,
     TrialStatistics,
@@ -26,7 +20,8 @@ from sta_prior.prior.hierarchy import (
     without_subject,
 )
 
-FIXED = np.array([True, False])
+RELATIVE = np.ones(2)
+SETTINGS = FitSettings()
 COVARIANCES = (
     "subject_features",
     "subject_outputs",
@@ -51,7 +46,7 @@ def second_moments(
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
     """ΣE[uuᵀ], ΣE[vvᵀ], ΣκE[rrᵀ] by one dense Gaussian of W, u, v and every residual, hidden ones too."""
     n = hierarchy.observed_residual.shape[0]
-    prior = population_prior(statistics, FIXED)
+    prior = population_prior(statistics, RELATIVE, hierarchy.subject_outputs)
     size = prior.covariance.shape[0]
     subjects = sorted({item.subject for item in trials})
     frames = [(at, f) for at, item in enumerate(trials) for f in range(item.weights.size)]
@@ -87,50 +82,101 @@ def second_moments(
     return np.asarray(subject), np.asarray(trial), np.asarray(residual)
 
 
-def flip_flop(
-    moment: FloatArray, units: float, features: FloatArray, outputs: FloatArray
-) -> tuple[FloatArray, FloatArray]:
-    """One step of the matrix-normal fit with its shrinkage, entry by entry."""
-    count, n = features.shape[0], outputs.shape[0]
-    blocks = moment.reshape(count, n, count, n)
-    precision = np.linalg.inv(outputs)
-    new = np.array([[np.trace(blocks[k, :, i] @ precision) for i in range(count)] for k in range(count)])
-    new /= n * units
-    new[~np.eye(count, dtype=bool)] *= 1.0 - FEATURE_SHRINKAGE
-    precision = np.linalg.inv(new)
-    spread = np.array([[np.trace(blocks[:, a, :, b] @ precision) for b in range(n)] for a in range(n)])
-    spread /= count * units
-    spread[~np.eye(n, dtype=bool)] *= 1.0 - OUTPUT_SHRINKAGE
+def dense_step(
+    hierarchy: Hierarchy, statistics: list[TrialStatistics], trials: list[made.MadeTrial]
+) -> Hierarchy:
+    """One step of expectation and maximisation with priors and shrinkage, entry by entry."""
+    subject, trial, residual = second_moments(hierarchy, statistics, trials)
+    count, n = hierarchy.subject_features.shape[0], hierarchy.residual.shape[0]
+    scale, pseudo = scale_of(statistics), SETTINGS.pseudo_units
+    weak = pseudo * SETTINGS.between_share / 2 * scale.displacement * np.eye(2 * n)
+    weak = weak @ np.kron(np.eye(2), unison_covariance(n))
+    spread, features, total = np.zeros((n, n)), [], 0.0
+    inverse = np.linalg.inv(hierarchy.subject_outputs)
+    for moment, units in ((subject, len({item.subject for item in trials})), (trial, len(trials))):
+        blocks = (moment + weak).reshape(count, n, count, n)
+        new = np.array([[np.trace(blocks[k, :, i] @ inverse) for i in range(count)] for k in range(count)])
+        new /= n * (units + pseudo)
+        new[~np.eye(count, dtype=bool)] *= 1.0 - SETTINGS.feature_shrinkage
+        precision = np.linalg.inv(new)
+        spread += [[np.trace(blocks[:, a, :, b] @ precision) for b in range(n)] for a in range(n)]
+        total += count * (units + pseudo)
+        features.append(new)
+    spread /= total
+    spread[~np.eye(n, dtype=bool)] *= 1.0 - SETTINGS.output_shrinkage
     size = np.trace(spread) / n
-    return new * size, spread / size
+    weight = sum(item.weights.sum() for item in trials)
+    own = pseudo * scale.residual * unison_covariance(n, 0.5)
+    return replace(
+        hierarchy,
+        subject_features=size * features[0],
+        subject_outputs=spread / size,
+        trial_features=size * features[1],
+        trial_outputs=spread / size,
+        observed_residual=(residual + own) / (weight + pseudo),
+    )
 
 
-@pytest.mark.parametrize("hidden", [False, True])
-def test_one_step_is_that_of_the_dense_joint_gaussian(hidden: bool) -> None:
-    generator = np.random.default_rng(1)
+def shared_start(generator: np.random.Generator) -> Hierarchy:
     start = made.random_hierarchy(generator, 2, 6)
+    return replace(start, trial_outputs=start.subject_outputs)
+
+
+@pytest.mark.parametrize("kind", ["all seen", "hidden, outputs apart"])
+def test_one_step_is_that_of_the_dense_joint_gaussian(kind: str) -> None:
+    """Exact with every output seen, and with hidden ones where outputs do not go together."""
+    generator = np.random.default_rng(1)
+    start = shared_start(generator)
+    hidden = kind != "all seen"
+    if hidden:
+        apart = np.diag([0.4, 0.7, 1.0, 1.0, 1.3, 1.6])
+        start = replace(
+            start, subject_outputs=apart, trial_outputs=apart, observed_residual=0.3 * apart[::-1, ::-1]
+        )
     trials = made.draw_trials(generator, start, [2, 1, 2], 4, hidden=hidden)
+    assert any(np.isnan(item.outputs).any() for item in trials) == hidden
     # A weight below one is a power of the likelihood, which has no joint Gaussian for hidden outputs.
     trials = trials if hidden else made.with_weights(trials, generator)
     statistics = made.statistics_of(trials)
-    got = fit_hierarchy(statistics, FIXED, start, maximum_iterations=1)
-    subject, trial, residual = second_moments(start, statistics, trials)
-    scale = scale_of(statistics)
-    pseudo = PSEUDO_UNITS * np.kron(BETWEEN_SHARE / 2 * np.diag(scale.features), unison_covariance(6))
-    features, outputs = flip_flop(subject + pseudo, 3 + 2.0, start.subject_features, start.subject_outputs)
-    np.testing.assert_allclose(got.subject_features, features, atol=1e-9)
-    np.testing.assert_allclose(got.subject_outputs, outputs, atol=1e-9)
-    features, outputs = flip_flop(trial + pseudo, 5 + 2.0, start.trial_features, start.trial_outputs)
-    np.testing.assert_allclose(got.trial_features, features, atol=1e-9)
-    np.testing.assert_allclose(got.trial_outputs, outputs, atol=1e-9)
-    weight = sum(item.weights.sum() for item in trials)
-    own = PSEUDO_UNITS * scale.residual * unison_covariance(6, 0.5)
-    np.testing.assert_allclose(got.observed_residual, (residual + own) / (weight + 2.0), atol=1e-9)
-    expected = without_subject(start, statistics, FIXED, "").population
-    np.testing.assert_allclose(got.population.mean, expected.mean, atol=1e-9)
-    np.testing.assert_allclose(got.population.covariance, expected.covariance, atol=1e-9)
+    got = fit_hierarchy(statistics, RELATIVE, start=start, settings=FitSettings(maximum_iterations=1))
+    expected = dense_step(start, statistics, trials)
+    for name in COVARIANCES:
+        if name != "residual":
+            np.testing.assert_allclose(getattr(got, name), getattr(expected, name), atol=1e-9, err_msg=name)
+    population = without_subject(got, statistics, RELATIVE, "").population
+    np.testing.assert_array_equal(got.population.mean, population.mean)
+    np.testing.assert_array_equal(got.population.covariance, population.covariance)
     assert got.stop_reason == "not converged in 1 iterations"
     assert got.iterations == 1
+
+
+@pytest.mark.parametrize("kind", ["now and then", "whole trials"])
+def test_hidden_outputs_end_near_the_dense_fit(kind: str) -> None:
+    """A fifth of the values hidden here and there, or one of two markers in every third trial.
+
+    Where hidden outputs mix all, covariances are taken block-diagonal; that costs up to 5 %
+    here, and ever less with more frames a trial.
+    """
+    generator = np.random.default_rng(2)
+    start = shared_start(generator)
+    drawn = made.draw_trials(generator, start, [3] * 5, 5, hidden=kind == "now and then")
+    if kind == "whole trials":
+        without = [np.where(np.arange(6) < 3, np.nan, item.outputs) for item in drawn]
+        drawn = [
+            replace(item, outputs=lost) if at % 3 == 0 else item
+            for at, (item, lost) in enumerate(zip(drawn, without, strict=True))
+        ]
+    statistics = made.statistics_of(drawn)
+    fit = fit_hierarchy(statistics, RELATIVE, settings=FitSettings(tolerance=1e-6))
+    dense, change = fit, np.inf
+    while change > 1e-4:
+        new = dense_step(dense, statistics, drawn)
+        change = np.abs(np.diag(new.trial_covariance) / np.diag(dense.trial_covariance) - 1.0).max()
+        dense = new
+    for name in ("subject_covariance", "trial_covariance", "observed_residual"):
+        got, expected = np.diag(getattr(fit, name)), np.diag(getattr(dense, name))
+        np.testing.assert_allclose(got, expected, rtol=0.05, err_msg=name)
+    assert fit.iterations <= 25
 
 
 def test_a_frame_counts_as_much_as_its_weight_says() -> None:
@@ -148,7 +194,7 @@ def test_a_frame_counts_as_much_as_its_weight_says() -> None:
         )
         for item in once
     ]
-    one, other = (fit_hierarchy(made.statistics_of(drawn), FIXED) for drawn in (once, often))
+    one, other = (fit_hierarchy(made.statistics_of(drawn), RELATIVE) for drawn in (once, often))
     assert_alike(other, one)
 
 
@@ -156,7 +202,7 @@ def test_every_covariance_is_positive_and_the_fixed_weight_stays_zero() -> None:
     generator = np.random.default_rng(4)
     truth = made.random_hierarchy(generator, 2, 6)
     statistics = made.statistics_of(made.draw_trials(generator, truth, [2, 3, 1], 5, hidden=True))
-    fit = fit_hierarchy(statistics, FIXED)
+    fit = fit_hierarchy(statistics, RELATIVE)
     for name in COVARIANCES:
         matrix = getattr(fit, name)
         np.testing.assert_allclose(matrix, matrix.T, atol=1e-15)
@@ -173,8 +219,8 @@ def test_few_subjects_still_give_a_proper_fit(subjects: int) -> None:
     generator = np.random.default_rng(5)
     truth = made.known_truth(correlated=True)
     statistics = made.statistics_of(made.draw_trials(generator, truth, [3] * subjects, 12))
-    fit = fit_hierarchy(statistics, FIXED)
-    prior = BETWEEN_SHARE / 2 * scale_of(statistics).features
+    fit = fit_hierarchy(statistics, RELATIVE)
+    prior = SETTINGS.between_share / 2 * scale_of(statistics).displacement
     between = np.diag(fit.subject_features)
     # Two units of prior against one or two of data: neither vanishes nor runs away.
     assert (between > 0.3 * prior).all()
@@ -185,7 +231,7 @@ def test_few_subjects_still_give_a_proper_fit(subjects: int) -> None:
 
 def test_one_frame_of_one_subject_is_no_breakdown() -> None:
     trial = made.MadeTrial("S", "t", np.array([[1.0, 0.4]]), np.ones((1, 3)), np.ones(1), np.zeros((1, 3, 3)))
-    fit = fit_hierarchy([trial.statistics()], FIXED)
+    fit = fit_hierarchy([trial.statistics()], RELATIVE)
     assert np.linalg.eigvalsh(fit.residual)[0] > 0
     assert np.isfinite(fit.population.mean).all()
 
@@ -193,11 +239,11 @@ def test_one_frame_of_one_subject_is_no_breakdown() -> None:
 def test_order_of_subjects_and_trials_does_not_matter() -> None:
     generator = np.random.default_rng(6)
     drawn = made.draw_trials(generator, made.known_truth(True), [2, 3, 1, 2], 6, hidden=True)
-    one = fit_hierarchy(made.statistics_of(drawn), FIXED)
+    one = fit_hierarchy(made.statistics_of(drawn), RELATIVE)
     order = generator.permutation(len(drawn))
     names = {"S001": "Z", "S002": "C", "S003": "M", "S004": "A"}
     other = [replace(drawn[at], subject=names[drawn[at].subject]) for at in order]
-    assert_alike(fit_hierarchy(made.statistics_of(other), FIXED), one)
+    assert_alike(fit_hierarchy(made.statistics_of(other), RELATIVE), one)
 
 
 def test_order_of_markers_does_not_matter() -> None:
@@ -205,9 +251,9 @@ def test_order_of_markers_does_not_matter() -> None:
     truth = made.random_hierarchy(generator, 2, 9)
     drawn = made.draw_trials(generator, truth, [2, 3, 1], 6, hidden=True)
     columns = (3 * np.array([2, 0, 1])[:, None] + np.arange(3)).reshape(-1)
-    one = fit_hierarchy(made.statistics_of(drawn), FIXED)
+    one = fit_hierarchy(made.statistics_of(drawn), RELATIVE)
     other = fit_hierarchy(
-        made.statistics_of([replace(item, outputs=item.outputs[:, columns]) for item in drawn]), FIXED
+        made.statistics_of([replace(item, outputs=item.outputs[:, columns]) for item in drawn]), RELATIVE
     )
     both = (9 * np.arange(2)[:, None] + columns).reshape(-1)
     expected = replace(
@@ -235,8 +281,8 @@ def test_scaled_displacement_scales_means_and_covariances(factor: float) -> None
     noise = 0.05 * made.random_covariance(generator, 6)
     drawn = made.draw_trials(generator, made.known_truth(True), [2, 3, 2], 8, noise=noise)
     scaled = [replace(t, outputs=factor * t.outputs, noise=factor**2 * t.noise) for t in drawn]
-    one = fit_hierarchy(made.statistics_of(drawn), FIXED)
-    other = fit_hierarchy(made.statistics_of(scaled), FIXED)
+    one = fit_hierarchy(made.statistics_of(drawn), RELATIVE)
+    other = fit_hierarchy(made.statistics_of(scaled), RELATIVE)
     square = factor**2
     expected = replace(
         one,
@@ -259,7 +305,7 @@ def test_displacement_below_a_millimetre_meets_the_floor() -> None:
     drawn = made.draw_trials(generator, made.known_truth(True), [2, 2], 8)
     one, other = (
         fit_hierarchy(
-            made.statistics_of([replace(item, outputs=size * item.outputs) for item in drawn]), FIXED
+            made.statistics_of([replace(item, outputs=size * item.outputs) for item in drawn]), RELATIVE
         )
         for size in (1e-7, 1e-9)
     )
@@ -277,22 +323,34 @@ def test_a_warm_start_ends_where_a_cold_one_does() -> None:
     """To ten times the tolerance on the change of one iteration: the rate of convergence is near ½."""
     generator = np.random.default_rng(13)
     statistics = made.statistics_of(made.draw_trials(generator, made.known_truth(True), [2] * 8, 12))
-    cold = fit_hierarchy(statistics, FIXED)
-    start = fit_hierarchy([item for item in statistics if item.subject != "S003"], FIXED)
-    warm = fit_hierarchy(statistics, FIXED, start)
+    cold = fit_hierarchy(statistics, RELATIVE)
+    start = fit_hierarchy([item for item in statistics if item.subject != "S003"], RELATIVE)
+    warm = fit_hierarchy(statistics, RELATIVE, start=start)
     for name in ("subject_features", "trial_features", "observed_residual"):
         np.testing.assert_allclose(np.diag(getattr(warm, name)), np.diag(getattr(cold, name)), rtol=1e-2)
     assert warm.iterations <= cold.iterations
 
 
 def test_population_belongs_to_the_covariances_it_is_returned_with() -> None:
-    """It is that of the last step but one: to the tolerance of the fit, a small part of its own spread."""
     generator = np.random.default_rng(14)
     statistics = made.statistics_of(made.draw_trials(generator, made.known_truth(True), [2] * 8, 12))
-    fit = fit_hierarchy(statistics, FIXED)
-    now = without_subject(fit, statistics, FIXED, "").population
-    spread = np.sqrt(np.diag(now.covariance)).reshape(2, 6)[1]
-    assert (np.abs(now.mean - fit.population.mean)[1] < 0.005 * spread).all()
-    np.testing.assert_allclose(
-        np.diag(now.covariance)[6:], np.diag(fit.population.covariance)[6:], rtol=0.005
+    fit = fit_hierarchy(statistics, RELATIVE)
+    now = without_subject(fit, statistics, RELATIVE, "").population
+    np.testing.assert_array_equal(now.mean, fit.population.mean)
+    np.testing.assert_array_equal(now.covariance, fit.population.covariance)
+
+
+def test_acceleration_changes_the_way_and_not_the_end() -> None:
+    generator = np.random.default_rng(16)
+    statistics = made.statistics_of(made.draw_trials(generator, made.known_truth(True), [2] * 8, 12))
+    plain, fast = (
+        fit_hierarchy(
+            statistics,
+            RELATIVE,
+            settings=FitSettings(memory=memory, tolerance=1e-11, maximum_iterations=400),
+        )
+        for memory in (0, 5)
     )
+    assert_alike(fast, plain, 1e-8)
+    assert fast.stop_reason == plain.stop_reason == "relative change of the covariances below 1e-11"
+    assert fast.iterations < 0.6 * plain.iterations

@@ -21,6 +21,7 @@ from sta_prior.prior.hierarchy import (
     make_block,
     new_subject,
     population_prior,
+    population_width,
     scale_of,
     subject_posterior,
     through,
@@ -32,7 +33,7 @@ from sta_prior.prior.hierarchy import (
 )
 
 FEATURES = 2
-FIXED = np.array([True, False])
+RELATIVE = np.array([1.0, 0.6])
 NOBODY = ""
 
 
@@ -97,16 +98,16 @@ def test_population_is_that_of_the_dense_joint_gaussian(hidden: bool) -> None:
     hierarchy, trials = problem(1, hidden)
     assert any(np.isnan(item.outputs).any() for item in trials) == hidden
     statistics = made.statistics_of(trials)
-    dense = Dense(hierarchy, population_prior(statistics, FIXED), trials)
-    assert_same(without_subject(hierarchy, statistics, FIXED, NOBODY).population, dense.weights())
+    dense = Dense(hierarchy, population_prior(statistics, RELATIVE, hierarchy.subject_outputs), trials)
+    assert_same(without_subject(hierarchy, statistics, RELATIVE, NOBODY).population, dense.weights())
 
 
 def test_population_without_a_subject_is_that_of_the_others() -> None:
     hierarchy, trials = problem(2)
     statistics = made.statistics_of(trials)
     others = [item for item in trials if item.subject != "S003"]
-    dense = Dense(hierarchy, population_prior(statistics, FIXED), others)
-    got = without_subject(hierarchy, statistics, FIXED, "S003")
+    dense = Dense(hierarchy, population_prior(statistics, RELATIVE, hierarchy.subject_outputs), others)
+    got = without_subject(hierarchy, statistics, RELATIVE, "S003")
     assert_same(got.population, dense.weights())
     assert replace(got, population=hierarchy.population) == hierarchy
 
@@ -114,9 +115,9 @@ def test_population_without_a_subject_is_that_of_the_others() -> None:
 def test_subject_posterior_is_that_of_the_dense_joint_gaussian() -> None:
     hierarchy, trials = problem(3)
     statistics = made.statistics_of(trials)
-    dense = Dense(hierarchy, population_prior(statistics, FIXED), trials)
+    dense = Dense(hierarchy, population_prior(statistics, RELATIVE, hierarchy.subject_outputs), trials)
     for name in dense.subjects:
-        others = without_subject(hierarchy, statistics, FIXED, name)
+        others = without_subject(hierarchy, statistics, RELATIVE, name)
         own = [item for item in statistics if item.subject == name]
         assert_same(subject_posterior(others, own), dense.weights(name))
 
@@ -124,9 +125,9 @@ def test_subject_posterior_is_that_of_the_dense_joint_gaussian() -> None:
 def test_trial_posterior_is_that_of_the_dense_joint_gaussian() -> None:
     hierarchy, trials = problem(4)
     statistics = made.statistics_of(trials)
-    dense = Dense(hierarchy, population_prior(statistics, FIXED), trials)
+    dense = Dense(hierarchy, population_prior(statistics, RELATIVE, hierarchy.subject_outputs), trials)
     for name, trial in dense.trials:
-        others = without_subject(hierarchy, statistics, FIXED, name)
+        others = without_subject(hierarchy, statistics, RELATIVE, name)
         own = [item for item in statistics if item.subject == name]
         assert_same(trial_posterior(others, own, trial), dense.weights(name, trial))
 
@@ -134,8 +135,8 @@ def test_trial_posterior_is_that_of_the_dense_joint_gaussian() -> None:
 def test_a_trial_without_frames_of_its_own_gets_the_spread_between_trials() -> None:
     hierarchy, trials = problem(5)
     statistics = made.statistics_of(trials)
-    dense = Dense(hierarchy, population_prior(statistics, FIXED), trials)
-    others = without_subject(hierarchy, statistics, FIXED, "S001")
+    dense = Dense(hierarchy, population_prior(statistics, RELATIVE, hierarchy.subject_outputs), trials)
+    others = without_subject(hierarchy, statistics, RELATIVE, "S001")
     own = [item for item in statistics if item.subject == "S001"]
     subject = dense.weights("S001")
     expected = Weights(subject.mean, subject.covariance + hierarchy.trial_covariance)
@@ -144,7 +145,7 @@ def test_a_trial_without_frames_of_its_own_gets_the_spread_between_trials() -> N
 
 def test_a_new_subject_gets_all_three_spreads() -> None:
     hierarchy, trials = problem(6)
-    known = without_subject(hierarchy, made.statistics_of(trials), FIXED, NOBODY)
+    known = without_subject(hierarchy, made.statistics_of(trials), RELATIVE, NOBODY)
     spread = known.population.covariance + known.subject_covariance + known.trial_covariance
     assert_same(new_subject(known), Weights(known.population.mean, spread), 0.0)
     assert_same(new_subject(known, 1.7), Weights(known.population.mean, 1.7 * spread), 1e-15)
@@ -167,8 +168,8 @@ def test_order_of_subjects_trials_and_frames_does_not_matter() -> None:
                 noise=item.noise[order],
             )
         )
-    one = without_subject(hierarchy, made.statistics_of(trials), FIXED, NOBODY).population
-    other = without_subject(hierarchy, made.statistics_of(shuffled), FIXED, NOBODY).population
+    one = without_subject(hierarchy, made.statistics_of(trials), RELATIVE, NOBODY).population
+    other = without_subject(hierarchy, made.statistics_of(shuffled), RELATIVE, NOBODY).population
     assert_same(one, other, 1e-12)
 
 
@@ -194,7 +195,7 @@ def test_frames_may_be_split_into_blocks_in_any_way() -> None:
 def test_subjects_may_be_learned_one_after_the_other() -> None:
     hierarchy, trials = problem(9)
     statistics = made.statistics_of(trials)
-    belief = population_prior(statistics, FIXED)
+    belief = population_prior(statistics, RELATIVE, hierarchy.subject_outputs)
     for name in ("S002", "S003", "S001"):
         own = [
             through(trial_message(item, hierarchy.observed_residual), hierarchy.trial_covariance)
@@ -203,13 +204,13 @@ def test_subjects_may_be_learned_one_after_the_other() -> None:
         ]
         size = belief.covariance.shape[0]
         belief = condition_on(belief, through(total_message(own, size), hierarchy.subject_covariance))
-    assert_same(belief, without_subject(hierarchy, statistics, FIXED, NOBODY).population)
+    assert_same(belief, without_subject(hierarchy, statistics, RELATIVE, NOBODY).population)
 
 
 def test_covariances_stay_positive_however_strong_the_data() -> None:
     hierarchy, trials = problem(10)
     strong = made.statistics_of([replace(item, weights=1e9 * item.weights) for item in trials])
-    known = without_subject(hierarchy, strong, FIXED, "S001")
+    known = without_subject(hierarchy, strong, RELATIVE, "S001")
     own = [item for item in strong if item.subject == "S001"]
     for belief in (known.population, subject_posterior(known, own), trial_posterior(known, own, "t0")):
         values = np.linalg.eigvalsh(belief.covariance)
@@ -224,7 +225,7 @@ def test_random_effects_are_those_of_laird_and_ware() -> None:
     trials = made.draw_trials(generator, hierarchy, [1, 1, 1], 4)
     statistics = made.statistics_of(trials)
     spread = hierarchy.subject_covariance + hierarchy.trial_covariance
-    prior = population_prior(statistics, FIXED)
+    prior = population_prior(statistics, RELATIVE, hierarchy.subject_outputs)
     designs = [np.concatenate([np.kron(z, np.eye(3)) for z in item.features]) for item in trials]
     marginal = [
         design @ spread @ design.T + np.kron(np.eye(4), hierarchy.observed_residual) for design in designs
@@ -235,7 +236,7 @@ def test_random_effects_are_those_of_laird_and_ware() -> None:
     for item, design, variance in zip(trials, designs, marginal, strict=True):
         misfit = item.outputs.reshape(-1) - design @ fixed
         effect = hierarchy.subject_covariance @ design.T @ np.linalg.solve(variance, misfit)
-        others = without_subject(hierarchy, statistics, FIXED, item.subject)
+        others = without_subject(hierarchy, statistics, RELATIVE, item.subject)
         got = subject_posterior(others, [item.statistics()]).mean.reshape(-1)
         np.testing.assert_allclose(got, fixed + effect, atol=1e-11)
 
@@ -341,18 +342,24 @@ def test_messages_at_their_limits() -> None:
 
 
 def test_weak_prior_is_sized_by_the_data() -> None:
-    """Outputs of ±2 m: mean square 4; features of power 1 and 9."""
+    """Outputs of ±2 m: mean square 4, and four times that for a weight of relative variance 1/9."""
     features = np.array([[1.0, 3.0], [1.0, -3.0]])
     outputs = np.array([[2.0, 2.0, -2.0], [-2.0, 2.0, np.nan]])
     trial = made.MadeTrial("S", "t", features, outputs, np.array([1.0, 1.0]), np.zeros((2, 3, 3)))
-    statistics = [trial.statistics()]
+    statistics, relative = [trial.statistics()], np.array([1.0, 1.0 / 9.0])
     scale = scale_of(statistics)
-    np.testing.assert_allclose(scale.features, [4.0, 4.0 / 9.0], rtol=1e-14)
+    assert scale.displacement == pytest.approx(4.0, rel=1e-14)
     assert scale.residual == pytest.approx(0.4)
-    prior = population_prior(statistics, FIXED)
+    prior = population_prior(statistics, relative)
     assert not prior.mean.any()
     np.testing.assert_array_equal(prior.covariance[:3], np.zeros((3, 6)))
     np.testing.assert_allclose(prior.covariance[3:, 3:], 16.0 / 9.0 * np.eye(3), rtol=1e-14)
+    np.testing.assert_allclose(population_width(statistics, relative), [0.0, 16.0 / 9.0], rtol=1e-14)
+    np.testing.assert_allclose(population_width(statistics, relative, 1.0, True), [4.0, 4.0 / 9.0])
+    np.testing.assert_array_equal(population_width(statistics, relative, np.inf), [0.0, np.inf])
+    np.testing.assert_array_equal(relative, [1.0, 1.0 / 9.0])
+    free = population_prior(statistics, relative, 2.0 * np.eye(3), free_constant=True)
+    np.testing.assert_allclose(np.diag(free.covariance), [32.0] * 3 + [32.0 / 9.0] * 3, rtol=1e-14)
 
 
 def test_weak_prior_stays_proper_without_artifact() -> None:
@@ -360,7 +367,48 @@ def test_weak_prior_stays_proper_without_artifact() -> None:
         "S", "t", np.array([[1.0, 0.0]]), np.zeros((1, 3)), np.ones(1), np.zeros((1, 3, 3))
     )
     scale = scale_of([trial.statistics()])
-    np.testing.assert_allclose(scale.features, [1e-6, 1e-2], rtol=1e-14)
+    assert (scale.displacement, scale.residual) == (1e-6, 1e-7)
+
+
+@pytest.mark.parametrize("free_constant", [False, True])
+@pytest.mark.parametrize("width", [2.0, np.inf])
+def test_split_outputs_give_the_population_of_the_dense_messages(width: float, free_constant: bool) -> None:
+    """Where nothing is hidden and both levels share M, outputs are split; else messages are dense."""
+    hierarchy, trials = problem(14, hidden=False)
+    alike = replace(hierarchy, trial_outputs=hierarchy.subject_outputs)
+    # Not to be told from the same matrix by its numbers, but by its bits.
+    nearly = replace(hierarchy, trial_outputs=hierarchy.subject_outputs * (1.0 + 1e-15))
+    assert not np.array_equal(nearly.trial_outputs, alike.trial_outputs)
+    statistics = made.statistics_of(trials)
+    for left_out in (NOBODY, "S001"):
+        fast, slow = (
+            without_subject(item, statistics, RELATIVE, left_out, width, free_constant).population
+            for item in (alike, nearly)
+        )
+        assert_same(fast, slow, 1e-9 * np.abs(slow.covariance).max())
+
+
+def test_flat_population_is_generalised_least_squares() -> None:
+    hierarchy, trials = problem(15)
+    statistics = made.statistics_of(trials)
+    got = without_subject(hierarchy, statistics, RELATIVE, NOBODY, np.inf, True).population
+    rows, noise, observed = [], [], []
+    for item in trials:
+        design = np.concatenate([np.kron(z, np.eye(6)) for z in item.features])
+        seen = np.isfinite(item.outputs.reshape(-1))
+        rows.append(design[seen])
+        own = np.kron(np.diag(1.0 / item.weights), hierarchy.observed_residual)
+        noise.append(own[np.ix_(seen, seen)] + rows[-1] @ hierarchy.trial_covariance @ rows[-1].T)
+        observed.append(item.outputs.reshape(-1)[seen])
+    whole, data = np.concatenate(rows), np.concatenate(observed)
+    total = block_diag(*noise)
+    for name in sorted({item.subject for item in trials}):
+        of_subject = [design * (item.subject == name) for item, design in zip(trials, rows, strict=True)]
+        stacked = np.concatenate(of_subject)
+        total = total + stacked @ hierarchy.subject_covariance @ stacked.T
+    covariance = np.linalg.inv(whole.T @ np.linalg.solve(total, whole))
+    mean = covariance @ whole.T @ np.linalg.solve(total, data)
+    assert_same(got, Weights(mean.reshape(2, 6), covariance), 1e-8 * np.abs(covariance).max())
 
 
 def test_unison_covariance_has_the_stated_shares() -> None:
@@ -368,5 +416,6 @@ def test_unison_covariance_has_the_stated_shares() -> None:
     np.testing.assert_allclose(np.diag(covariance), 1.0)
     assert covariance[0, 3] == pytest.approx(0.6)
     assert covariance[0, 1] == 0.0
+    np.testing.assert_array_equal(unison_covariance(2), np.eye(2))
     # Eigenvalues by hand: 1 − s + s·m along the common motion of m markers, 1 − s elsewhere.
     np.testing.assert_allclose(np.linalg.eigvalsh(covariance), [0.4] * 9 + [2.8] * 3, atol=1e-14)

@@ -58,7 +58,7 @@ class Wave:
     @property
     def weights(self) -> FloatArray:
         """Square root of the prior variance of each function, shape (count,)."""
-        frequency = 0.5 * np.pi * np.arange(1, self.count + 1) / self.limit
+        frequency = np.asarray(0.5 * np.pi * np.arange(1, self.count + 1) / self.limit, dtype=np.float64)
         return np.asarray(self.scale * np.sqrt(spectral_density(frequency, self.length, self.kind)))
 
     def values(self, angles: FloatArray) -> FloatArray:
@@ -165,7 +165,7 @@ class Basis:
             first = last
         # At the edge a held angle no longer moves the features.
         inside = here == angles
-        return result * inside[:, None]
+        return np.asarray(result * inside[:, None])
 
     @property
     def relative_variance(self) -> FloatArray:

@@ -25,6 +25,7 @@ import numpy as np
 
 from sta_prior.checks import BoolArray, FloatArray
 from sta_prior.gaussian import symmetrise
+from sta_prior.prior.ladder import invert_information, make_ladder, make_split
 
 UNISON_SHARE = 0.6
 POPULATION_WIDTH = 4.0
@@ -246,37 +247,114 @@ def scale_of(trials: list[TrialStatistics]) -> Scale:
     return Scale(variance, 0.1 * variance)
 
 
-def population_prior(trials: list[TrialStatistics], relative: FloatArray) -> Weights:
-    """Weak, proper belief about the population weights, sized by the data's own magnitude.
+def population_width(
+    trials: list[TrialStatistics],
+    relative: FloatArray,
+    width: float = POPULATION_WIDTH,
+    free_constant: bool = False,
+) -> FloatArray:
+    """Prior variance of the population weights, shape (K,), m².
 
     Parameters
     ----------
     trials : what is learned from
-    relative : shape (K,), prior variance of each feature's weight against the mean square displacement;
-        the first feature, the constant, has no population weight: artifact is zero at the reference
+    relative : shape (K,), prior variance of each feature's weight against the mean square displacement
+    width : prior variance of the population against that; infinite for no prior at all (REML)
+    free_constant : the first feature, the constant, has no population weight unless this is set:
+        artifact is zero at the reference
+    """
+    free = width * scale_of(trials).displacement * relative
+    if not free_constant:
+        free[0] = 0.0
+    return free
+
+
+def population_prior(
+    trials: list[TrialStatistics],
+    relative: FloatArray,
+    outputs: FloatArray | None = None,
+    free_constant: bool = False,
+) -> Weights:
+    """Weak, proper belief about the population weights, sized by the data's own magnitude.
+
+    Parameters
+    ----------
+    trials, relative, free_constant : as for population_width
+    outputs : shape (n, n), how outputs go together, trace n; UNISON_SHARE by default. A hierarchy's
+        population has its M here
     """
     n = trials[0].blocks[0].seen.size
-    free = POPULATION_WIDTH * scale_of(trials).displacement * relative
-    free[0] = 0.0
-    covariance = np.kron(np.diag(free), unison_covariance(n))
+    free = population_width(trials, relative, free_constant=free_constant)
+    covariance = _kronecker(np.diag(free), unison_covariance(n) if outputs is None else outputs)
     return Weights(np.zeros((relative.size, n)), covariance)
 
 
 def without_subject(
-    hierarchy: Hierarchy, trials: list[TrialStatistics], relative: FloatArray, subject: str
+    hierarchy: Hierarchy,
+    trials: list[TrialStatistics],
+    relative: FloatArray,
+    subject: str,
+    width: float = POPULATION_WIDTH,
+    free_constant: bool = False,
 ) -> Hierarchy:
-    """Same covariances, population conditioned on every subject but one: nothing is counted twice."""
-    size = hierarchy.population.covariance.shape[0]
+    """Same covariances, population conditioned on every subject but one: nothing is counted twice.
+
+    The arguments are those of population_width. Where every frame shows every output the outputs are split
+    (prior/ladder.py), which is as exact and much faster.
+    """
+    others = [trial for trial in trials if trial.subject != subject]
+    prior = population_width(trials, relative, width, free_constant)
+    alike = np.array_equal(hierarchy.subject_outputs, hierarchy.trial_outputs)
+    whole = all(block.seen.all() for trial in others for block in trial.blocks)
+    learn = _split_population if alike and whole and others else _dense_population
+    return replace(hierarchy, population=learn(hierarchy, others, prior))
+
+
+def population_message(hierarchy: Hierarchy, trials: list[TrialStatistics]) -> Message:
+    """What trials tell of the population weights."""
+    size = hierarchy.subject_features.shape[0] * hierarchy.residual.shape[0]
+    spread, between = hierarchy.trial_covariance, hierarchy.subject_covariance
     messages = []
-    for name in sorted({trial.subject for trial in trials} - {subject}):
+    for name in sorted({trial.subject for trial in trials}):
         own = [
-            through(trial_message(trial, hierarchy.observed_residual), hierarchy.trial_covariance)
+            through(trial_message(trial, hierarchy.observed_residual), spread)
             for trial in trials
             if trial.subject == name
         ]
-        messages.append(through(total_message(own, size), hierarchy.subject_covariance))
-    belief = population_prior(trials, relative)
-    return replace(hierarchy, population=condition_on(belief, total_message(messages, size)))
+        messages.append(through(total_message(own, size), between))
+    return total_message(messages, size)
+
+
+def _dense_population(hierarchy: Hierarchy, trials: list[TrialStatistics], width: FloatArray) -> Weights:
+    n = hierarchy.residual.shape[0]
+    told = population_message(hierarchy, trials)
+    free = np.flatnonzero(np.repeat(width > 0.0, n))
+    mean, covariance = np.zeros(told.shift.size), np.zeros(told.precision.shape)
+    if np.isfinite(width).all():
+        prior = Weights(mean.reshape(-1, n), _kronecker(np.diag(width), hierarchy.subject_outputs))
+        return condition_on(prior, told)
+    inside = np.ix_(free, free)
+    covariance[inside] = symmetrise(invert_information(told.precision[inside]))
+    return Weights((covariance @ told.shift).reshape(-1, n), covariance)
+
+
+def _split_population(hierarchy: Hierarchy, trials: list[TrialStatistics], width: FloatArray) -> Weights:
+    split = make_split(hierarchy.subject_outputs, hierarchy.observed_residual)
+    names = list(dict.fromkeys(trial.subject for trial in trials))
+    gram = np.array([sum(block.feature_gram for block in trial.blocks) for trial in trials])
+    cross = np.array([sum(block.cross for block in trial.blocks) for trial in trials])
+    n, count = split.precision.size, width.size
+    ladder = make_ladder(
+        gram[:, None] * split.precision[:, None, None],
+        np.array([names.index(trial.subject) for trial in trials], dtype=np.intp),
+        hierarchy.subject_features,
+        hierarchy.trial_features,
+        width,
+    )
+    told = np.linalg.solve(hierarchy.observed_residual, split.back.T)
+    mean = ladder.means(np.swapaxes(cross @ told, -1, -2)).population
+    covariance = np.einsum("ia,ikl,ib->kalb", split.back, ladder.population, split.back, optimize=True)
+    return Weights(mean.T @ split.back, symmetrise(covariance.reshape(count * n, count * n)))
 
 
 def new_subject(hierarchy: Hierarchy, inflation: float = 1.0) -> Weights:
@@ -286,6 +364,11 @@ def new_subject(hierarchy: Hierarchy, inflation: float = 1.0) -> Weights:
 
 
 def unison_covariance(n: int, share: float = UNISON_SHARE) -> FloatArray:
-    """Covariance (n, n), unit variance: ``share`` common to all markers of an axis, the rest own."""
+    """Covariance (n, n), unit variance: ``share`` common to all markers of an axis, the rest own.
+
+    Outputs that are no markers of three axes each have nothing in common.
+    """
+    if n % 3:
+        return np.eye(n)
     common = np.kron(np.ones((n // 3, n // 3)), np.eye(3))
     return share * common + (1.0 - share) * np.eye(n)

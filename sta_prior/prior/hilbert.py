@@ -72,13 +72,13 @@ def boundary_factor(
 def basis_functions(x: FloatArray, limit: float, count: int) -> FloatArray:
     """φ_1 … φ_m at x, shape (..., m)."""
     order = np.arange(1, count + 1)
-    result: FloatArray = np.sin(0.5 * np.pi * order * (x[..., None] + limit) / limit) / math.sqrt(limit)
-    return result
+    phase = 0.5 * np.pi * order * (x[..., None] + limit) / limit
+    return np.asarray(np.sin(phase) / math.sqrt(limit), dtype=np.float64)
 
 
 def basis_slopes(x: FloatArray, limit: float, count: int) -> FloatArray:
     """Derivatives of φ_1 … φ_m at x, shape (..., m)."""
     order = np.arange(1, count + 1)
     frequency = 0.5 * np.pi * order / limit
-    result: FloatArray = frequency * np.cos(frequency * (x[..., None] + limit)) / math.sqrt(limit)
-    return result
+    slopes = frequency * np.cos(frequency * (x[..., None] + limit)) / math.sqrt(limit)
+    return np.asarray(slopes, dtype=np.float64)
