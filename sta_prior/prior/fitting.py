@@ -43,7 +43,7 @@ BETWEEN_SHARE = 0.5
 """Part of the mean square displacement that the prior gives to the spread between units."""
 
 INSTRUMENT_SD = 0.0005
-"""Floor of the residual after bone-truth noise is taken out, m."""
+"""Joins the bone-truth noise in the metric in which that is taken out, m; the residual has no floor."""
 
 MAXIMUM_ITERATIONS = 60
 TOLERANCE = 1e-3
