@@ -78,8 +78,8 @@ def solve_study(
     """
     folder = Path(out)
     paths = [str(path) if path else None for path in (study_path, prior_path, personal_path)]
-    if scheduler is not None:
-        # Another machine's working folder is not this one's.
+    if scheduler is not None or workers != 1:
+        # A worker's folder is not this one's: on another machine, or kept from an earlier run.
         folder, paths = folder.absolute(), [str(Path(path).absolute()) if path else None for path in paths]
     study_name, prior_name, personal_name = paths
     inputs = read_inputs(str(study_name), prior_name, personal_name)
