@@ -389,3 +389,17 @@ def test_a_pose_that_is_not_known_is_missing_in_the_copy(tmp_path: Path) -> None
     missing = np.isnan(held["rotation"].values).all(axis=(2, 3))
     assert_array_equal(np.flatnonzero(missing[:, 1]), [10, 11])
     assert not missing[:, 0].any()
+
+
+def test_workers_that_live_on_in_another_folder_find_their_files(
+    made: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    for name in ("first", "second"):
+        folder = tmp_path / name
+        folder.mkdir()
+        for path in made.iterdir():
+            (folder / path.name).write_bytes(path.read_bytes())
+        monkeypatch.chdir(folder)
+        ended = solve_study("study.toml", "solved", "q.nc", workers=2)
+        assert not ended.failed
+        assert len(list(folder.glob("solved/*/*.solution.nc"))) == len(TRIALS)
