@@ -41,7 +41,7 @@ def test_nearly_the_same_instant_is_the_same(part: float) -> None:
 def test_between_frames_lies_the_straight_line() -> None:
     time = np.arange(20) / RATE
     points = curve(time)
-    bone = (np.arange(12) + 3.25) / RATE
+    bone = (np.arange(12.0) + 3.25) / RATE
     positions, _ = skin_at(time, points, bone)
     np.testing.assert_allclose(positions, 0.75 * points[3:15] + 0.25 * points[4:16], atol=1e-12)
 
@@ -49,7 +49,7 @@ def test_between_frames_lies_the_straight_line() -> None:
 def test_error_of_the_straight_line_is_what_the_docstring_says() -> None:
     """20 m/s² at 100 Hz: at most a·h²/8 = 0.25 mm, halfway between frames."""
     time = np.arange(20) / RATE
-    bone = (np.arange(12) + 3.5) / RATE
+    bone = (np.arange(12.0) + 3.5) / RATE
     positions, _ = skin_at(time, curve(time), bone)
     np.testing.assert_allclose(np.abs(positions - curve(bone)).max(), 0.00025, rtol=1e-6)
 
@@ -59,7 +59,7 @@ def test_never_from_one_frame_alone() -> None:
     points = curve(time)
     points[8, 1] = np.nan
     positions, inside = skin_at(time, points, np.array([0.074, 0.076, 0.084, 0.094]))
-    hidden = np.isnan(positions).any(axis=-1)
+    hidden = np.asarray(np.isnan(positions).any(axis=-1))
     np.testing.assert_array_equal(hidden[:, 1], [True, True, True, False])
     assert not hidden[:, [0, 2]].any()
     assert inside.all()

@@ -51,7 +51,8 @@ def artifact(size: float, at_reference: float = 0.0, seed: int = 2) -> FloatArra
     direction = rng.standard_normal((4, 3))
     direction /= np.linalg.norm(direction, axis=1, keepdims=True)
     grown = size * AWAY / AWAY.max() + at_reference
-    return grown[:, None, None] * direction + 0.0005 * rng.standard_normal((FRAMES, 4, 3))
+    noise = 0.0005 * rng.standard_normal((FRAMES, 4, 3))
+    return np.asarray(noise + grown[:, None, None] * direction)
 
 
 def test_a_trial_that_belongs_is_not_refused() -> None:

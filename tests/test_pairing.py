@@ -272,7 +272,7 @@ def test_bone_frames_between_skin_frames_are_interpolated(tmp_path: Path) -> Non
         "fsij,fsj->fsi", data["bone_rotation"].to_numpy(), data["displacement"].to_numpy()[:, [0, 4]]
     )
     np.testing.assert_allclose(lab, 0.02 * instants[:, None, None] * np.ones((5, 2, 3)), atol=1e-9)
-    hidden = np.isnan(data["displacement"].sel(marker="TC")).any("axis").to_numpy()
+    hidden = np.isnan(data["displacement"].sel(marker="TC").to_numpy()).any(axis=1)
     assert hidden.tolist() == [False, False, True, True, False]
 
 

@@ -12,6 +12,7 @@ where the prior expects them.
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -23,11 +24,11 @@ from scipy.stats import chi2, kstest
 
 from sta_prior import se3
 from sta_prior.checks import FloatArray
-from sta_prior.prior.interface import IsotropicArtifact
+from sta_prior.prior.interface import IsotropicArtifact, Moments
 from sta_prior.rigid import deformation_modes, marker_jacobian
 from sta_prior.solve.frame import MARKER_SD, bridge, first_look, solve_frames
 from sta_prior.solve.posterior import SOURCES, FrameSolution
-from sta_prior.solve.terms import SegmentProblem, angles_and_jacobians, joint_travel
+from sta_prior.solve.terms import JointProblem, SegmentProblem, angles_and_jacobians, joint_travel
 
 
 def solved(problem: Problem, marker_sd: float = MARKER_SD) -> FrameSolution:
@@ -96,20 +97,21 @@ def dense_system(problem: Problem, poses: FloatArray, frame: int) -> DenseSystem
         shift -= rows.T @ displacement[seen] / MARKER_SD**2
         rows = np.zeros((n, size))
         rows[:, own] = np.eye(n)
-        rows[:, :unknown] = -central_difference(
-            lambda step, moments=moments: moments(angles_and_jacobians(problem.joints, there(step))[0]).mean[
-                0
-            ],
-            unknown,
-        )
+
+        def mean(step: FloatArray, moments: Callable[[FloatArray], Moments] = moments) -> FloatArray:
+            return np.asarray(moments(angles_and_jacobians(problem.joints, there(step))[0]).mean[0])
+
+        rows[:, :unknown] = -central_difference(mean, unknown)
         precision = np.linalg.inv(now.covariance[0])
         prior += rows.T @ precision @ rows
         shift += rows.T @ precision @ now.mean[0]
     for joint in problem.joints:
+
+        def travel(step: FloatArray, joint: JointProblem = joint) -> FloatArray:
+            return np.asarray(joint_travel(joint, there(step))[0][0])
+
         rows = np.zeros((3, size))
-        rows[:, :unknown] = central_difference(
-            lambda step, joint=joint: joint_travel(joint, there(step))[0][0], unknown
-        )
+        rows[:, :unknown] = central_difference(travel, unknown)
         joint_part += rows.T @ rows / joint.travel_sd**2
         shift -= rows.T @ joint_travel(joint, at)[0][0] / joint.travel_sd**2
     return DenseSystem(markers, prior, joint_part, shift, unknown)
