@@ -29,6 +29,7 @@ from typer.testing import CliRunner
 from sta_prior.batch import run as batch_run
 from sta_prior.batch.job import solve_job
 from sta_prior.cli import app, main
+from sta_prior.screen import Screen
 
 COMMANDS = ("pair", "learn", "check", "solve", "compare", "report", "demo")
 LATER = "demo"  # has a test file of its own
@@ -174,7 +175,17 @@ def test_json_of_a_run_counts_frames_and_names_trials(chain: tuple[Path, dict[st
     assert informed[1] == 0
 
 
-def test_json_writes_null_where_a_number_is_not_known(tmp_path: Path) -> None:
+def test_json_writes_null_where_a_number_is_not_known(capsys: pytest.CaptureFixture[str]) -> None:
+    summary = {"rows": [{"error": float("nan"), "peak": float("inf")}], "share": (0.5, float("nan")), "n": 3}
+    Screen(quiet=True, as_json=True).finish(summary, "not printed")
+    assert json.loads(capsys.readouterr().out) == {
+        "rows": [{"error": None, "peak": None}],
+        "share": [0.5, None],
+        "n": 3,
+    }
+
+
+def test_json_of_a_prior_that_nothing_validates(tmp_path: Path) -> None:
     """A prior of one subject with one trial has nothing to leave out."""
     make_leg_study(tmp_path)
     assert run(tmp_path, "pair", "study.toml", "--out", "p.nc").status == 0
