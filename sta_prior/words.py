@@ -32,6 +32,17 @@ def _table(title: str, columns: list[str], rows: list[list[str]]) -> Table:
     return table
 
 
+def counted(number: int, noun: str) -> str:
+    """A number with its noun.
+
+    Examples
+    --------
+    >>> counted(1, "trial"), counted(3, "trial")
+    ('1 trial', '3 trials')
+    """
+    return f"{number} {noun}" if number == 1 else f"{number} {noun}s"
+
+
 def pairs_table(data: xr.Dataset) -> Table:
     """A row a trial and segment: frames, displacement RMS and peak over its markers, cluster offset."""
     rows = []
@@ -106,7 +117,7 @@ def validation_table(data: xr.Dataset, others: bool = False) -> Table | None:
     what = "subject" if by_subject else "trial (one subject: this says nothing about others)"
     title = f"Displacement predicted for each left-out {what}, {units} in all; per axis"
     if others:
-        title = f"Displacement predicted for {units} other subject(s) of the given pairs; per axis"
+        title = f"Displacement predicted for {counted(units, 'other subject')} of the given pairs; per axis"
     levels = [f"covered at {100 * float(level):.0f} %" for level in data["level"].values]
     return _table(title, ["segment", *levels, "RMS mm", "RMS, no prior", "CRPS mm", "factor"], rows)
 
@@ -117,12 +128,14 @@ def prior_lines(prior: Prior, found: xr.Dataset | None = None) -> list[Any]:
     if prior.invented:
         lines.append("INVENTED DATA: this prior describes nobody.")
     kind = "personal prior" if prior.is_personal else "prior"
-    lines.append(f"{prior.family} {kind} from {len(prior.subjects)} subject(s): {', '.join(prior.subjects)}")
+    subjects = counted(len(prior.subjects), "subject")
+    lines.append(f"{prior.family.capitalize()} {kind} from {subjects}: {', '.join(prior.subjects)}")
     by_activity: dict[str, list[int]] = {}
     for trial in prior.trials:
         by_activity.setdefault(trial.activity, []).append(trial.times.size)
     for activity, counts in by_activity.items():
-        lines.append(f"  {activity}: {len(counts)} trials, {sum(counts)} frames with bone truth")
+        frames = counted(sum(counts), "frame")
+        lines.append(f"  {activity}: {counted(len(counts), 'trial')}, {frames} with bone truth")
     for name, model in prior.segments.items():
         lines.append(f"  {name}: {' '.join(model.markers)}; {model.describe()}")
     table = validation_table(prior.validation)
@@ -200,8 +213,8 @@ def run_table(run: Run) -> Table:
         ]
         for item in run.outcomes
     ]
-    columns = ["trial", "status", "frames", "open", "informed", "iterations", "s"]
-    return _table("Solved trials", columns, rows)
+    columns = ["trial", "status", "frames", "undetermined", "informed", "iterations", "s"]
+    return _table("Trials: frames without a pose, frames whose bone truth informed the prior", columns, rows)
 
 
 def run_summary(run: Run, out: Path, page: Path) -> dict[str, Any]:

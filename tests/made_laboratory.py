@@ -102,10 +102,10 @@ def keep_trials(study: Path, subjects: Sequence[str], activities: Sequence[str])
 
 
 def make_courier_study(folder: Path, activities: Sequence[str] = ("level-walk",)) -> Path:
-    """Write three imaged couriers and an archived one, one trial an activity; return study.toml."""
+    """Write two imaged couriers and an archived one, one trial an activity; return study.toml."""
     write_study(folder, seed=7, size="small")
     for name in ("study.toml", "truth.toml"):
-        keep_trials(folder / name, ("K01", "K02", "K03", "K10"), activities)
+        keep_trials(folder / name, ("K01", "K02", "K10"), activities)
     return folder / "study.toml"
 
 

@@ -84,7 +84,7 @@ def made_joints(count: int, travel_sd: float = 0.005) -> list[JointProblem]:
 
 def made_angles(rng: np.random.Generator, frames: int, joints: int) -> FloatArray:
     """Joint angles (F, J, 3) rad: flexion 0–60°, the others within 8°."""
-    angles = np.radians(8.0) * rng.uniform(-1, 1, (frames, joints, 3))
+    angles: FloatArray = np.radians(8.0) * rng.uniform(-1, 1, (frames, joints, 3))
     angles[..., 0] = np.radians(rng.uniform(0, 60, (frames, joints)))
     return angles
 
@@ -111,7 +111,8 @@ def draw_artifact(rng: np.random.Generator, artifact: Artifact, angles: FloatArr
     moments = artifact.moments(angles)
     factor = np.linalg.cholesky(moments.covariance)
     noise = rng.standard_normal(moments.mean.shape)
-    return moments.mean + np.einsum("fab,fb->fa", factor, noise)
+    drawn: FloatArray = moments.mean + np.einsum("fab,fb->fa", factor, noise)
+    return drawn
 
 
 def made_problem(

@@ -212,6 +212,17 @@ def test_one_trial_cannot_be_validated() -> None:
     assert prior.segments["thigh"].inflation == 4.0
 
 
+def test_a_personal_prior_is_validated_by_its_trials_unwidened() -> None:
+    """Its own weights take no widening; anybody else's take the largest."""
+    prior = learn(made.make_pairs(np.random.default_rng(19), ["P01"], trials=3))
+    assert prior.validation["unit"].values.tolist() == ["walk_1", "walk_2", "walk_3"]
+    assert prior.validation["by_subject"].values.tolist() == [0, 0]
+    assert prior.validation["inflation"].values.tolist() == [1.0, 1.0]
+    assert [model.inflation for model in prior.segments.values()] == [4.0, 4.0]
+    figures = prior.validation
+    assert (figures["rms_error"].mean("unit") < 0.6 * figures["rms_zero"].mean("unit")).all()
+
+
 def test_segments_may_have_learned_from_different_subjects() -> None:
     pairs = made.make_pairs(np.random.default_rng(13), made.subjects_of(3))
     pairs["displacement"].values[pairs["subject"].values == "P02", 3:] = np.nan

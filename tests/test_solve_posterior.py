@@ -6,11 +6,13 @@ The dense system stacks poses x and artifact d of one frame, linearised at the o
     prior      (d − M x) with precision C⁻¹
     joint      G x with precision 1/travel_sd²
 
-Nothing in it is eliminated by hand; L, M and G come from central differences.
+Nothing in it is eliminated by hand; L, M and G come from central differences, L with the markers
+where the prior expects them.
 """
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -22,11 +24,11 @@ from scipy.stats import chi2, kstest
 
 from sta_prior import se3
 from sta_prior.checks import FloatArray
-from sta_prior.prior.interface import IsotropicArtifact
+from sta_prior.prior.interface import IsotropicArtifact, Moments
 from sta_prior.rigid import deformation_modes, marker_jacobian
 from sta_prior.solve.frame import MARKER_SD, bridge, first_look, solve_frames
 from sta_prior.solve.posterior import SOURCES, FrameSolution
-from sta_prior.solve.terms import SegmentProblem, angles_and_jacobians, joint_travel
+from sta_prior.solve.terms import JointProblem, SegmentProblem, angles_and_jacobians, joint_travel
 
 
 def solved(problem: Problem, marker_sd: float = MARKER_SD) -> FrameSolution:
@@ -70,43 +72,46 @@ def dense_system(problem: Problem, poses: FloatArray, frame: int) -> DenseSystem
     def there(step: FloatArray) -> FloatArray:
         return at @ se3.exp(step.reshape(1, -1, 6))
 
+    angles, _ = angles_and_jacobians(problem.joints, at)
     first = unknown
     for segment, n in zip(problem.segments, outputs, strict=True):
         points = segment.points[[frame]]
-        place, reference, moments = segment.index, segment.reference, segment.artifact.moments
+        moments = segment.artifact.moments
+        now = moments(angles)
+        expected = segment.reference + now.mean.reshape(1, -1, 3)
+        expected_lab = se3.transform_points(at[:, segment.index], expected)
 
-        def bone(
-            step: FloatArray, place: int = place, points: FloatArray = points, a: FloatArray = reference
-        ) -> FloatArray:
-            return (se3.transform_points(se3.inverse(there(step)[:, place]), points) - a).reshape(-1)
+        def bone(step: FloatArray, index: int = segment.index, lab: FloatArray = expected_lab) -> FloatArray:
+            return se3.transform_points(se3.inverse(there(step)[:, index]), lab).reshape(-1)
 
+        measured = se3.transform_points(se3.inverse(at[:, segment.index]), points) - segment.reference
+        displacement = measured.reshape(-1)
         own = np.arange(first, first + n)
         first += n
-        seen = np.isfinite(bone(np.zeros(unknown)))
+        seen = np.isfinite(displacement)
         rows = np.zeros((n, size))
         rows[:, :unknown] = np.where(seen[:, None], central_difference(bone, unknown), 0.0)
         rows[:, own] = -np.eye(n)
         rows = rows[seen]
         markers += rows.T @ rows / MARKER_SD**2
-        shift -= rows.T @ bone(np.zeros(unknown))[seen] / MARKER_SD**2
-        angles, _ = angles_and_jacobians(problem.joints, at)
+        shift -= rows.T @ displacement[seen] / MARKER_SD**2
         rows = np.zeros((n, size))
         rows[:, own] = np.eye(n)
-        rows[:, :unknown] = -central_difference(
-            lambda step, moments=moments: moments(angles_and_jacobians(problem.joints, there(step))[0]).mean[
-                0
-            ],
-            unknown,
-        )
-        now = moments(angles)
+
+        def mean(step: FloatArray, moments: Callable[[FloatArray], Moments] = moments) -> FloatArray:
+            return np.asarray(moments(angles_and_jacobians(problem.joints, there(step))[0]).mean[0])
+
+        rows[:, :unknown] = -central_difference(mean, unknown)
         precision = np.linalg.inv(now.covariance[0])
         prior += rows.T @ precision @ rows
         shift += rows.T @ precision @ now.mean[0]
     for joint in problem.joints:
+
+        def travel(step: FloatArray, joint: JointProblem = joint) -> FloatArray:
+            return np.asarray(joint_travel(joint, there(step))[0][0])
+
         rows = np.zeros((3, size))
-        rows[:, :unknown] = central_difference(
-            lambda step, joint=joint: joint_travel(joint, there(step))[0][0], unknown
-        )
+        rows[:, :unknown] = central_difference(travel, unknown)
         joint_part += rows.T @ rows / joint.travel_sd**2
         shift -= rows.T @ joint_travel(joint, at)[0][0] / joint.travel_sd**2
     return DenseSystem(markers, prior, joint_part, shift, unknown)
@@ -156,14 +161,13 @@ def test_artifact_is_that_of_the_dense_joint_gaussian(count: int) -> None:
     result = solved(problem)
     for frame in range(5):
         dense = dense_system(problem, result.poses, frame)
-        covariance = dense.covariance
-        mean = covariance @ dense.shift
-        # The optimum is the centre of the linearised posterior.
-        np.testing.assert_allclose(mean[: dense.poses], 0.0, atol=1e-6)
         got = np.concatenate([values[frame] for values in result.artifact])
         sd = np.concatenate([values[frame] for values in result.artifact_sd])
-        np.testing.assert_allclose(got, mean[dense.poses :], atol=1e-7)
-        np.testing.assert_allclose(sd, np.sqrt(np.diag(covariance))[dense.poses :], rtol=1e-5)
+        # Mean at the optimum, where x = 0; spread with that of the poses.
+        own = slice(dense.poses, None)
+        given_poses = (dense.markers + dense.prior)[own, own]
+        np.testing.assert_allclose(got, np.linalg.solve(given_poses, dense.shift[own]), atol=1e-9)
+        np.testing.assert_allclose(sd, np.sqrt(np.diag(dense.covariance))[own], rtol=1e-6)
 
 
 def test_angles_and_travel_spread_as_their_linear_functions_of_the_poses() -> None:
@@ -233,13 +237,12 @@ def test_independent_rigid_artifact_leaves_least_squares_and_an_honest_covarianc
         got = solved(problem, marker_sd=0.0).poses
         gap.append(np.abs(se3.relative_difference(got, first_look(problem.segments, 1)[0])).max())
     assert 50 < gap[0] / gap[1] < 200
-    # Covariance: exact where the markers sit on their reference.
-    still = solved(one_segment(coloured, np.zeros((2, 12)), CLUSTER), marker_sd=0.0)
-    expected = rigid + 0.0005**2 * np.linalg.inv(jacobian.T @ jacobian)
-    scale = np.sqrt(np.diag(expected))
-    np.testing.assert_allclose(
-        still.covariance[0] / np.outer(scale, scale), expected / np.outer(scale, scale), atol=1e-9
-    )
+    # Covariance: whatever the artifact of the frame at hand.
+    for displacement in (np.zeros((2, 12)), large):
+        got = solved(one_segment(coloured, displacement, CLUSTER), marker_sd=0.0).covariance
+        expected = rigid + 0.0005**2 * np.linalg.inv(jacobian.T @ jacobian)
+        scale = np.outer(*[np.sqrt(np.diag(expected))] * 2)
+        np.testing.assert_allclose(got / scale, np.tile(expected / scale, (len(got), 1, 1)), atol=1e-9)
 
 
 def test_correlated_deformation_gives_the_gain_of_theory() -> None:

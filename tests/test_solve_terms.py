@@ -15,9 +15,11 @@ from made_problems import CENTRES, CLUSTERS, Problem, away, made_problem, random
 from sta_prior import se3
 from sta_prior.angles import JointConvention
 from sta_prior.checks import FloatArray
+from sta_prior.prior.interface import IsotropicArtifact
 from sta_prior.solve.terms import (
     BALL_JOINT_SD,
     JointProblem,
+    SegmentProblem,
     System,
     angles_and_jacobians,
     assemble,
@@ -78,7 +80,7 @@ def test_marker_jacobian_agrees_with_differences_through_the_prior_mean(index: i
 
 
 @pytest.mark.parametrize("index", range(COUNT))
-def test_lever_and_mean_derivative_are_right_one_by_one(index: int) -> None:
+def test_lever_and_mean_derivative_have_the_markers_where_the_prior_expects_them(index: int) -> None:
     problem, poses = far_problem()
     segment = problem.segments[index]
 
@@ -86,14 +88,31 @@ def test_lever_and_mean_derivative_are_right_one_by_one(index: int) -> None:
         return segment.artifact.moments(angles_and_jacobians(problem.joints, moved(poses, step))[0]).mean
 
     term = marker_term(segment, poses, *angles_and_jacobians(problem.joints, poses), 0.0005)
-    through_mean = central_difference(mean, 6 * COUNT)
-    assert_derivative(term.through_mean, through_mean)
-    seen = np.where(term.seen[..., None], 1.0, 0.0)
-    np.testing.assert_allclose(term.lever - seen * term.through_mean, term.jacobian, atol=1e-15)
-    # Bare geometry: only the segment's own pose moves its markers in its own frame.
-    others = np.ones(6 * COUNT, dtype=bool)
-    others[6 * index : 6 * index + 6] = False
-    assert np.all(term.lever[..., others] == 0.0)
+    assert_derivative(term.through_mean, central_difference(mean, 6 * COUNT))
+    expected_places = segment.reference + mean(np.zeros(6 * COUNT)).reshape(FRAMES, -1, 3)
+    expected_lab = se3.transform_points(poses[:, index], expected_places)
+
+    def places(step: FloatArray) -> FloatArray:
+        bone = se3.transform_points(se3.inverse(moved(poses, step)[:, index]), expected_lab)
+        return bone.reshape(FRAMES, -1)
+
+    shown = np.where(term.seen[..., None], 1.0, 0.0)
+    assert_derivative(term.lever, shown * central_difference(places, 6 * COUNT))
+    np.testing.assert_array_equal(term.slope, term.lever - shown * term.through_mean)
+
+
+def test_information_does_not_take_artifact_for_width_of_the_cluster() -> None:
+    """Markers on a line leave the rotation about it open, however far artifact moves them off it."""
+    line = np.array([[0.05, -0.10, 0.03], [0.05, -0.20, 0.03], [0.05, -0.35, 0.03]])
+    rng = np.random.default_rng(7)
+    points = line + 0.02 * rng.standard_normal((5, 3, 3))
+    segment = SegmentProblem(0, points, line, IsotropicArtifact(9, 0.01))
+    system = assemble([segment], [], np.tile(np.eye(4), (5, 1, 1, 1)), 0.0005)
+    about_the_line = np.concatenate([[0.0, 1.0, 0.0], np.cross([0.05, 0.0, 0.03], [0.0, 1.0, 0.0])])
+    open_information = np.einsum("x,fxy,y->f", about_the_line, system.information, about_the_line)
+    taken_in = np.einsum("x,fxy,y->f", about_the_line, system.normal, about_the_line)
+    assert np.abs(open_information).max() < 1e-9
+    assert taken_in.min() > 1.0
 
 
 @pytest.mark.parametrize("side", ["right", "left"])

@@ -96,11 +96,16 @@ def read_inputs(study: str, prior: str | None, personal: str | None) -> Inputs:
 _kept: dict[str, Inputs] = {}
 
 
+def keep_inputs(run: str, inputs: Inputs) -> None:
+    """Keep the inputs of a run for its jobs in this process; those of an earlier run are let go."""
+    _kept.clear()
+    _kept[run] = inputs
+
+
 def inputs_of(job: Job) -> Inputs:
     """Return the inputs of a job's run, read in this process when its first job comes."""
     if job.run not in _kept:
-        _kept.clear()
-        _kept[job.run] = read_inputs(job.study, job.prior, job.personal)
+        keep_inputs(job.run, read_inputs(job.study, job.prior, job.personal))
     return _kept[job.run]
 
 

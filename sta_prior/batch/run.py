@@ -9,6 +9,7 @@ import csv
 import json
 import os
 import secrets
+import warnings
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import asdict, dataclass
@@ -18,7 +19,7 @@ from pathlib import Path
 
 import joblib
 
-from sta_prior.batch.job import Inputs, Job, Outcome, read_inputs, solve_job
+from sta_prior.batch.job import Inputs, Job, Outcome, keep_inputs, read_inputs, solve_job
 from sta_prior.batch.output import trial_files
 from sta_prior.errors import InputError, message
 from sta_prior.io.files import atomic_path, file_digest
@@ -77,8 +78,8 @@ def solve_study(
     """
     folder = Path(out)
     paths = [str(path) if path else None for path in (study_path, prior_path, personal_path)]
-    if scheduler is not None:
-        # Another machine's working folder is not this one's.
+    if scheduler is not None or workers != 1:
+        # A worker's folder is not this one's: on another machine, or kept from an earlier run.
         folder, paths = folder.absolute(), [str(Path(path).absolute()) if path else None for path in paths]
     study_name, prior_name, personal_name = paths
     inputs = read_inputs(str(study_name), prior_name, personal_name)
@@ -88,6 +89,7 @@ def solve_study(
     _check_folder(folder)
     _refuse_overwriting(folder, chosen, inputs.study, [path for path in paths if path])
     token = secrets.token_hex(8)
+    keep_inputs(token, inputs)
     jobs = [
         Job(
             run=token,
@@ -106,9 +108,8 @@ def solve_study(
         solve(chosen[0], None, estimator)  # says so once, not once a trial
     outcomes: list[Outcome] = []
     try:
-        with _backend(scheduler) as processes:
-            parallel = joblib.Parallel(n_jobs=processes or workers, return_as="generator")
-            for outcome in parallel(joblib.delayed(solve_job)(job) for job in jobs):
+        with _backend(scheduler) as processes, _outcomes(jobs, processes or workers) as coming:
+            for outcome in coming:
                 outcomes.append(outcome)
                 progress(outcome)
     except KeyboardInterrupt:
@@ -147,6 +148,20 @@ def _refuse_overwriting(folder: Path, chosen: list[Trial], study: Study, paths: 
         if target.resolve() in inputs:
             wrong = "an input of the study, a result would take its place"
             raise InputError(message(target, wrong, "Choose another --out."))
+
+
+@contextmanager
+def _outcomes(jobs: list[Job], processes: int) -> Iterator[Iterator[Outcome]]:
+    """Outcomes as they come, in the order of the jobs; jobs that nobody waits for any more are dropped."""
+    parallel = joblib.Parallel(n_jobs=processes, return_as="generator")
+    coming = parallel(joblib.delayed(solve_job)(job) for job in jobs)
+    try:
+        yield coming
+    finally:
+        with warnings.catch_warnings():
+            # Of dropped jobs the account of the run tells, and the user dropped them.
+            warnings.simplefilter("ignore", UserWarning)
+            coming.close()
 
 
 @contextmanager

@@ -167,7 +167,7 @@ def _pair_trial(trial: Trial, reference: Reference) -> _PairedTrial:
         fit = check_belonging(points[:, own], reference.markers[own], pose[:, index], away)
         # Distances need no bone truth: the best frames are sought in the whole trial.
         fits.append(replace(fit, distance_misfit=distance_misfit(whole[:, own], reference.markers[own])))
-    share = np.isfinite(points[..., 0]).mean(axis=0)
+    share = np.isfinite(points[..., 0]).sum(axis=0) / max(time.size, 1)
     return _PairedTrial(trial, time, displacement, pose, angle, fits, share)
 
 

@@ -37,7 +37,7 @@ from sta_prior.prior.hierarchy import (
 )
 
 INSTRUMENT_SD = 0.0005
-"""Floor of the residual after bone-truth noise is taken out, m."""
+"""Joins the bone-truth noise in the metric in which that is taken out, m; the residual has no floor."""
 
 BOUNDARY = 1e-8
 """A variance below this part of the mean square displacement counts as zero, if no prior holds it."""

@@ -32,7 +32,7 @@ TOLERANCE = 1e-8
 MAXIMUM_ITERATIONS = 60
 _CHUNK = 1000
 _LARGEST_STEP = np.array([0.2, 0.2, 0.2, 0.05, 0.05, 0.05])
-_RELAXATION = (0.1, 5.0)
+_RELAXATION = (0.1, 20.0)
 
 # Levenberg's term of the iteration, 1/rad² and 1/m²: a tenth of the least information with which a
 # pose counts as determined. It keeps a direction that is all but open from wandering, and with it

@@ -60,12 +60,13 @@ def _pose_covariance(system: System, count: int, converged: BoolArray) -> tuple[
     """Posterior covariance of the stacked poses and which segments are determined."""
     frames, size = system.gradient.shape
     identity = np.broadcast_to(np.eye(size), (frames, size, size))
-    covariance = symmetrise(np.linalg.solve(system.normal + ANCHOR * np.eye(size), identity))
+    information = system.information
+    covariance = symmetrise(np.linalg.solve(information + ANCHOR * np.eye(size), identity))
     sd = np.sqrt(np.einsum("fxx->fx", covariance)).reshape(frames, count, 6)
     determined = (sd < _UNDETERMINED).all(axis=2) & converged[:, None]
     whole = np.flatnonzero(determined.all(axis=1))
     # Where all is determined the anchor is not needed and must not enter the covariance.
-    covariance[whole] = symmetrise(np.linalg.solve(system.normal[whole], identity[whole]))
+    covariance[whole] = symmetrise(np.linalg.solve(information[whole], identity[whole]))
     return covariance, determined
 
 
@@ -84,7 +85,7 @@ def _artifact(term: Linearised, covariance: FloatArray) -> tuple[FloatArray, Flo
     """
     gain = term.artifact_covariance @ term.precision
     mean = term.mean + np.einsum("fab,fb->fa", gain, term.residual)
-    slope = term.through_mean + gain @ term.jacobian
+    slope = term.through_mean + gain @ term.slope
     left = np.einsum("faa->fa", term.artifact_covariance) - np.einsum(
         "fab,fab->fa", gain, term.artifact_covariance
     )
@@ -98,7 +99,7 @@ def _shares(term: Linearised, covariance: FloatArray) -> tuple[FloatArray, Float
     d by hand, the rows of x reduce to diag(P Jᵀ S⁻¹ L) for the markers and −diag(P Jᵀ S⁻¹ M)
     for the prior, with J = L − M.
     """
-    pull = covariance @ np.swapaxes(term.precision @ term.jacobian, 1, 2)
+    pull = covariance @ np.swapaxes(term.precision @ term.slope, 1, 2)
     markers = np.einsum("fxn,fnx->fx", pull, term.lever)
     prior = -np.einsum("fxn,fnx->fx", pull, term.through_mean)
     return markers, prior
@@ -110,17 +111,18 @@ def _conflict(term: Linearised, index: int, determined: BoolArray) -> tuple[Floa
     Freedom is 3m − 6 for m markers; markers on a line leave one direction of the pose untouched and
     one more of freedom, hence the rank.
     """
-    own = term.jacobian[:, :, 6 * index : 6 * index + 6]
-    whitened = term.precision @ own
-    inner = np.swapaxes(own, 1, 2) @ whitened
+    own = slice(6 * index, 6 * index + 6)
+    slope = term.slope[:, :, own]
+    inner = np.swapaxes(slope, 1, 2) @ term.precision @ slope
     scale = np.sqrt(np.einsum("fxx->fx", inner))
     scale = np.where(scale > 0.0, scale, 1.0)
     information, directions = np.linalg.eigh(inner / (scale[:, :, None] * scale[:, None, :]))
     told = information > _OPEN_DIRECTION
-    pulled = np.einsum("fnx,fn->fx", whitened, term.residual) / scale
+    weighted = np.einsum("fnm,fm->fn", term.precision, term.residual)
+    pulled = np.einsum("fnx,fn->fx", term.jacobian[:, :, own], weighted) / scale
     along = np.einsum("fxd,fx->fd", directions, pulled)
     explained = np.where(told, along**2 / np.where(told, information, 1.0), 0.0).sum(axis=1)
-    whole = np.einsum("fn,fn->f", np.einsum("fnm,fm->fn", term.precision, term.residual), term.residual)
+    whole = np.einsum("fn,fn->f", weighted, term.residual)
     freedom = (term.seen.sum(axis=1) - told.sum(axis=1)).astype(np.float64)
     enough = (freedom > 0) & determined
     return np.where(enough, np.maximum(whole - explained, 0.0), np.nan), freedom

@@ -74,11 +74,13 @@ class Linearised:
     Attributes
     ----------
     residual : shape (F, n), m, bone frame, 0 where hidden
-    jacobian : shape (F, n, 6S), its derivative in all poses: lever − through_mean
+    jacobian : shape (F, n, 6S), its derivative in all poses, for steps; 0 where hidden
     precision : shape (F, n, n), 1/m², inverse of C + σ² over the seen outputs, 0 elsewhere
     seen : shape (F, n)
-    lever : shape (F, n, 6S), derivative of T⁻¹y alone
+    lever : shape (F, n, 6S), derivative of T⁻¹y alone with the markers where the prior expects
+        them, for the information; 0 where hidden
     through_mean : shape (F, n, 6S), derivative of the prior's mean through the angles
+    slope : shape (F, n, 6S), lever − through_mean, 0 where hidden
     artifact_covariance : shape (F, n, n), m², C
     mean : shape (F, n), m
     """
@@ -89,6 +91,7 @@ class Linearised:
     seen: BoolArray
     lever: FloatArray
     through_mean: FloatArray
+    slope: FloatArray
     artifact_covariance: FloatArray
     mean: FloatArray
 
@@ -126,6 +129,12 @@ def marker_term(
     angles : shape (F, J, 3), rad, from angles_and_jacobians
     angle_jacobian : shape (F, J, 3, 6S), from angles_and_jacobians
     marker_sd : instrument noise, m
+
+    Notes
+    -----
+    The derivative of T⁻¹y sees the markers where they are, artifact and all. Taken for the
+    information it would count the artifact's own size as width of the cluster: markers on a line
+    would seem to fix the rotation about it. The expected information has them at a + μ.
     """
     moments = segment.artifact.moments(angles)
     pose = poses[:, segment.index]
@@ -133,17 +142,22 @@ def marker_term(
     points_bone = transform_points(inverse(pose), segment.points)
     residual = (points_bone - segment.reference).reshape(frames, -1) - moments.mean
     seen = np.isfinite(residual)
-    lever = np.zeros((frames, 3 * markers, angle_jacobian.shape[-1]))
-    lever[..., 6 * segment.index : 6 * segment.index + 6] = -marker_jacobian(points_bone)
     through_mean = np.einsum("fnjd,fjdx->fnx", moments.mean_derivative, angle_jacobian)
-    lever = np.where(seen[..., None], lever, 0.0)
+    own = slice(6 * segment.index, 6 * segment.index + 6)
+    actual = np.zeros((frames, 3 * markers, angle_jacobian.shape[-1]))
+    actual[..., own] = -marker_jacobian(points_bone)
+    lever = np.zeros_like(actual)
+    lever[..., own] = -marker_jacobian(segment.reference + moments.mean.reshape(frames, markers, 3))
+    shown = seen[..., None]
+    lever = np.where(shown, lever, 0.0)
     return Linearised(
         residual=np.where(seen, residual, 0.0),
-        jacobian=np.where(seen[..., None], lever - through_mean, 0.0),
+        jacobian=np.where(shown, actual - through_mean, 0.0),
         precision=precision_of_seen(moments.covariance + marker_sd**2 * np.eye(3 * markers), seen),
         seen=seen,
         lever=lever,
         through_mean=through_mean,
+        slope=np.where(shown, lever - through_mean, 0.0),
         artifact_covariance=moments.covariance,
         mean=moments.mean,
     )
@@ -187,8 +201,8 @@ def precision_of_seen(covariance: FloatArray, seen: BoolArray) -> FloatArray:
 class System:
     """All terms at the current poses.
 
-    normal: (F, 6S, 6S) Gauss-Newton matrix; gradient: (F, 6S); joint_normal: the joints' part of
-    normal; markers: a term per segment; angles, angle_jacobian: as in angles_and_jacobians.
+    normal: (F, 6S, 6S) Gauss-Newton matrix, for steps; gradient: (F, 6S); joint_normal: the joints'
+    part of normal; markers: a term per segment; angles, angle_jacobian: as in angles_and_jacobians.
     """
 
     normal: FloatArray
@@ -197,6 +211,14 @@ class System:
     markers: list[Linearised]
     angles: FloatArray
     angle_jacobian: FloatArray
+
+    @property
+    def information(self) -> FloatArray:
+        """Expected information about the poses, shape (F, 6S, 6S): the posterior's precision."""
+        total = self.joint_normal.copy()
+        for term in self.markers:
+            total += np.swapaxes(term.slope, 1, 2) @ term.precision @ term.slope
+        return total
 
 
 def assemble(

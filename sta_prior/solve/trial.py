@@ -37,6 +37,7 @@ SMALLEST_SPREAD = 0.001
 """Marker SD that least squares assumes at least, m: shells deform less than skin moves."""
 
 _SAME_INSTANT = 0.5
+_ROUNDING = 1e-6  # s, of times in a file
 
 SCATTER = "scatter of the markers about the fit; silent about artifact that a cluster's markers share"
 
@@ -179,7 +180,8 @@ def _rigid_solution(
     scattered = [_with_scatter(segment, fit, alone=True) for segment, fit in zip(segments, fits, strict=True)]
     # One solve that starts at the optimum gives covariance, angles and travel; the poses stay as fitted.
     result = solve_frames(scattered, free, bridge(poses, free), marker_sd=0.0)
-    return replace(result, poses=poses, determined=np.isfinite(poses[..., 0, 0]), stop_reason="closed form")
+    poses = np.where(result.determined[..., None, None], poses, np.nan)
+    return replace(result, poses=poses, stop_reason="closed form")
 
 
 def _reference_notes(trial: Trial, points: FloatArray, reference: Reference) -> list[str]:
@@ -229,12 +231,12 @@ def _warn_of_gimbal(trial: Trial, poses: FloatArray) -> None:
 def _mark_informed(data: xr.Dataset, binding: Binding | None) -> None:
     times = data["time"].values
     informed = np.zeros(times.size, dtype=np.int8)
-    if binding is not None and binding.informed_times.size and times.size > 1:
-        step = float(np.median(np.diff(times)))
+    if binding is not None and binding.informed_times.size:
+        slack = _SAME_INSTANT * float(np.median(np.diff(times))) if times.size > 1 else _ROUNDING
         known = np.sort(binding.informed_times)
-        at = np.clip(np.searchsorted(known, times), 1, known.size - 1) if known.size > 1 else np.zeros(1, int)
-        gap = np.minimum(np.abs(known[at] - times), np.abs(known[np.maximum(at - 1, 0)] - times))
-        informed = (gap <= _SAME_INSTANT * step).astype(np.int8)
+        right = np.clip(np.searchsorted(known, times), 0, known.size - 1)
+        gap = np.minimum(np.abs(known[right] - times), np.abs(known[np.maximum(right - 1, 0)] - times))
+        informed = (gap <= slack).astype(np.int8)
     data["informed"] = (
         "time",
         informed,
