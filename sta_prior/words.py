@@ -127,26 +127,33 @@ def prior_lines(prior: Prior, found: xr.Dataset | None = None) -> list[Any]:
     lines: list[Any] = []
     if prior.invented:
         lines.append("INVENTED DATA: this prior describes nobody.")
-    kind = "personal prior" if prior.is_personal else "prior"
+    kind = "Personal prior" if prior.is_personal else "Prior"
     subjects = counted(len(prior.subjects), "subject")
-    lines.append(f"{prior.family.capitalize()} {kind} from {subjects}: {', '.join(prior.subjects)}")
+    learned = (
+        f"learned from {subjects}: {', '.join(prior.subjects)}" if prior.subjects else "learned from nobody"
+    )
+    lines.append(f"{kind} of family {prior.family}, {learned}")
     by_activity: dict[str, list[int]] = {}
     for trial in prior.trials:
         by_activity.setdefault(trial.activity, []).append(trial.times.size)
     for activity, counts in by_activity.items():
         frames = counted(sum(counts), "frame")
         lines.append(f"  {activity}: {counted(len(counts), 'trial')}, {frames} with bone truth")
+    lines += angle_lines(prior.validation)
+    for subject, values in prior.covariates.items():
+        lines.append(f"  {subject}: {', '.join(f'{name} {value:g}' for name, value in values.items())}")
     for name, model in prior.segments.items():
-        lines.append(f"  {name}: {' '.join(model.markers)}; {model.describe()}")
+        lines.append(f"  {name}: {' '.join(model.markers) or 'any markers'}; {model.describe()}")
     table = validation_table(prior.validation)
     if table is None:
-        lines.append("Not validated: one subject with one trial leaves nothing to leave out.")
+        lines.append("Not validated: there is nothing to leave out.")
     else:
         lines.append(table)
         lines.append(
             "In brackets: the range that 19 of 20 sets of so many units would show if the level held. "
             "Factor: widening of the spread between subjects for their small number."
         )
+        lines += score_lines(prior.validation)
     if found is not None:
         lines.append(validation_table(found, others=True))
     lines += [f"Note. {note}" for note in prior.notes]
@@ -170,13 +177,56 @@ def _figures(data: xr.Dataset, index: int) -> dict[str, Any]:
     }
 
 
+def _left_out(data: xr.Dataset) -> str:
+    """What was left out in turn: subject, trial, or nothing."""
+    if not data.sizes.get("unit", 0):
+        return "nothing"
+    return "subject" if bool(data["by_subject"].values[0]) else "trial"
+
+
+def angle_lines(data: xr.Dataset) -> list[str]:
+    """Frames with bone truth by region of each joint's first angle; empty where none are known."""
+    if "frames_by_angle" not in data:
+        return []
+    lines = []
+    counts = data["frames_by_angle"]
+    for joint in counts["joint"].values:
+        row = counts.sel(joint=joint)
+        here = [
+            f"{float(np.degrees(low)):.0f}–{float(np.degrees(high)):.0f}°: {int(count)}"
+            for low, high, count in zip(
+                data["region_low"].values, data["region_high"].values, row.values, strict=True
+            )
+            if count
+        ]
+        lines.append(
+            f"  {joint} {data['region_dof'].sel(joint=joint).item()}, frames by region: {', '.join(here)}"
+        )
+    return lines
+
+
+def score_lines(data: xr.Dataset) -> list[str]:
+    """What the prior gains over two plain laws, in log score of left-out frames."""
+    if not data.sizes.get("unit", 0) or not np.isfinite(data["log_score_zero"].values).any():
+        return []
+    lines = []
+    for index, segment in enumerate(data["segment"].values):
+        own = data["log_score"].values[index]
+        zero = float(np.nanmean(own - data["log_score_zero"].values[index]))
+        pooled = float(np.nanmean(own - data["log_score_pooled"].values[index]))
+        lines.append(
+            f"  {segment}: {zero:+.2f} against a law of mean zero, "
+            f"{pooled:+.2f} against one regression for all"
+        )
+    return ["Log score of left-out frames, nats a value, above 0 where the prior is better:", *lines]
+
+
 def prior_summary(prior: Prior, path: Path, found: xr.Dataset | None = None) -> dict[str, Any]:
     """Machine-readable account of a prior, and of its test on other pairs where one was made."""
     data = prior.validation
     segments = {}
-    for index, segment in enumerate(data["segment"].values):
-        model = prior.segments[str(segment)]
-        segments[str(segment)] = {
+    for index, (segment, model) in enumerate(prior.segments.items()):
+        segments[segment] = {
             "markers": list(model.markers),
             "inflation": model.inflation,
             "learned": model.describe(),
@@ -191,7 +241,7 @@ def prior_summary(prior: Prior, path: Path, found: xr.Dataset | None = None) -> 
         "family": prior.family,
         "personal": prior.is_personal,
         "subjects": list(prior.subjects),
-        "left_out": "subject" if bool(data["by_subject"].values[0]) else "trial",
+        "left_out": _left_out(data),
         "segments": segments,
         "other_pairs": others,
         "notes": list(prior.notes),

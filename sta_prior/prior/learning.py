@@ -23,6 +23,9 @@ from sta_prior.prior.personal import LearnedTrial
 from sta_prior.prior.statistics import SegmentFrames, adjacent_joints, segment_frames
 from sta_prior.prior.validate import calibrate_inflation, leave_one_out, summarise_validation
 
+REGION = np.radians(15.0)
+"""Width of the regions by which training frames are counted, rad."""
+
 
 def joint_labels(pairs: xr.Dataset) -> tuple[JointLabel, ...]:
     """Joints of paired data with their degrees of freedom, in the order of each joint's convention."""
@@ -160,7 +163,9 @@ def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[st
         joints=joints,
         segments=segments,
         trials=trials,
-        validation=xr.concat(figures, dim="segment", join="outer"),
+        validation=xr.merge(
+            [xr.concat(figures, dim="segment", join="outer"), frames_by_angle(chosen, joints)]
+        ),
         notes=_notes(trials),
         invented=bool(chosen.attrs.get("invented_data", 0)),
         pairs_digest=dataset_digest(pairs),
@@ -169,6 +174,28 @@ def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[st
             for name, values in json.loads(str(pairs.attrs.get("covariates", "{}"))).items()
             if name in {trial.subject for trial in trials}
         },
+    )
+
+
+def frames_by_angle(pairs: xr.Dataset, joints: tuple[JointLabel, ...]) -> xr.Dataset:
+    """How many paired frames lie in each region of every joint's first angle (flexion), REGION wide."""
+    edges = np.arange(-np.pi, np.pi + REGION, REGION)
+    names = [joint.name for joint in joints]
+    counts = [
+        np.histogram(pairs["angle"].sel(joint=joint.name, dof=joint.dof[0]).values, edges)[0]
+        for joint in joints
+    ]
+    used = np.flatnonzero(np.sum(counts, axis=0))
+    kept = np.arange(used.min(), used.max() + 1) if used.size else used
+    one, radian = {"units": "1"}, {"units": "rad"}
+    return xr.Dataset(
+        {
+            "frames_by_angle": (("joint", "region"), np.array(counts, dtype=np.int64)[:, kept], one),
+            "region_dof": (("joint",), np.array([joint.dof[0] for joint in joints]), one),
+            "region_low": (("region",), edges[kept], radian),
+            "region_high": (("region",), edges[kept + 1], radian),
+        },
+        coords={"joint": np.array(names)},
     )
 
 
