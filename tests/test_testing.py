@@ -201,7 +201,7 @@ def singular(moments: Moments, angles: FloatArray) -> Moments:
 
 
 def indefinite(residual: FloatArray) -> FloatArray:
-    return residual - 0.5 * np.trace(residual) * np.eye(residual.shape[0])
+    return np.asarray(residual - 0.5 * np.trace(residual) * np.eye(residual.shape[0]))
 
 
 def mean_of_all(moments: Moments, angles: FloatArray) -> Moments:
