@@ -137,7 +137,7 @@ class Expectation:
     trials: list[TrialStatistics]
     width: FloatArray
     point_population: bool = False
-    accuracy: float = 1e-12
+    accuracy: float = 1e-10
     subjects: list[str] = field(init=False)
     _owner: Indices = field(init=False)
     _seen: BoolArray = field(init=False)
