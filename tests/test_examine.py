@@ -37,7 +37,8 @@ def test_other_subjects_are_predicted_as_never_imaged() -> None:
     frames = segment_frames(
         made.only(pairs, ["P05", "P06"]), "shank", shank.markers, {"knee": made.dof_of("knee")}
     )
-    expected = summarise_validation("shank", predict_others(shank, frames), shank.inflation)
+    widths = prior.validation["half_width"].sel(segment="shank").values
+    expected = summarise_validation("shank", predict_others(shank, frames), shank.inflation, widths)
     xr.testing.assert_allclose(found.sel(segment=["shank"]), expected, rtol=1e-12)
     assert found["by_subject"].values.tolist() == [1, 1]
 

@@ -207,7 +207,10 @@ def test_only_subjects_that_were_learned_from_count() -> None:
 
 def test_one_trial_cannot_be_validated() -> None:
     prior = learn(made.make_pairs(np.random.default_rng(12), ["P01"], trials=1))
-    assert dict(prior.validation.sizes) == {"segment": 2, "unit": 0, "level": 3, "bin": 10}
+    sizes = prior.validation.sizes
+    assert {name: sizes[name] for name in ("segment", "unit", "level", "bin")} == {
+        "segment": 2, "unit": 0, "level": 3, "bin": 10,
+    }  # fmt: skip
     assert prior.validation["by_subject"].values.tolist() == [0, 0]
     assert prior.segments["thigh"].inflation == 4.0
 

@@ -191,7 +191,7 @@ def test_beyond_the_data_the_spread_grows_towards_the_magnitude() -> None:
     both = artifact.moments(angles[:1]).covariance[0]
     np.testing.assert_allclose(
         both,
-        artifact.moments(np.full((1, 2, 3), 1.5)).covariance[0] + (1.0 - np.exp(-0.5)) * artifact.magnitude,
+        artifact.moments(np.full((1, 2, 3), 1.5)).covariance[0] + (1.0 - np.exp(-0.5 * (0.5 / GROWTH_LENGTH) ** 2)) * artifact.magnitude,
         rtol=1e-12,
     )
 

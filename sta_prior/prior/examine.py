@@ -62,5 +62,8 @@ def examine(prior: Prior, pairs: xr.Dataset) -> xr.Dataset:
             )
         dof = {joint.name: joint.dof for joint in prior.joints}
         left_out = predict_others(model, segment_frames(chosen, name, model.markers, dof))
-        figures.append(summarise_validation(name, left_out, model.inflation))
+        widths = None
+        if prior.validation.sizes.get("unit", 0):
+            widths = prior.validation["half_width"].sel(segment=name).values
+        figures.append(summarise_validation(name, left_out, model.inflation, widths))
     return xr.concat(figures, dim="segment", join="outer")

@@ -191,7 +191,7 @@ def frames_by_angle(pairs: xr.Dataset, joints: tuple[JointLabel, ...]) -> xr.Dat
     return xr.Dataset(
         {
             "frames_by_angle": (("joint", "region"), np.array(counts, dtype=np.int64)[:, kept], one),
-            "region_dof": (("joint",), np.array([joint.dof[0] for joint in joints]), one),
+            "region_dof": (("joint",), np.array([joint.dof[0] for joint in joints])),
             "region_low": (("region",), edges[kept], radian),
             "region_high": (("region",), edges[kept + 1], radian),
         },

@@ -215,7 +215,7 @@ def estimate_time_constant(trials: list[SegmentFrames], basis: Basis) -> float:
     the variance of the residuals but not to their products at lags of one and two frames, so the ratio of
     these, pooled over trials and outputs, gives the decay. Capped at LONGEST_TIME_CONSTANT.
     """
-    near, far, steps = 0.0, 0.0, []
+    products, counts, steps = np.zeros(2), np.zeros(2), []
     for frames in trials:
         features = basis.values(frames.angles, frames.reference_angles)
         outputs = np.where(np.isfinite(frames.displacement), frames.displacement, 0.0)
@@ -227,10 +227,11 @@ def estimate_time_constant(trials: list[SegmentFrames], basis: Basis) -> float:
         for lag in (1, 2):
             same = frames.window[lag:] == frames.window[:-lag]
             both = seen[lag:] & seen[:-lag] & same[:, None]
-            product = float((residual[lag:] * residual[:-lag])[both].sum())
-            near, far = (near + product, far) if lag == 1 else (near, far + product)
+            products[lag - 1] += float((residual[lag:] * residual[:-lag])[both].sum())
+            counts[lag - 1] += int(both.sum())
         steps.append(frames.step)
-    if near <= 0.0 or far <= 0.0:
+    if (products <= 0.0).any():
         return LONGEST_TIME_CONSTANT
+    near, far = products / counts
     constant = -float(np.median(steps)) / np.log(min(far / near, 0.999))
     return float(np.clip(constant, 1e-3, LONGEST_TIME_CONSTANT))

@@ -20,18 +20,18 @@ from dataclasses import dataclass
 import numpy as np
 import xarray as xr
 from scipy.stats import binom, norm
-from scipy.stats import t as student
 
 from sta_prior.checks import FloatArray
 from sta_prior.gaussian import crps_normal, log_density, nearest_psd
 from sta_prior.prior.basis import Basis
+from sta_prior.prior.calibration import LARGEST_INFLATION, calibrate, few_subjects_factor, nested_coverage
 from sta_prior.prior.family import Own, Posture, SegmentModel
 from sta_prior.prior.interface import Artifact
 from sta_prior.prior.linear import linear_basis
 from sta_prior.prior.statistics import SegmentFrames
 
 LEVELS = (0.50, 0.90, 0.95)
-LARGEST_INFLATION = 4.0
+FEWEST_TO_CALIBRATE = 3
 PIT_BINS = 10
 SMALLEST_SD = 0.0003
 
@@ -212,17 +212,6 @@ def coverage(left_out: LeftOut, level: float, inflation: float = 1.0) -> float:
     return float((np.abs(left_out.error) <= norm.ppf(0.5 + 0.5 * level) * sd).mean())
 
 
-def few_subjects_factor(subjects: int) -> float:
-    """Factor on a variance estimated from few subjects so that a normal 90 % interval becomes Student's.
-
-    The squared ratio of the 95 % points of Student's t with n − 1 degrees of freedom and of the
-    normal law: 1.28 for nine subjects, 1.11 for twenty; at most LARGEST_INFLATION.
-    """
-    if subjects < 2:
-        return LARGEST_INFLATION
-    return float(min((student.ppf(0.95, subjects - 1) / norm.ppf(0.95)) ** 2, LARGEST_INFLATION))
-
-
 def calibrate_inflation(left_out: list[LeftOut]) -> float:
     """Factor ≥ 1 on the trial-constant variance of a subject never imaged.
 
@@ -246,17 +235,43 @@ def binomial_bound(units: int, level: float) -> tuple[float, float]:
     return float(low / units), float(high / units)
 
 
-def summarise_validation(segment: str, left_out: list[LeftOut], inflation: float) -> xr.Dataset:
+def ratios_of(left_out: Sequence[LeftOut]) -> list[FloatArray]:
+    """Error over predicted SD of every unit, before any widening."""
+    return [item.error / np.sqrt(item.constant + item.rest) for item in left_out]
+
+
+def half_widths(left_out: Sequence[LeftOut]) -> FloatArray | None:
+    """Half-widths of displacement intervals at LEVELS, in predicted SD; None with too few subjects."""
+    if len(left_out) < FEWEST_TO_CALIBRATE or not left_out[0].by_subject:
+        return None
+    return calibrate(ratios_of(left_out), len(left_out)).factor(np.array(LEVELS))
+
+
+def _covered(left_out: Sequence[LeftOut], inflation: float, widths: FloatArray | None) -> FloatArray:
+    """Coverage of every unit, (units, levels): by given half-widths, by nested calibration, or normal."""
+    if widths is not None:
+        return np.array([(np.abs(ratio)[:, None] <= widths).mean(axis=0) for ratio in ratios_of(left_out)])
+    if half_widths(left_out) is not None:
+        # Calibrated on themselves, subjects would be covered by construction.
+        return nested_coverage(ratios_of(left_out), np.array(LEVELS))
+    return np.array([[coverage(item, level, inflation) for level in LEVELS] for item in left_out])
+
+
+def summarise_validation(
+    segment: str, left_out: list[LeftOut], inflation: float, widths: FloatArray | None = None
+) -> xr.Dataset:
     """Left-out figures of one segment as a Dataset with dims segment, unit, level.
 
-    Variables: coverage by unit and level (with the inflation in force), rms_error and rms_zero (m,
+    Variables: coverage by unit and level, half_width by level (in predicted SD; calibrated on the left-out
+    subjects, and then coverage is that of each by the others' calibration, or given, else normal),
+    rms_error and rms_zero (m,
     of the prediction and of predicting no artifact), crps and crps_zero (m), log_score and its rivals (nats a
     value), pit (share of a unit's probability integral transforms in tenths), by_subject, inflation.
     """
     units = [item.unit for item in left_out]
-    covered = np.array([[coverage(item, level, inflation) for level in LEVELS] for item in left_out]).reshape(
-        1, len(units), len(LEVELS)
-    )
+    covered = _covered(left_out, inflation, widths).reshape(1, len(units), len(LEVELS))
+    found = half_widths(left_out) if widths is None else widths
+    used = norm.ppf(0.5 + 0.5 * np.array(LEVELS)) if found is None else found
     sd = [np.sqrt(inflation * item.constant + item.rest) for item in left_out]
     rms = [float(np.sqrt((item.error**2).mean())) for item in left_out]
     zero = [float(np.sqrt((item.size**2).mean())) for item in left_out]
@@ -294,6 +309,7 @@ def summarise_validation(segment: str, left_out: list[LeftOut], inflation: float
             "crps_zero": row(crps_zero),
             **scores,
             "pit": (("segment", "unit", "bin"), pit, one),
+            "half_width": (("segment", "level"), used.reshape(1, -1), one),
             "inflation": (("segment",), np.array([inflation]), one),
             "by_subject": (("segment",), np.array([by_subject]), one),
         },
