@@ -1,7 +1,7 @@
 """Build the prior files of this folder: python priors/build.py
 
-``magnitude.nc`` holds published sizes; ``couriers-invented.nc`` is learned from the invented courier study and
-describes nobody.
+``magnitude.nc`` holds published sizes; ``couriers-invented.nc`` is learned from the invented courier
+study and describes nobody.
 """
 
 from __future__ import annotations

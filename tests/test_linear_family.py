@@ -189,9 +189,10 @@ def test_beyond_the_data_the_spread_grows_towards_the_magnitude() -> None:
     # Sideways of both joints at once: the distance is Euclidean, 3-4-5.
     angles[0, :, 0] = [1.5 + 0.3, 1.5 + 0.4]
     both = artifact.moments(angles[:1]).covariance[0]
+    grown = 1.0 - np.exp(-0.5 * (0.5 / GROWTH_LENGTH) ** 2)
     np.testing.assert_allclose(
         both,
-        artifact.moments(np.full((1, 2, 3), 1.5)).covariance[0] + (1.0 - np.exp(-0.5 * (0.5 / GROWTH_LENGTH) ** 2)) * artifact.magnitude,
+        artifact.moments(np.full((1, 2, 3), 1.5)).covariance[0] + grown * artifact.magnitude,
         rtol=1e-12,
     )
 

@@ -158,7 +158,7 @@ def test_a_marker_that_the_prior_lacks_gets_the_published_size() -> None:
     assert not moments.covariance[:, at][:, :, other].any()
     # Thigh, walking: 13.9 mm RMS of three axes, 56 % of it at the reference, see templates/magnitude.toml.
     size = np.sqrt(np.einsum("faa->f", moments.covariance[:, other][:, :, other]))
-    assert (0.55 * 0.0139 < size).all()
+    assert (size > 0.55 * 0.0139).all()
     assert (size <= 0.0139).all()
     count = moments.features.shape[1]
     assert got.constant_covariance.shape == (12 * count, 12 * count)
