@@ -151,7 +151,9 @@ def prior_lines(prior: Prior, found: xr.Dataset | None = None) -> list[Any]:
         lines.append(table)
         lines.append(
             "In brackets: the range that 19 of 20 sets of so many units would show if the level held. "
-            "Factor: widening of the spread between subjects for their small number."
+            "From three subjects on, each is judged by interval widths calibrated on the others. "
+            "Factor: widening of the spread between subjects for their small number, in the solver's "
+            "normal intervals."
         )
         lines += score_lines(prior.validation)
     if found is not None:

@@ -20,6 +20,7 @@ ORDER: tuple[str, ...] = (
     "solve",
     "support",
     *("compare", "report"),
+    "testing",
     *("batch", "words", "screen", "demo", "cli"),
     "__init__",
     "__main__",

@@ -118,9 +118,11 @@ class FeatureModel:
         residual = 1000.0 * float(np.sqrt(np.diag(self.hierarchy.residual).mean()))
         weights = new_subject(self.hierarchy, self.inflation)
         gains = flexion_gains(self.basis, weights, self.layout)
+        # With several joints they are told by their place in the lab file; names are the shell's.
+        names = [f"flexion of joint {gain.joint + 1}" if len(gains) > 1 else "flexion" for gain in gains]
         return (
             f"residual {residual:.1f} mm SD per axis, decay time {self.time_constant:.3f} s; "
-            + "".join(f"{gain.words()}; " for gain in gains)
+            + "".join(f"{gain.words(name)}; " for gain, name in zip(gains, names, strict=True))
             + f"fit: {self.hierarchy.stop_reason}"
         )
 

@@ -2,8 +2,10 @@
 
 Kernel: arrays in, arrays out. Conventions: docs/conventions.md.
 
-If the cluster turns by g times the angle, the angle that markers show is (1 − g) times the true one. No
-marker sees this; only the prior says it, and an error of its g is an error of the angle.
+If the cluster turns by g times the angle, the angle that markers show is (1 − g) times the true one; g is
+the turn about z of a distal segment's cluster, or that of a proximal one with its sign changed, for a knee
+whose flexion turns the distal bone about −z. No marker sees this; only the prior says it, and an error of
+its g is an error of the angle.
 """
 
 from __future__ import annotations
@@ -33,11 +35,11 @@ class Gain:
     sd: float
     reach: float
 
-    def words(self) -> str:
+    def words(self, name: str = "flexion") -> str:
         """One phrase with the error that one SD of the gain makes over the training range."""
         error = float(np.degrees(self.sd * self.reach))
         return (
-            f"turns with {100 * self.mean:.0f} ± {100 * self.sd:.0f} % of flexion, "
+            f"turns with {100 * self.mean:.0f} ± {100 * self.sd:.0f} % of {name}, "
             f"one SD of it being {error:.1f}° over the range seen"
         )
 

@@ -117,7 +117,7 @@ def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[st
     Parameters
     ----------
     pairs : paired data, as from `pair`
-    family : "reduced-rank-gp", "linear", or the name of a plug-in
+    family : "reduced-rank-gp", "linear", "exact-gp", "magnitude", or the name of a plug-in
     hold_out : subjects that must not be learned from
 
     Returns

@@ -17,11 +17,13 @@ from __future__ import annotations
 
 import math
 import re
+import tomllib
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from functools import cache, cached_property
-from importlib.resources import as_file, files
+from importlib.resources import files
 from itertools import pairwise
+from pathlib import Path
 
 import numpy as np
 
@@ -270,10 +272,23 @@ def read_magnitudes(path: str | None = None) -> Magnitudes:
     return _magnitudes(read_toml(path))
 
 
+def packaged_text() -> str:
+    """The packaged table as text, for a prior file to carry."""
+    return files("sta_prior").joinpath(PACKAGED).read_text(encoding="utf-8")
+
+
 @cache
+def magnitudes_of(text: str) -> Magnitudes:
+    """Published sizes from the text of a table; InputError as read_magnitudes."""
+    try:
+        content = tomllib.loads(text)
+    except tomllib.TOMLDecodeError as error:
+        raise InputError(message("magnitude.toml", f"not a table of sizes ({error})")) from error
+    return _magnitudes(Table(content, Path("magnitude.toml"), ""))
+
+
 def _packaged() -> Magnitudes:
-    with as_file(files("sta_prior").joinpath(PACKAGED)) as path:
-        return _magnitudes(read_toml(path))
+    return magnitudes_of(packaged_text())
 
 
 def _magnitudes(table: Table) -> Magnitudes:

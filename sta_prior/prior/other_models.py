@@ -17,7 +17,13 @@ from sta_prior.prior.exact_core import ExactArtifact
 from sta_prior.prior.exact_gp import fit_exact
 from sta_prior.prior.exact_model import ExactFit
 from sta_prior.prior.family import Own, Posture, SegmentData, Values, Variable
-from sta_prior.prior.magnitude import MagnitudeArtifact, magnitude_for, read_magnitudes
+from sta_prior.prior.magnitude import (
+    MagnitudeArtifact,
+    magnitude_for,
+    magnitudes_of,
+    packaged_text,
+    read_magnitudes,
+)
 from sta_prior.prior.statistics import SegmentFrames
 
 _UNITS = {
@@ -127,7 +133,8 @@ class MagnitudeModel:
     """Published sizes of one segment; any markers do.
 
     adjacent: positions of the joints that touch the segment; none where no joint is known, and then the
-    artifact has its full size at every posture.
+    artifact has its full size at every posture; table: text of the table of sizes, so that a file says what it
+    means whatever program reads it.
     """
 
     name: str
@@ -135,6 +142,7 @@ class MagnitudeModel:
     markers: tuple[str, ...] = ()
     layout: FloatArray = field(default_factory=lambda: np.zeros((0, 3)))
     inflation: float = 1.0
+    table: str = field(default_factory=packaged_text)
 
     def knows(self, subject: str) -> bool:
         """It learns from nobody."""
@@ -152,7 +160,12 @@ class MagnitudeModel:
         """Artifact of anybody."""
         known = self.adjacent if self.adjacent else None
         return magnitude_for(
-            self.name, posture.markers, posture.activity, posture.angles if known else None, known
+            self.name,
+            posture.markers,
+            posture.activity,
+            posture.angles if known else None,
+            known,
+            magnitudes_of(self.table),
         )
 
     def for_subject(self, posture: Posture, own: Own) -> MagnitudeArtifact:
@@ -161,14 +174,17 @@ class MagnitudeModel:
 
     def describe(self) -> str:
         """One line about the sizes."""
-        table = read_magnitudes()
+        table = magnitudes_of(self.table)
         sizes = table.segments[table.segment(self.name)].size
         told = ", ".join(f"{task.replace('_', ' ')} {item.value:.0f}" for task, item in sizes.items())
         return f"published RMS size of displacement in mm: {told}"
 
     def variables(self) -> dict[str, Variable]:
-        """All that has to be stored: the sizes themselves come with the program."""
-        return {"adjacent": Variable(("adjacent",), np.array(self.adjacent, dtype=np.int64))}
+        """All that has to be stored: the joints, and the table with every number and its source."""
+        return {
+            "adjacent": Variable(("adjacent",), np.array(self.adjacent, dtype=np.int64)),
+            "table": Variable((), np.array(self.table)),
+        }
 
 
 @dataclass(frozen=True)
@@ -185,7 +201,10 @@ class MagnitudeFamily:
     def read(self, name: str, stored: Mapping[str, Values]) -> MagnitudeModel:
         """Make the model of a segment from what its ``variables`` stored."""
         return MagnitudeModel(
-            name, tuple(int(joint) for joint in stored["adjacent"]), layout=stored["layout"]
+            name,
+            tuple(int(joint) for joint in stored["adjacent"]),
+            layout=stored["layout"],
+            table=str(stored["table"]),
         )
 
 
