@@ -133,8 +133,8 @@ class MagnitudeModel:
     """Published sizes of one segment; any markers do.
 
     adjacent: positions of the joints that touch the segment; none where no joint is known, and then the
-    artifact has its full size at every posture; table: text of the table of sizes, so that a file says what it
-    means whatever program reads it.
+    artifact has its full size at every posture; table: text of the table of sizes, so that a file says
+    what it means whatever program reads it.
     """
 
     name: str
