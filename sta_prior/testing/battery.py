@@ -18,6 +18,7 @@ CHECKS: dict[str, Callable[[Case], bool]] = {
     "frames alone": moments.check_frames_alone,
     "derivative": moments.check_derivative,
     "covariance": moments.check_covariance,
+    "beyond the data": moments.check_beyond,
     "reference posture": moments.check_reference,
     "markers": binding.check_markers,
     "side": binding.check_side,
@@ -41,8 +42,8 @@ def check_prior(prior: Prior, pairs: xr.Dataset | None = None) -> tuple[str, ...
 
     Returns
     -------
-    Names of the checks that were made. "own subject" needs a family that knows subjects, "learning again" and
-    "few subjects" need pairs, the last of six subjects or more.
+    Names of the checks that were made. "own subject" needs a family that knows subjects; "beyond the data",
+    "learning again" and "few subjects" need pairs, the last of six subjects or more.
 
     Raises
     ------

@@ -24,6 +24,7 @@ ROUNDING = 1e-9
 """Part of the largest value by which two ways to the same moments may differ."""
 
 FRAMES = 24
+STEPS = 6
 PARTS = ("mean", "mean_derivative", "features", "covariance")
 
 
@@ -36,13 +37,15 @@ class Case:
     """A prior under test and the angles it is asked about.
 
     pairs: what it learned from, or None; inside, beyond: (F, joints, 3) rad, within the range of the
-    pairs and outside it; reference: (joints, 3) rad.
+    pairs and outside it; outward: (paths, STEPS, joints, 3) rad, away from the edge of the data one joint at
+    a time, none where the edge is not known; reference: (joints, 3) rad.
     """
 
     prior: Prior
     pairs: xr.Dataset | None
     inside: FloatArray
     beyond: FloatArray
+    outward: FloatArray
     reference: FloatArray
 
     @property
@@ -88,21 +91,27 @@ def make_case(prior: Prior, pairs: xr.Dataset | None) -> Case:
     if pairs is None:
         known = generator.uniform(-0.1, 0.1, (200, count, 3))
         known[..., 0] = generator.uniform(0.0, 1.0, (200, count))
-        reference = generator.uniform(-0.05, 0.05, (count, 3))
+        references = generator.uniform(-0.05, 0.05, (1, count, 3))
     else:
         dof = {joint.name: joint.dof for joint in prior.joints}
-        known = gather_angles(pairs, "angle", dof)
+        known, references = (gather_angles(pairs, name, dof) for name in ("angle", "reference_angle"))
         known = known[np.isfinite(known).all(axis=(1, 2))]
-        reference = np.nanmean(gather_angles(pairs, "reference_angle", dof), axis=0)
+        references = references[np.isfinite(references).all(axis=(1, 2))]
+    reference = references.mean(axis=0)
     inside = known[generator.permutation(known.shape[0])[:FRAMES]]
     beyond = inside[: FRAMES // 2].copy()
-    low, high = known[..., 0].min(axis=0), known[..., 0].max(axis=0)
+    both = np.concatenate([known, references])[..., 0]
+    low, high = both.min(axis=0), both.max(axis=0)
     away = generator.uniform(0.15, 0.6, beyond.shape[:2])
     order = np.arange(beyond.shape[0])
     beyond[..., 0] = np.where(order[:, None] % 2, high + away, low - away)
     # In every other pair of frames the first joint alone is beyond.
     beyond[order % 4 > 1, 1:] = inside[: beyond.shape[0]][order % 4 > 1, 1:]
-    return Case(prior, pairs, inside, beyond, reference)
+    outward = np.tile(np.median(known, axis=0), (2 * count, STEPS, 1, 1))
+    for joint in range(count):
+        outward[2 * joint, :, joint, 0] = low[joint] - np.linspace(0.0, 1.0, STEPS)
+        outward[2 * joint + 1, :, joint, 0] = high[joint] + np.linspace(0.0, 1.0, STEPS)
+    return Case(prior, pairs, inside, beyond, outward if pairs is not None else outward[:0], reference)
 
 
 def spread(artifact: Artifact, angles: FloatArray) -> float:

@@ -114,6 +114,21 @@ def _constant_part(artifact: Artifact, moments: Moments) -> FloatArray:
     return np.asarray(np.einsum("fl,falb->fab", moments.features, inner))
 
 
+def check_beyond(case: Case) -> bool:
+    """Further and further beyond the data the spread does not shrink."""
+    for segment in case.prior.segments:
+        artifact = case.new(segment)
+        for path, angles in enumerate(case.outward):
+            variance = np.einsum("faa->f", artifact.moments(angles).covariance)
+            if (np.diff(variance) < -ROUNDING * variance[:-1]).any():
+                raise case.fail(
+                    segment,
+                    f"spread shrinks {'above' if path % 2 else 'below'} the range of the data of "
+                    f"{case.prior.joints[path // 2].name}, expected growth or none",
+                )
+    return bool(len(case.outward))
+
+
 def check_reference(case: Case) -> bool:
     """The mean artifact of a subject never imaged is zero in the reference posture."""
     for segment, artifact in case.artifacts(case.setting).items():
