@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import os
+import subprocess
+import sys
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from functools import cache
@@ -456,3 +459,30 @@ def test_pairs_of_nothing_are_refused(name: str) -> None:
 def test_an_unknown_left_subject_is_refused() -> None:
     with says(InputError, "example_pairs, left: no subject S04, has S01 S02 S03."):
         example_pairs(subjects=3, left=["S02", "S04"])
+
+
+# The benchmark that uses the invented pairs.
+
+
+def test_the_benchmark_of_learning_runs_and_its_page_shows_its_table(tmp_path: Path) -> None:
+    folder = Path(__file__).parents[1] / "docs" / "benchmarks"
+    small = ("--subjects", "3", "--trials", "1", "--frames", "40", "--points", "50")
+    done = subprocess.run(
+        [sys.executable, str(folder / "learn.py"), *small],
+        cwd=tmp_path,
+        env={**os.environ, "PYTHONPATH": str(folder.parents[1])},
+        capture_output=True,
+        text=True,
+        check=False,
+    )
+    assert (done.returncode, done.stderr) == (0, "")
+    printed = [line.split("|")[1] for line in done.stdout.splitlines() if line.startswith("|")]
+    page = (folder / "README.md").read_text(encoding="utf-8")
+    shown = [line.split("|")[1] for line in page.splitlines() if line.startswith("|")]
+    size = "10 subjects × 3 trials × 1000 frames"
+    expected = [
+        row.replace("3 subjects × 1 trials × 40 frames", size).replace("50 p", "2000 p") for row in printed
+    ]
+    assert shown[: len(expected)] == expected
+    assert "\nRatio 1/" in done.stdout
+    assert "\nPeak memory " in done.stdout
