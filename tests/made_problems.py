@@ -13,7 +13,8 @@ from sta_prior.angles import JointConvention, rotation_from_angles
 from sta_prior.checks import BoolArray, FloatArray
 from sta_prior.prior.hierarchy import Weights
 from sta_prior.prior.interface import Artifact
-from sta_prior.prior.linear import Basis, LinearArtifact, Term
+from sta_prior.prior.artifact import FeatureArtifact
+from sta_prior.prior.basis import Basis, Term
 from sta_prior.solve.terms import JointProblem, SegmentProblem
 
 # Bone frames: x forward, y up, z right; m. Joint centres: below the thigh's origin, and so on.
@@ -55,7 +56,7 @@ def made_artifact(
     slope: float = 0.02,
     subject_sd: float = 0.008,
     residual_sd: float = 0.004,
-) -> LinearArtifact:
+) -> FeatureArtifact:
     """Artifact that follows flexion and its square at some joints; slope and subject_sd in m/rad."""
     n = 3 * markers
     terms = tuple(Term(joint, 0, power) for joint in joints for power in (1, 2))
@@ -65,12 +66,13 @@ def made_artifact(
     features = random_covariance(rng, len(terms) + 1, 1.0)
     features[0, 0] += 1.0
     outputs = random_covariance(rng, n, subject_sd)
-    return LinearArtifact(
+    return FeatureArtifact(
         basis=Basis(terms, mixing),
         weights=Weights(mean, np.asarray(np.kron(features, outputs))),
         residual=random_covariance(rng, n, residual_sd),
         time_constant=0.1,
         reference=REFERENCE_ANGLES,
+        magnitude=np.zeros((n, n)),
     )
 
 

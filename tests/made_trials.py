@@ -15,7 +15,7 @@ from sta_prior.angles import JointConvention, joint_angles
 from sta_prior.checks import FloatArray
 from sta_prior.prior import Prior
 from sta_prior.prior.base import Binding
-from sta_prior.prior.linear import LinearArtifact
+from sta_prior.prior.artifact import FeatureArtifact
 from sta_prior.se3 import transform_points
 from sta_prior.study import Lab, Study, Trial, read_study
 
@@ -27,7 +27,7 @@ STUDY_WITHOUT_BONE = STUDY.replace('bone = "stairs_bone.csv"\n', "")
 Change = Callable[[dict[str, FloatArray]], None]
 
 
-def chosen_outputs(artifact: LinearArtifact, markers: list[int]) -> LinearArtifact:
+def chosen_outputs(artifact: FeatureArtifact, markers: list[int]) -> FeatureArtifact:
     """The artifact of some markers, in the order given."""
     features, n = artifact.weights.mean.shape
     outputs = (3 * np.array(markers)[:, None] + np.arange(3)).reshape(-1)
@@ -35,16 +35,17 @@ def chosen_outputs(artifact: LinearArtifact, markers: list[int]) -> LinearArtifa
     weights = type(artifact.weights)(
         artifact.weights.mean[:, outputs], artifact.weights.covariance[np.ix_(columns, columns)]
     )
-    return LinearArtifact(
+    return FeatureArtifact(
         basis=artifact.basis,
         weights=weights,
         residual=artifact.residual[np.ix_(outputs, outputs)],
         time_constant=artifact.time_constant,
         reference=artifact.reference,
+        magnitude=artifact.magnitude[np.ix_(outputs, outputs)],
     )
 
 
-def whole_artifacts() -> dict[str, LinearArtifact]:
+def whole_artifacts() -> dict[str, FeatureArtifact]:
     """Artifact of thigh and shank, markers in the order of MARKERS."""
     return {
         segment: made_artifact(
@@ -54,7 +55,7 @@ def whole_artifacts() -> dict[str, LinearArtifact]:
     }
 
 
-def leg_artifacts(lab: Lab) -> dict[str, LinearArtifact]:
+def leg_artifacts(lab: Lab) -> dict[str, FeatureArtifact]:
     """The same by the names of a lab file, whatever its order of markers."""
     return {
         segment: chosen_outputs(

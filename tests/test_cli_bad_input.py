@@ -307,7 +307,8 @@ FILE_CASES: dict[str, tuple[tuple[str, ...], str]] = {
     "C3D as prior": (("check", "static.c3d"), "static.c3d: not a NetCDF 4 file."),
     "family": (
         ("learn", "p.nc", "--out", "r.nc", "--family", "linaer"),
-        "--family: no family linaer here, known: linear. Did you mean linear?",
+        "--family: no family linaer here, known: reduced-rank-gp, linear, exact-gp, magnitude. "
+        "Did you mean linear?",
     ),
     "subject held out": (
         ("learn", "p.nc", "--out", "r.nc", "--hold-out", "P02"),
@@ -381,11 +382,11 @@ def test_a_solution_of_other_skin_data(learned: Path, tmp_path: Path) -> None:
 
 def test_a_prior_of_other_markers(learned: Path, tmp_path: Path) -> None:
     folder = copy_of(learned, tmp_path)
-    replace_in(folder / "lab.toml", '"TC", "TD"]', '"TC", "LEP"]')
+    replace_in(folder / "lab.toml", '"TA", "TB", "TC", "TD"]', '"LEP", "MEP", "HJC"]')
     expect_refusal(
         folder,
         (*MAP[:-1], "t"),
-        "lab.toml, segment.thigh: prior expects thigh markers TA TB TC TD, lab has TA TB TC LEP.",
+        "lab.toml, segment.thigh: prior expects thigh markers TA TB TC TD, lab has LEP MEP HJC.",
     )
 
 

@@ -24,7 +24,7 @@ from scipy.optimize import least_squares
 from sta_prior import se3
 from sta_prior.checks import FloatArray
 from sta_prior.prior.interface import Artifact, IsotropicArtifact
-from sta_prior.prior.linear import LinearArtifact
+from sta_prior.prior.artifact import FeatureArtifact
 from sta_prior.rigid import fit_rigid
 from sta_prior.solve.frame import MARKER_SD, bridge, first_look, solve_frames
 from sta_prior.solve.posterior import FrameSolution
@@ -119,7 +119,7 @@ def test_wide_isotropic_prior_without_joint_is_exactly_the_rigid_fit(sd: float) 
     assert pose_error(result.poses, rigid) < 2e-8
 
 
-def certain(artifact: LinearArtifact, sd: float) -> LinearArtifact:
+def certain(artifact: FeatureArtifact, sd: float) -> FeatureArtifact:
     """The same mean, with next to no spread."""
     weights = replace(artifact.weights, covariance=np.zeros_like(artifact.weights.covariance))
     return replace(artifact, weights=weights, residual=sd**2 * np.eye(artifact.residual.shape[0]))
@@ -181,7 +181,7 @@ def test_hidden_marker_is_a_problem_without_that_marker() -> None:
     thigh = problem.segments[0]
     kept = np.flatnonzero(np.arange(12) // 3 != 2)
     artifact = thigh.artifact
-    assert isinstance(artifact, LinearArtifact)
+    assert isinstance(artifact, FeatureArtifact)
     features = artifact.weights.mean.shape[0]
     columns = (12 * np.arange(features)[:, None] + kept).reshape(-1)
     weights = replace(
