@@ -45,10 +45,13 @@ class FeatureArtifact:
         """Mean, its derivative and covariance at the angles, shape (frames, joints, 3) rad."""
         features = self.basis.values(angles, self.reference)
         count, n = self.weights.mean.shape
-        spread = self.weights.covariance.reshape(count, n, count, n)
-        # Two small contractions instead of one einsum over four indices: 20 times faster.
-        inner = np.tensordot(features, spread, axes=(1, 0))
-        covariance = np.einsum("fl,falb->fab", features, inner) + self.residual
+        # Products of two features, each pair once, against the covariance folded alike: one small product of
+        # matrices, and no array of frames by weights.
+        first, second = np.triu_indices(count)
+        spread = self.weights.covariance.reshape(count, n, count, n).transpose(0, 2, 1, 3)
+        folded = spread[first, second] + np.where((first < second)[:, None, None], spread[second, first], 0.0)
+        products = features[:, first] * features[:, second]
+        covariance = (products @ folded.reshape(first.size, n * n)).reshape(-1, n, n) + self.residual
         excess = self.basis.excess(angles)
         if (excess > 0.0).any():
             growth = 1.0 - np.exp(-0.5 * (excess / GROWTH_LENGTH) ** 2)

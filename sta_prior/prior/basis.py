@@ -28,6 +28,10 @@ SMALLEST_POWER = 0.02
 """Angles that move less than this about the reference, rad, say little about the artifact."""
 
 
+SOFT_EDGE = 0.03
+"""Angle over which features come to rest beyond the training data, rad: less than two degrees."""
+
+
 @dataclass(frozen=True)
 class Term:
     """One power of one joint angle: joint and dof are positions in the angle array."""
@@ -106,20 +110,31 @@ class Basis:
         """Number of features, the constant included."""
         return 1 + len(self.terms) + sum(wave.count for wave in self.waves)
 
+    def _beyond(self, angles: FloatArray) -> FloatArray:
+        """Signed distance of each angle beyond its reach, shape (frames, joints, 3), rad; 0 inside."""
+        result = np.zeros(angles.shape)
+        for reach in self.reaches:
+            column = angles[:, reach.joint, reach.dof]
+            result[:, reach.joint, reach.dof] = column - np.clip(column, reach.low, reach.high)
+        return result
+
     def held(self, angles: FloatArray) -> FloatArray:
-        """Angles, shape (frames, joints, 3), held at the edge of the training data."""
+        """Angles, shape (frames, joints, 3), held at the edge of the training data.
+
+        They come to rest SOFT_EDGE beyond it, without a kink: an iteration whose answer lies on a kink would
+        jump from side to side for ever.
+        """
         if not self.reaches:
             return angles
-        result = angles.copy()
-        for reach in self.reaches:
-            column = result[:, reach.joint, reach.dof]
-            result[:, reach.joint, reach.dof] = np.clip(column, reach.low, reach.high)
-        return result
+        beyond = self._beyond(angles)
+        return np.asarray(
+            angles - beyond - SOFT_EDGE * np.sign(beyond) * np.expm1(-np.abs(beyond) / SOFT_EDGE)
+        )
 
     def excess(self, angles: FloatArray) -> FloatArray:
         """How far the angles lie beyond the training data, shape (frames,), rad."""
-        difference = angles - self.held(angles)
-        return np.asarray(np.sqrt(np.einsum("fjd,fjd->f", difference, difference)))
+        beyond = self._beyond(angles)
+        return np.asarray(np.sqrt(np.einsum("fjd,fjd->f", beyond, beyond)))
 
     def _raw(self, angles: FloatArray) -> FloatArray:
         columns = [angles[:, term.joint, term.dof] ** term.power for term in self.terms]
@@ -163,9 +178,9 @@ class Basis:
             last = first + wave.count
             result[:, first:last, wave.joint, wave.dof] = wave.slopes(here[:, wave.joint, wave.dof])
             first = last
-        # At the edge a held angle no longer moves the features.
-        inside = here == angles
-        return np.asarray(result * inside[:, None])
+        # Beyond the edge a held angle moves the features less and less.
+        slope = np.exp(-np.abs(self._beyond(angles)) / SOFT_EDGE)
+        return np.asarray(result * slope[:, None])
 
     @property
     def relative_variance(self) -> FloatArray:

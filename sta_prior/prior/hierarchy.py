@@ -154,7 +154,7 @@ def make_block(
         feature_gram=weighted.T @ features,
         cross=weighted.T @ clean,
         output_gram=(clean * weights[:, None]).T @ clean,
-        noise_gram=np.einsum("t,tab->ab", weights, noise) * mask,
+        noise_gram=np.tensordot(weights, noise, axes=1) * mask,
         weight=float(weights.sum()),
         frames=features.shape[0],
     )

@@ -187,6 +187,11 @@ def segment_frames(
     return result
 
 
+def patterns(seen: BoolArray) -> BoolArray:
+    """Sets of outputs seen together, shape (patterns, n), each once; sorting is saved where all are seen."""
+    return seen[:1] if seen.all() else np.unique(seen, axis=0)
+
+
 def summarise(
     frames: SegmentFrames, basis: Basis, time_constant: float = LONGEST_TIME_CONSTANT
 ) -> TrialStatistics:
@@ -200,7 +205,7 @@ def summarise(
     weights = frame_weights(frames.window, correlation)
     seen = np.isfinite(frames.displacement)
     blocks = []
-    for pattern in np.unique(seen, axis=0):
+    for pattern in patterns(seen):
         here = (seen == pattern).all(axis=1)
         blocks.append(
             make_block(features[here], frames.displacement[here], frames.noise[here], weights[here], pattern)

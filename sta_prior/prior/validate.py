@@ -22,13 +22,13 @@ import xarray as xr
 from scipy.stats import binom, norm
 
 from sta_prior.checks import FloatArray
-from sta_prior.gaussian import crps_normal, log_density, nearest_psd
+from sta_prior.gaussian import cholesky, crps_normal, log_density, nearest_psd, whiten
 from sta_prior.prior.basis import Basis
 from sta_prior.prior.calibration import LARGEST_INFLATION, calibrate, few_subjects_factor, nested_coverage
 from sta_prior.prior.family import Own, Posture, SegmentModel
 from sta_prior.prior.interface import Artifact
 from sta_prior.prior.linear import linear_basis
-from sta_prior.prior.statistics import SegmentFrames
+from sta_prior.prior.statistics import SegmentFrames, patterns
 
 LEVELS = (0.50, 0.90, 0.95)
 FEWEST_TO_CALIBRATE = 3
@@ -94,13 +94,25 @@ def learn_rivals(frames: Sequence[SegmentFrames], adjacent: tuple[int, ...]) -> 
 
 
 def _log_score(error: FloatArray, covariance: FloatArray) -> float:
-    """Mean log density of whole frames, nats a value; hidden outputs (NaN) are left out exactly."""
+    """Mean log density of whole frames, nats a value; hidden outputs (NaN) are left out exactly.
+
+    covariance: (F, n, n), or (n, n) for one law at every frame.
+    """
     seen = np.isfinite(error)
+    if covariance.ndim == 3 and seen.all():
+        return float(log_density(error, covariance).sum()) / max(error.size, 1)
     total = 0.0
-    for pattern in np.unique(seen, axis=0):
+    for pattern in patterns(seen):
         here = (seen == pattern).all(axis=1)
-        inner = covariance[here][:, pattern][:, :, pattern]
-        total += float(log_density(error[here][:, pattern], inner).sum())
+        mine = error[here][:, pattern]
+        if covariance.ndim == 2:
+            factor = cholesky(covariance[np.ix_(pattern, pattern)])
+            white = whiten(factor, mine.T)
+            constant = np.log(np.diag(factor)).sum() + 0.5 * mine.shape[1] * np.log(2.0 * np.pi)
+            total -= float(0.5 * (white**2).sum() + mine.shape[0] * constant)
+        else:
+            inner = covariance[here][:, pattern][:, :, pattern]
+            total += float(log_density(mine, inner).sum())
     return total / max(int(seen.sum()), 1)
 
 
@@ -115,14 +127,9 @@ def _predict(
     error = frames.displacement - moments.mean
     scores = {"log_score": _log_score(error, moments.covariance + frames.noise)}
     if rivals is not None:
-        count, n = error.shape
         pooled = rivals.basis.values(frames.angles, frames.reference_angles) @ rivals.weights
-        scores["log_score_zero"] = _log_score(
-            frames.displacement, np.broadcast_to(rivals.zero, (count, n, n))
-        )
-        scores["log_score_pooled"] = _log_score(
-            frames.displacement - pooled, np.broadcast_to(rivals.pooled, (count, n, n))
-        )
+        scores["log_score_zero"] = _log_score(frames.displacement, rivals.zero)
+        scores["log_score_pooled"] = _log_score(frames.displacement - pooled, rivals.pooled)
     return LeftOut(
         unit=unit,
         error=error[seen],
