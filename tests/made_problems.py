@@ -11,10 +11,10 @@ from scipy.spatial.transform import Rotation
 from sta_prior import se3
 from sta_prior.angles import JointConvention, rotation_from_angles
 from sta_prior.checks import BoolArray, FloatArray
-from sta_prior.prior.hierarchy import Weights
-from sta_prior.prior.interface import Artifact
 from sta_prior.prior.artifact import FeatureArtifact
 from sta_prior.prior.basis import Basis, Term
+from sta_prior.prior.hierarchy import Weights
+from sta_prior.prior.interface import Artifact
 from sta_prior.solve.terms import JointProblem, SegmentProblem
 
 # Bone frames: x forward, y up, z right; m. Joint centres: below the thigh's origin, and so on.

@@ -14,8 +14,8 @@ from made_studies import LAB, STUDY, leg_points, leg_poses, make_study, write_po
 from sta_prior.angles import JointConvention, joint_angles
 from sta_prior.checks import FloatArray
 from sta_prior.prior import Prior
-from sta_prior.prior.base import Binding
 from sta_prior.prior.artifact import FeatureArtifact
+from sta_prior.prior.base import Binding
 from sta_prior.se3 import transform_points
 from sta_prior.study import Lab, Study, Trial, read_study
 

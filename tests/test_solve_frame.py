@@ -23,8 +23,8 @@ from scipy.optimize import least_squares
 
 from sta_prior import se3
 from sta_prior.checks import FloatArray
-from sta_prior.prior.interface import Artifact, IsotropicArtifact
 from sta_prior.prior.artifact import FeatureArtifact
+from sta_prior.prior.interface import Artifact, IsotropicArtifact
 from sta_prior.rigid import fit_rigid
 from sta_prior.solve.frame import MARKER_SD, bridge, first_look, solve_frames
 from sta_prior.solve.posterior import FrameSolution
