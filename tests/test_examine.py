@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from functools import cache
+from pathlib import Path
 
 import made_priors as made
 import numpy as np
@@ -10,9 +11,9 @@ import xarray as xr
 from made_studies import says
 
 from sta_prior.errors import InputError, MismatchError
-from sta_prior.prior import Prior, examine, learn
+from sta_prior.prior import Prior, examine, learn, load_prior
 from sta_prior.prior.statistics import segment_frames
-from sta_prior.prior.validate import predict_others, summarise_validation
+from sta_prior.prior.validate import LEVELS, coverage, predict_others, summarise_validation
 
 CHAIN = (made.ANKLE, made.KNEE)
 FEET = {**made.SEGMENTS, "foot": ("FA", "FB", "FC")}
@@ -87,3 +88,25 @@ def test_a_segment_that_some_subjects_do_not_show_is_scored_on_the_others() -> N
     pairs["displacement"].values[pairs["subject"].values == "P06", 3:] = np.nan
     found = examine(prior_of_four(), pairs)
     assert np.isfinite(found["rms_error"].values).tolist() == [[True, True], [True, False]]
+
+
+def test_too_few_subjects_to_calibrate_leave_normal_intervals_with_the_factor() -> None:
+    prior = learn(made.only(all_pairs(), made.subjects_of(2)))
+    found = examine(prior, all_pairs())
+    shank = prior.segments["shank"]
+    assert shank.inflation > 1.5
+    others = [name for name in made.subjects_of(6) if name not in made.subjects_of(2)]
+    frames = segment_frames(
+        made.only(all_pairs(), others), "shank", shank.markers, {"knee": made.dof_of("knee")}
+    )
+    left_out = predict_others(shank, frames)
+    expected = [[coverage(item, level, shank.inflation) for level in LEVELS] for item in left_out]
+    np.testing.assert_allclose(found["coverage"].sel(segment="shank").values, expected, rtol=1e-12)
+
+
+def test_published_sizes_are_tested_on_the_markers_and_joints_of_the_pairs() -> None:
+    prior = load_prior(Path(__file__).parents[1] / "priors" / "magnitude.nc")
+    found = examine(prior, all_pairs())
+    assert found["segment"].values.tolist() == ["thigh", "shank"]
+    assert found.sizes["unit"] == 6
+    np.testing.assert_allclose(found["rms_error"].values, found["rms_zero"].values, rtol=1e-12)

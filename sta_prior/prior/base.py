@@ -265,7 +265,8 @@ class Prior:
         self, model: SegmentModel, posture: Posture, trial: Trial, own: OwnPairs | None
     ) -> Artifact:
         subject = trial.subject.id
-        if own is None and not (self.is_personal and model.knows(subject)):
+        if not model.markers or (own is None and not (self.is_personal and model.knows(subject))):
+            # A model of any markers learns from nobody's frames.
             return model.for_new_subject(posture)
         frames: list[SegmentFrames] = []
         if own is not None and not own.empty:

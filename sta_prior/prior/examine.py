@@ -8,11 +8,21 @@ from __future__ import annotations
 import numpy as np
 import xarray as xr
 
+from sta_prior.checks import FloatArray
 from sta_prior.errors import InputError, MismatchError, message
 from sta_prior.prior.base import Prior
-from sta_prior.prior.learning import joint_labels
+from sta_prior.prior.learning import joint_labels, layout_of, markers_of
 from sta_prior.prior.statistics import segment_frames
-from sta_prior.prior.validate import predict_others, summarise_validation
+from sta_prior.prior.validate import FEWEST_TO_CALIBRATE, predict_others, summarise_validation
+
+
+def stored_half_widths(prior: Prior, segment: str) -> FloatArray | None:
+    """Half-widths that a prior was calibrated to, in predicted SD; None where it had too few subjects."""
+    figures = prior.validation
+    units = figures.sizes.get("unit", 0)
+    if units < FEWEST_TO_CALIBRATE or not bool(figures["by_subject"].sel(segment=segment)):
+        return None
+    return np.asarray(figures["half_width"].sel(segment=segment).values, dtype=np.float64)
 
 
 def examine(prior: Prior, pairs: xr.Dataset) -> xr.Dataset:
@@ -47,23 +57,28 @@ def examine(prior: Prior, pairs: xr.Dataset) -> xr.Dataset:
     for joint in prior.joints:
         if joint.name not in theirs or theirs[joint.name].kind != joint.kind:
             raise MismatchError(message("--pairs", f"prior needs joint {joint.name} of kind {joint.kind}"))
-    ours = [joint.name for joint in prior.joints]
+    # A prior of published sizes may need no joint; the frames are placed by the pairs' own.
+    used = prior.joints or tuple(theirs.values())
+    ours = [joint.name for joint in used]
+    dof = {joint.name: joint.dof for joint in used}
     chosen = pairs.isel(trial=new).sel(joint=ours)
     figures = []
     for name, model in prior.segments.items():
         if name not in chosen["segment"].values:
+            if not model.markers and set(prior.segments) & set(chosen["segment"].values):
+                continue  # published sizes of a segment that nobody wore markers on
             raise MismatchError(message("--pairs", f"prior expects segment {name}, the pairs lack it"))
-        markers = np.intersect1d(list(model.markers), chosen["marker"].values)
-        if markers.size == 0:
+        theirs_here = markers_of(chosen, name)
+        if model.markers and not set(model.markers) & set(theirs_here):
             raise MismatchError(
                 message(
                     "--pairs", f"prior expects {name} markers {' '.join(model.markers)}, the pairs have none"
                 )
             )
-        dof = {joint.name: joint.dof for joint in prior.joints}
-        left_out = predict_others(model, segment_frames(chosen, name, model.markers, dof))
-        widths = None
-        if prior.validation.sizes.get("unit", 0):
-            widths = prior.validation["half_width"].sel(segment=name).values
-        figures.append(summarise_validation(name, left_out, model.inflation, widths))
+        markers = model.markers or theirs_here
+        # Published sizes take any markers, where they are in these pairs.
+        layout = None if model.markers else layout_of(chosen, name, markers)
+        left_out = predict_others(model, segment_frames(chosen, name, markers, dof), layout=layout)
+        widths = stored_half_widths(prior, name)
+        figures.append(summarise_validation(name, left_out, model.inflation, widths, calibrated=False))
     return xr.concat(figures, dim="segment", join="outer")

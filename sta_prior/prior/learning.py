@@ -65,7 +65,13 @@ def _without(pairs: xr.Dataset, hold_out: Sequence[str]) -> xr.Dataset:
     return pairs.isel(subject=keep, frame=frames, trial=trials)
 
 
-def _layout(pairs: xr.Dataset, segment: str, markers: Sequence[str]) -> FloatArray:
+def markers_of(pairs: xr.Dataset, segment: str) -> tuple[str, ...]:
+    """Markers of a segment, in the order of the pairs."""
+    rows = zip(pairs["marker"].values, pairs["marker_segment"].values, strict=True)
+    return tuple(str(marker) for marker, own in rows if str(own) == segment)
+
+
+def layout_of(pairs: xr.Dataset, segment: str, markers: Sequence[str]) -> FloatArray:
     """Mean reference position of every marker, (m, 3) m, right side."""
     columns = [list(pairs["marker"].values).index(marker) for marker in markers]
     positions = pairs["reference"].values[:, columns].copy()
@@ -77,11 +83,7 @@ def _layout(pairs: xr.Dataset, segment: str, markers: Sequence[str]) -> FloatArr
 
 
 def _segment_data(pairs: xr.Dataset, segment: str, joints: tuple[JointLabel, ...]) -> SegmentData:
-    markers = tuple(
-        str(marker)
-        for marker, own in zip(pairs["marker"].values, pairs["marker_segment"].values, strict=True)
-        if str(own) == segment
-    )
+    markers = markers_of(pairs, segment)
     dof = {joint.name: joint.dof for joint in joints}
     frames = segment_frames(pairs, segment, markers, dof)
     if not frames:
@@ -92,7 +94,7 @@ def _segment_data(pairs: xr.Dataset, segment: str, joints: tuple[JointLabel, ...
     return SegmentData(
         name=segment,
         markers=markers,
-        layout=_layout(pairs, segment, markers),
+        layout=layout_of(pairs, segment, markers),
         frames=frames,
         adjacent=adjacent_joints(pairs, segment, tuple(dof)),
     )

@@ -141,8 +141,8 @@ def _predict(
     )
 
 
-def _posture(model: SegmentModel, frames: SegmentFrames) -> Posture:
-    return Posture(frames.reference_angles, model.layout)
+def _posture(model: SegmentModel, frames: SegmentFrames, layout: FloatArray | None = None) -> Posture:
+    return Posture(frames.reference_angles, model.layout if layout is None else layout)
 
 
 def leave_one_out(
@@ -172,7 +172,10 @@ def leave_one_out(
 
 
 def predict_others(
-    model: SegmentModel, frames: Sequence[SegmentFrames], rivals: Rivals | None = None
+    model: SegmentModel,
+    frames: Sequence[SegmentFrames],
+    rivals: Rivals | None = None,
+    layout: FloatArray | None = None,
 ) -> list[LeftOut]:
     """Predict subjects that the prior has not learned from, one unit a subject.
 
@@ -180,11 +183,13 @@ def predict_others(
     ----------
     model : of one segment
     frames : of subjects other than those it learned from
+    rivals : plain laws to score beside it
+    layout : shape (m, 3), m, reference positions, for a model that takes any markers; its own by default
     """
     return [
         _merge(
             [
-                _predict(model.for_new_subject(_posture(model, item), 1.0), item, name, True, rivals)
+                _predict(model.for_new_subject(_posture(model, item, layout), 1.0), item, name, True, rivals)
                 for item in frames
                 if item.subject == name
             ]
@@ -254,30 +259,37 @@ def half_widths(left_out: Sequence[LeftOut]) -> FloatArray | None:
     return calibrate(ratios_of(left_out), len(left_out)).factor(np.array(LEVELS))
 
 
-def _covered(left_out: Sequence[LeftOut], inflation: float, widths: FloatArray | None) -> FloatArray:
+def _covered(
+    left_out: Sequence[LeftOut], inflation: float, widths: FloatArray | None, nested: bool
+) -> FloatArray:
     """Coverage of every unit, (units, levels): by given half-widths, by nested calibration, or normal."""
     if widths is not None:
         return np.array([(np.abs(ratio)[:, None] <= widths).mean(axis=0) for ratio in ratios_of(left_out)])
-    if half_widths(left_out) is not None:
+    if nested:
         # Calibrated on themselves, subjects would be covered by construction.
         return nested_coverage(ratios_of(left_out), np.array(LEVELS))
     return np.array([[coverage(item, level, inflation) for level in LEVELS] for item in left_out])
 
 
 def summarise_validation(
-    segment: str, left_out: list[LeftOut], inflation: float, widths: FloatArray | None = None
+    segment: str,
+    left_out: list[LeftOut],
+    inflation: float,
+    widths: FloatArray | None = None,
+    calibrated: bool = True,
 ) -> xr.Dataset:
     """Left-out figures of one segment as a Dataset with dims segment, unit, level.
 
     Variables: coverage by unit and level, half_width by level (in predicted SD; calibrated on the left-out
-    subjects, and then coverage is that of each by the others' calibration, or given, else normal),
-    rms_error and rms_zero (m,
-    of the prediction and of predicting no artifact), crps and crps_zero (m), log_score and its rivals (nats a
-    value), pit (share of a unit's probability integral transforms in tenths), by_subject, inflation.
+    subjects, and then coverage is that of each by the others' calibration, or given, else normal with the
+    inflation, and always so where ``calibrated`` is False), rms_error and rms_zero (m, of the prediction
+    and of predicting no artifact), crps and crps_zero (m), log_score and its rivals (nats a value), pit
+    (share of a unit's probability integral transforms in tenths), by_subject, inflation.
     """
     units = [item.unit for item in left_out]
-    covered = _covered(left_out, inflation, widths).reshape(1, len(units), len(LEVELS))
-    found = half_widths(left_out) if widths is None else widths
+    found = widths if widths is not None or not calibrated else half_widths(left_out)
+    nested = widths is None and found is not None
+    covered = _covered(left_out, inflation, widths, nested).reshape(1, len(units), len(LEVELS))
     used = norm.ppf(0.5 + 0.5 * np.array(LEVELS)) if found is None else found
     sd = [np.sqrt(inflation * item.constant + item.rest) for item in left_out]
     rms = [float(np.sqrt((item.error**2).mean())) for item in left_out]
