@@ -18,6 +18,7 @@ from rich.console import Console
 from sta_prior import words
 from sta_prior.errors import StaPriorError, message
 from sta_prior.prior import DEFAULT_FAMILY, known_families
+from sta_prior.prior.inputs import INPUTS
 from sta_prior.screen import Screen, check_target, warnings_as_notes
 from sta_prior.solve import DEFAULT_ESTIMATOR, ESTIMATORS
 
@@ -86,6 +87,14 @@ def learn(
     hold_out: Annotated[
         str, typer.Option("--hold-out", metavar="ID,…", help="Subjects not to learn from.")
     ] = "",
+    inputs: Annotated[
+        str,
+        typer.Option(
+            "--inputs",
+            metavar="NAME,…",
+            help=f"What may drive the artifact beside flexion: {', '.join(INPUTS)}.",
+        ),
+    ] = "",
     quiet: Quiet = False,
     as_json: Json = False,
 ) -> None:
@@ -101,7 +110,7 @@ def learn(
     screen = Screen(quiet, as_json)
     with warnings_as_notes(screen):
         check_target(out, pairs)
-        prior = learn_prior(read_dataset(pairs, "pairs"), family, _ids(hold_out) or ())
+        prior = learn_prior(read_dataset(pairs, "pairs"), family, _ids(hold_out) or (), _ids(inputs) or ())
         prior.save(out)
     screen.finish(words.prior_summary(prior, out), *words.prior_lines(prior), f"Wrote {out}")
 

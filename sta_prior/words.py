@@ -133,6 +133,8 @@ def prior_lines(prior: Prior, found: xr.Dataset | None = None) -> list[Any]:
         f"learned from {subjects}: {', '.join(prior.subjects)}" if prior.subjects else "learned from nobody"
     )
     lines.append(f"{kind} of family {prior.family}, {learned}")
+    if prior.inputs:
+        lines.append(f"Driven by flexion and by {' and '.join(prior.inputs)}")
     by_activity: dict[str, list[int]] = {}
     for trial in prior.trials:
         by_activity.setdefault(trial.activity, []).append(trial.times.size)
@@ -241,6 +243,7 @@ def prior_summary(prior: Prior, path: Path, found: xr.Dataset | None = None) -> 
         "prior": str(path),
         "digest": prior.digest,
         "family": prior.family,
+        "inputs": list(prior.inputs),
         "personal": prior.is_personal,
         "subjects": list(prior.subjects),
         "left_out": _left_out(data),

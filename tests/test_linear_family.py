@@ -14,7 +14,7 @@ from sta_prior.prior.artifact import GROWTH_LENGTH, FeatureArtifact
 from sta_prior.prior.basis import SMALLEST_POWER, SOFT_EDGE, Basis, Term, orthonormal
 from sta_prior.prior.hierarchy import Weights, new_subject, without_subject
 from sta_prior.prior.interface import IsotropicArtifact
-from sta_prior.prior.linear import flexion_reaches, linear_basis
+from sta_prior.prior.linear import reaches_of, linear_basis
 
 REFERENCE = np.array([[0.1, 0.02, -0.03], [-0.2, 0.01, 0.05]])
 
@@ -152,7 +152,7 @@ def held_artifact(generator: np.random.Generator) -> FeatureArtifact:
     """The linear family as it is learned: flexion of both joints held between −0.5 and 1.5 rad."""
     parts = [np.concatenate([angles_of(generator, 30), np.full((1, 2, 3), -0.5), np.full((1, 2, 3), 1.5)])]
     artifact = artifact_of(generator)
-    reaches = flexion_reaches((0, 1), parts, [REFERENCE])
+    reaches = reaches_of((0, 1), parts, [REFERENCE])
     return replace(artifact, basis=replace(artifact.basis, reaches=reaches))
 
 

@@ -165,6 +165,7 @@ VARIABLES = {
     "angle": (("frame", "joint", "dof"), "rad"),
     "reference": (("subject", "marker", "axis"), "m"),
     "reference_angle": (("subject", "joint", "dof"), "rad"),
+    "reference_rotation": (("subject", "segment", "row", "col"), "1"),
     "clock_lag": (("trial",), "s"),
     "clock_lag_sd": (("trial",), "s"),
     "space_rotation": (("trial", "row", "col"), "1"),

@@ -317,6 +317,11 @@ def _dataset(study: Study, paired: list[_PairedTrial]) -> xr.Dataset:
             spread_over_dof(lab, np.array([reference.angles for reference in references])),
             radian,
         ),
+        "reference_rotation": (
+            ("subject", "segment", "row", "col"),
+            np.array([reference.poses[:, :3, :3] for reference in references]),
+            one,
+        ),
         "clock_lag": (("trial",), np.zeros(len(paired)), second),
         "clock_lag_sd": (("trial",), np.zeros(len(paired)), second),
         "space_rotation": (("trial", "row", "col"), identity, one),
@@ -360,6 +365,7 @@ def _dataset(study: Study, paired: list[_PairedTrial]) -> xr.Dataset:
     data.attrs = {
         "title": lab.title,
         "study": study.path.name,
+        "up": lab.up if lab.up_declared else "",
         "covariates": json.dumps(covariates, sort_keys=True),
     }
     if study.invented:

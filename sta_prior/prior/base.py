@@ -18,11 +18,12 @@ from sta_prior.errors import MismatchError, StaPriorWarning, message
 from sta_prior.pairs.pairing import segment_side
 from sta_prior.prior.augmented import Augmented
 from sta_prior.prior.family import Own, Posture, SegmentModel, restrict
+from sta_prior.prior.inputs import TILT, VELOCITY, input_columns, row_count, tilt
 from sta_prior.prior.interface import Artifact
 from sta_prior.prior.magnitude import magnitude_for, words
 from sta_prior.prior.personal import LearnedTrial, OwnPairs, own_pairs
 from sta_prior.prior.statistics import SegmentFrames, segment_frames
-from sta_prior.study import Lab, Trial
+from sta_prior.study import Lab, Reference, Trial
 
 
 @dataclass(frozen=True)
@@ -41,12 +42,13 @@ class Binding:
     """A prior bound to a trial: an artifact per segment of the lab, and what it rests on.
 
     informed_times: s, instants of this trial whose bone truth informed the weights;
-    basis_of_belief: words.
+    basis_of_belief: words; inputs: what drives the artifacts beside the joint angles.
     """
 
     artifacts: dict[str, Artifact]
     informed_times: FloatArray
     basis_of_belief: str
+    inputs: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True)
@@ -64,6 +66,7 @@ class Prior:
     notes : what a user should know, in words
     invented : learned from invented data
     pairs_digest : content digest of the paired data
+    inputs : optional inputs beside the joint angles
     """
 
     family: str
@@ -75,6 +78,7 @@ class Prior:
     invented: bool = False
     pairs_digest: str = ""
     covariates: Mapping[str, Mapping[str, float]] = field(default_factory=dict)
+    inputs: tuple[str, ...] = ()
 
     @property
     def subjects(self) -> tuple[str, ...]:
@@ -118,6 +122,8 @@ class Prior:
         """
         lab = trial.subject.lab
         joint_columns = self._match_joints(lab)
+        columns = input_columns(self.inputs, joint_columns, len(lab.joints))
+        total = row_count(self.inputs, len(lab.joints))
         own = own_pairs(trial.subject.id, personal, self.trials) if personal is not None else None
         self._warn_of_a_stranger(trial)
         reference = trial.subject.reference()
@@ -128,7 +134,7 @@ class Prior:
             side = segment_side(lab, segment.name)
             positions = reference.markers[lab.marker_segment == index]
             posture = Posture(
-                reference.angles[joint_columns],
+                self._reference_inputs(reference, lab, index, side)[columns],
                 positions * mirror if side == "left" else positions,
                 trial.activity,
             )
@@ -139,12 +145,33 @@ class Prior:
                 for place, marker in enumerate(known)
             ]
             outputs = (np.array(first)[:, None] + np.arange(3)).reshape(-1)
-            bound: Artifact = restrict(inner, outputs, side, joint_columns, len(lab.joints))
+            bound: Artifact = restrict(inner, outputs, side, columns, total)
             if len(known) < len(segment.markers):
-                bound = self._with_strangers(bound, model, segment.markers, posture, side, lab, joint_columns)
+                bound = self._with_strangers(
+                    bound, model, segment.markers, posture, side, lab, columns, total
+                )
             artifacts[segment.name] = bound
         times, belief = self._what_informs(trial, own)
-        return Binding(artifacts, times, belief)
+        return Binding(artifacts, times, belief, self.inputs)
+
+    def _reference_inputs(self, reference: Reference, lab: Lab, segment: int, side: str) -> FloatArray:
+        """All inputs of a segment in the trial's reference posture, (rows, 3) rad."""
+        rows = [reference.angles]
+        if TILT in self.inputs:
+            rotation = reference.poses[segment, :3, :3]
+            if not (lab.up_declared and np.isfinite(rotation).all()):
+                raise MismatchError(
+                    message(
+                        (lab.path, f"segment.{lab.segments[segment].name}"),
+                        f"the prior takes its {TILT}, which needs up = … in the lab file and a reference "
+                        "posture with known bone poses in the lab",
+                        f"Declare up and give a static trial, or learn a prior without {TILT}.",
+                    )
+                )
+            rows.append(tilt(rotation, "xyz".index(lab.up), side)[None])
+        if VELOCITY in self.inputs:
+            rows.append(np.zeros(reference.angles.shape))
+        return np.concatenate(rows)
 
     def _warn_of_a_stranger(self, trial: Trial) -> None:
         """Say so where a personal prior meets another subject."""
@@ -225,7 +252,8 @@ class Prior:
         posture: Posture,
         side: str,
         lab: Lab,
-        joint_columns: list[int],
+        columns: list[int],
+        total: int,
     ) -> Artifact:
         """Give markers that the prior does not know an artifact of published size, and say so."""
         strange = [place for place, marker in enumerate(markers) if marker not in model.markers]
@@ -256,7 +284,7 @@ class Prior:
             stacklevel=4,
         )
         every = np.arange(3 * len(strange))
-        others = restrict(size, every, side, joint_columns, len(lab.joints))
+        others = restrict(size, every, side, columns, total)
         places = np.arange(3 * len(markers)).reshape(-1, 3)
         rest = [place for place in range(len(markers)) if place not in strange]
         return Augmented(bound, others, places[rest].reshape(-1), places[strange].reshape(-1))
@@ -273,7 +301,7 @@ class Prior:
             dof = {joint.name: joint.dof for joint in self.joints}
             frames = [
                 replace(item, trial=own.keys[item.trial])
-                for item in segment_frames(own.data, model.name, model.markers, dof)
+                for item in segment_frames(own.data, model.name, model.markers, dof, self.inputs)
             ]
         # A personal prior's own subject needs no widening for subjects that were not imaged.
         widened = not (self.is_personal and subject in self.subjects)

@@ -76,12 +76,16 @@ class Wave:
 
 @dataclass(frozen=True)
 class Reach:
-    """Range of one joint angle in the training frames, rad; beyond it features stay at its edge."""
+    """Range of one input in the training frames, rad; beyond it features stay at its edge.
+
+    joint, dof: its place; kind: "angle", "tilt" or "angular-velocity".
+    """
 
     joint: int
     dof: int
     low: float
     high: float
+    kind: str = "angle"
 
 
 @dataclass(frozen=True)

@@ -78,7 +78,9 @@ def examine(prior: Prior, pairs: xr.Dataset) -> xr.Dataset:
         markers = model.markers or theirs_here
         # Published sizes take any markers, where they are in these pairs.
         layout = None if model.markers else layout_of(chosen, name, markers)
-        left_out = predict_others(model, segment_frames(chosen, name, markers, dof), layout=layout)
+        left_out = predict_others(
+            model, segment_frames(chosen, name, markers, dof, prior.inputs), layout=layout
+        )
         widths = stored_half_widths(prior, name)
         figures.append(summarise_validation(name, left_out, model.inflation, widths, calibrated=False))
     return xr.concat(figures, dim="segment", join="outer")

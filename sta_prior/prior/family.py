@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sta_prior.checks import FloatArray, IntArray
+from sta_prior.prior.inputs import Driver
 from sta_prior.prior.interface import Artifact, Moments
 from sta_prior.prior.statistics import SegmentFrames, mirror_signs
 
@@ -40,6 +41,7 @@ class SegmentData:
     layout : shape (m, 3), m, mean reference positions, right side
     frames : paired frames by trial, mirrored to the right side
     adjacent : positions of the joints that touch the segment
+    extra : other inputs than the joint angles, for families with takes_inputs
     """
 
     name: str
@@ -47,14 +49,15 @@ class SegmentData:
     layout: FloatArray
     frames: Sequence[SegmentFrames]
     adjacent: tuple[int, ...]
+    extra: tuple[Driver, ...] = ()
 
 
 @dataclass(frozen=True)
 class Posture:
     """Reference of the trial to be solved, right side.
 
-    angles: (joints, 3) rad, in the order of the prior's joints; markers: (m, 3) m, reference positions of
-    the trial's markers; activity: name of the task.
+    angles: (rows, 3) rad, of the prior's joints in its order, then its other inputs; markers: (m, 3) m,
+    reference positions of the trial's markers; activity: name of the task.
     """
 
     angles: FloatArray
@@ -142,7 +145,7 @@ class Restricted:
 
     inner: for the right side, all markers, the prior's joints; outputs: which outputs to keep; signs:
     (kept outputs,) −1 where mirroring turns one round; joints: position of each of the prior's joints
-    among the trial's; total: number of the trial's joints.
+    (and other inputs) among the trial's; total: number of the trial's.
     """
 
     inner: Artifact

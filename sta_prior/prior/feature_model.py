@@ -27,12 +27,16 @@ from sta_prior.prior.hierarchy import (
     trial_posterior,
     without_subject,
 )
-from sta_prior.prior.linear import flexion_reaches, linear_basis
+from sta_prior.prior.inputs import INPUTS, Driver
+from sta_prior.prior.linear import linear_basis, reaches_of
 from sta_prior.prior.other_models import beyond_data
 from sta_prior.prior.reduced_rank import reduced_rank_basis
 from sta_prior.prior.statistics import SegmentFrames, estimate_time_constant, summarise
 
 REFIT = FitSettings(maximum_iterations=10)
+
+
+_KINDS = ("angle", *INPUTS)
 
 
 @dataclass(frozen=True)
@@ -139,7 +143,7 @@ class FeatureModel:
             [w.joint, w.dof, w.centre, w.limit, w.length, w.count, w.kind == "matern-3/2", w.scale]
             for w in basis.waves
         ]
-        reaches = [[r.joint, r.dof, r.low, r.high] for r in basis.reaches]
+        reaches = [[r.joint, r.dof, r.low, r.high, _KINDS.index(r.kind)] for r in basis.reaches]
         return {
             "terms": Variable(
                 ("term", "term_field"),
@@ -147,7 +151,7 @@ class FeatureModel:
             ),
             "mixing": Variable(("term", "term2"), basis.mixing),
             "waves": Variable(("wave", "wave_field"), np.array(waves, dtype=float).reshape(-1, 8)),
-            "reaches": Variable(("reach", "reach_field"), np.array(reaches, dtype=float).reshape(-1, 4)),
+            "reaches": Variable(("reach", "reach_field"), np.array(reaches, dtype=float).reshape(-1, 5)),
             "population_mean": Variable(("feature", "output"), fit.population.mean, "m"),
             "population_covariance": Variable(weights, fit.population.covariance, "m2"),
             "subject_features": Variable(features, fit.subject_features, "m2"),
@@ -174,16 +178,17 @@ class FeatureModel:
 
 @dataclass(frozen=True)
 class FeatureFamily:
-    """A family told by its basis: adjacent joints, training angles and reference angles to a Basis."""
+    """A family told by its basis: adjacent joints, training inputs, reference inputs, drivers to a Basis."""
 
     name: str
-    basis: Callable[[tuple[int, ...], list[FloatArray], list[FloatArray]], Basis]
+    basis: Callable[[tuple[int, ...], list[FloatArray], list[FloatArray], Sequence[Driver]], Basis]
+    takes_inputs: bool = True
 
     def learn(self, data: SegmentData) -> FeatureModel:
         """Learn one segment."""
         angles = [item.angles for item in data.frames]
         references = [item.reference_angles for item in data.frames]
-        basis = orthonormal(self.basis(data.adjacent, angles, references), angles, references)
+        basis = orthonormal(self.basis(data.adjacent, angles, references, data.extra), angles, references)
         constant = estimate_time_constant(list(data.frames), basis)
         trials = tuple(summarise(item, basis) for item in data.frames)
         hierarchy = fit_hierarchy(list(trials), basis.relative_variance, basis.total_relative_variance)
@@ -233,7 +238,8 @@ def read_feature_model(name: str, stored: Mapping[str, Values]) -> FeatureModel:
         for joint, dof, centre, limit, length, count, matern, scale in stored["waves"].tolist()
     )  # fmt: skip
     reaches = tuple(
-        Reach(int(joint), int(dof), low, high) for joint, dof, low, high in stored["reaches"].tolist()
+        Reach(int(joint), int(dof), low, high, _KINDS[int(kind)])
+        for joint, dof, low, high, kind in stored["reaches"].tolist()
     )
     terms = tuple(Term(int(joint), int(dof), int(power)) for joint, dof, power in stored["terms"].tolist())
     return FeatureModel(
@@ -269,9 +275,13 @@ def merged(trials: Sequence[TrialStatistics]) -> list[TrialStatistics]:
 
 
 def _held_linear_basis(
-    adjacent: tuple[int, ...], angles: list[FloatArray], references: list[FloatArray]
+    adjacent: tuple[int, ...],
+    angles: list[FloatArray],
+    references: list[FloatArray],
+    extra: Sequence[Driver],
 ) -> Basis:
-    return replace(linear_basis(adjacent), reaches=flexion_reaches(adjacent, angles, references))
+    reaches = reaches_of(adjacent, angles, references, extra)
+    return replace(linear_basis(adjacent, extra), reaches=reaches)
 
 
 LINEAR = FeatureFamily("linear", _held_linear_basis)

@@ -16,6 +16,7 @@ from sta_prior.io.netcdf import dataset_digest, read_dataset, write_dataset
 from sta_prior.prior.base import JointLabel, Prior
 from sta_prior.prior.families import find_family
 from sta_prior.prior.family import SegmentModel, Values, Variable
+from sta_prior.prior.inputs import check_inputs
 from sta_prior.prior.personal import LearnedTrial
 
 Variables = dict[str, tuple[tuple[str, ...], object, dict[str, str]]]
@@ -63,6 +64,7 @@ def prior_to_dataset(prior: Prior) -> xr.Dataset:
         "notes": json.dumps(list(prior.notes), ensure_ascii=False),
         "covariates": json.dumps({name: dict(values) for name, values in prior.covariates.items()}),
         "pairs_digest": prior.pairs_digest,
+        "inputs": json.dumps(list(prior.inputs)),
     }
     if prior.invented:
         data.attrs["invented_data"] = 1
@@ -135,4 +137,5 @@ def _from_dataset(data: xr.Dataset) -> Prior:
         invented=bool(data.attrs.get("invented_data", 0)),
         pairs_digest=str(data.attrs["pairs_digest"]),
         covariates=json.loads(data.attrs["covariates"]),
+        inputs=check_inputs(json.loads(data.attrs["inputs"])),
     )

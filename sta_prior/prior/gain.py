@@ -61,6 +61,8 @@ def flexion_gains(basis: Basis, weights: Weights, layout: FloatArray) -> list[Ga
     joints = 1 + max((reach.joint for reach in basis.reaches), default=0)
     gains = []
     for reach in basis.reaches:
+        if reach.kind != "angle":
+            continue
         angles = np.zeros((_POINTS, joints, 3))
         # Just inside the range: at its very edge the features are held.
         margin = 1e-6 * (reach.high - reach.low)

@@ -18,7 +18,8 @@ from sta_prior.errors import InputError, message
 from sta_prior.io.netcdf import dataset_digest
 from sta_prior.prior.base import JointLabel, Prior
 from sta_prior.prior.families import DEFAULT_FAMILY, find_family
-from sta_prior.prior.family import SegmentData, SegmentModel
+from sta_prior.prior.family import Family, SegmentData, SegmentModel
+from sta_prior.prior.inputs import check_inputs, extra_drivers
 from sta_prior.prior.personal import LearnedTrial
 from sta_prior.prior.statistics import SegmentFrames, adjacent_joints, segment_frames
 from sta_prior.prior.validate import calibrate_inflation, leave_one_out, summarise_validation
@@ -82,21 +83,25 @@ def layout_of(pairs: xr.Dataset, segment: str, markers: Sequence[str]) -> FloatA
     return mean
 
 
-def _segment_data(pairs: xr.Dataset, segment: str, joints: tuple[JointLabel, ...]) -> SegmentData:
+def _segment_data(
+    pairs: xr.Dataset, segment: str, joints: tuple[JointLabel, ...], inputs: tuple[str, ...] = ()
+) -> SegmentData:
     markers = markers_of(pairs, segment)
     dof = {joint.name: joint.dof for joint in joints}
-    frames = segment_frames(pairs, segment, markers, dof)
+    frames = segment_frames(pairs, segment, markers, dof, inputs)
     if not frames:
         raise InputError(
             message(("pairs", segment), "no frame has both a visible marker and all joint angles")
         )
     _refuse_unseen(segment, markers, frames)
+    adjacent = adjacent_joints(pairs, segment, tuple(dof))
     return SegmentData(
         name=segment,
         markers=markers,
         layout=layout_of(pairs, segment, markers),
         frames=frames,
-        adjacent=adjacent_joints(pairs, segment, tuple(dof)),
+        adjacent=adjacent,
+        extra=extra_drivers(inputs, adjacent, len(joints)),
     )
 
 
@@ -113,7 +118,25 @@ def _refuse_unseen(segment: str, markers: tuple[str, ...], frames: list[SegmentF
             )
 
 
-def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[str] = ()) -> Prior:
+def _check_inputs(names: Sequence[str], family: str, chosen: Family) -> tuple[str, ...]:
+    inputs = check_inputs(names)
+    if inputs and not getattr(chosen, "takes_inputs", False):
+        raise InputError(
+            message(
+                "--inputs",
+                f"family {family} is driven by the joint angles only, got {', '.join(inputs)}",
+                "Leave --inputs out, or take another family.",
+            )
+        )
+    return inputs
+
+
+def learn(
+    pairs: xr.Dataset,
+    family: str = DEFAULT_FAMILY,
+    hold_out: Sequence[str] = (),
+    inputs: Sequence[str] = (),
+) -> Prior:
     """Learn an artifact prior and validate it on subjects left out.
 
     Parameters
@@ -121,6 +144,8 @@ def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[st
     pairs : paired data, as from `pair`
     family : "reduced-rank-gp", "linear", "exact-gp", "magnitude", or the name of a plug-in
     hold_out : subjects that must not be learned from
+    inputs : what may drive the artifact beside flexion: "tilt" of the segment against gravity,
+        "angular-velocity" of the adjacent joints
 
     Returns
     -------
@@ -128,9 +153,11 @@ def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[st
 
     Raises
     ------
-    InputError : unknown family or subject, or no usable frame.
+    InputError : unknown family, subject or input, or no usable frame.
+    MismatchError : the pairs lack what an input needs.
     """
     chosen_family = find_family(family)
+    known_inputs = _check_inputs(inputs, family, chosen_family)
     chosen = _without(pairs, hold_out) if hold_out else pairs
     joints = joint_labels(chosen)
     if not joints:
@@ -138,7 +165,7 @@ def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[st
     segments: dict[str, SegmentModel] = {}
     figures, used = [], set()
     for name in (str(segment) for segment in chosen["segment"].values):
-        data = _segment_data(chosen, name, joints)
+        data = _segment_data(chosen, name, joints, known_inputs)
         model = chosen_family.learn(data)
         left_out = leave_one_out(model, data.frames, data.adjacent)
         segments[name] = model.with_inflation(calibrate_inflation(left_out))
@@ -169,6 +196,7 @@ def learn(pairs: xr.Dataset, family: str = DEFAULT_FAMILY, hold_out: Sequence[st
             [xr.concat(figures, dim="segment", join="outer"), frames_by_angle(chosen, joints)]
         ),
         notes=_notes(trials),
+        inputs=known_inputs,
         invented=bool(chosen.attrs.get("invented_data", 0)),
         pairs_digest=dataset_digest(pairs),
         covariates={

@@ -15,14 +15,17 @@ Riutort-Mayol et al. (2023), Stat Comput, doi 10.1007/s11222-022-10167-2 (how ma
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
+from dataclasses import replace
 
 import numpy as np
 
 from sta_prior.checks import FloatArray
-from sta_prior.prior.basis import Basis, Reach, Term, Wave
+from sta_prior.prior.basis import Basis, Wave
 from sta_prior.prior.hilbert import boundary_factor
+from sta_prior.prior.inputs import Driver
+from sta_prior.prior.linear import drivers, linear_basis, reaches_of
 
-FLEXION = 0
 LENGTH = 0.5
 """Length scale of the deviations, rad: about 30° of flexion."""
 
@@ -34,28 +37,28 @@ def reduced_rank_basis(
     adjacent_joints: tuple[int, ...],
     angles: list[FloatArray],
     references: list[FloatArray],
+    extra: Sequence[Driver] = (),
     length: float = LENGTH,
 ) -> Basis:
-    """Trend and waves in the flexion of every adjacent joint, held at the edge of the training data.
+    """Trend and waves in every input, flexion first, held at the edge of the training data.
 
     Parameters
     ----------
     adjacent_joints : positions of the joints that touch the segment
     angles : of each training trial, shape (frames, joints, 3), rad
     references : of each training trial, shape (joints, 3), rad
+    extra : other inputs
     length : length scale of the deviations, rad
     """
-    terms = tuple(Term(joint, FLEXION, power) for joint in adjacent_joints for power in (1, 2))
-    waves, reaches = [], []
-    for joint in adjacent_joints:
-        seen = np.concatenate(
-            [*(q[:, joint, FLEXION] for q in angles), [q[joint, FLEXION] for q in references]]
-        )
-        low, high = float(seen.min()), float(seen.max())
+    plain = linear_basis(adjacent_joints, extra)
+    reaches, waves = reaches_of(adjacent_joints, angles, references, extra), []
+    for at, reach in zip(drivers(adjacent_joints, extra), reaches, strict=True):
+        if not at.wave:
+            continue
+        low, high = reach.low, reach.high
         half = max(0.5 * (high - low), SMALLEST_HALF_RANGE)
         limit = half * boundary_factor(half, length, "squared-exponential")
         # Riutort-Mayol et al.: m = 1.75 c S/ℓ functions (from memory) for a squared exponential.
         count = int(np.clip(math.ceil(1.75 * limit / length), FEWEST, MOST))
-        waves.append(Wave(joint, FLEXION, 0.5 * (low + high), limit, length, count))
-        reaches.append(Reach(joint, FLEXION, low, high))
-    return Basis(terms, np.eye(len(terms)), tuple(waves), tuple(reaches))
+        waves.append(Wave(at.row, at.column, 0.5 * (low + high), limit, length, count))
+    return replace(plain, waves=tuple(waves), reaches=reaches)

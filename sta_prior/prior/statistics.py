@@ -15,24 +15,24 @@ import xarray as xr
 
 from sta_prior.checks import BoolArray, FloatArray
 from sta_prior.errors import MismatchError, message
+from sta_prior.pairs.pairing import AXES
 from sta_prior.prior.basis import Basis
 from sta_prior.prior.hierarchy import TrialStatistics, frame_weights, make_block
+from sta_prior.prior.inputs import TILT, VELOCITY, angle_changes, tilt, windows
 from sta_prior.rigid import marker_jacobian
 
 LONGEST_TIME_CONSTANT = 0.1
 """Cap of the residual's decay time, s: a single fitted exponential otherwise runs to the longest
 constant allowed and soaks up what the basis does not fit."""
 
-GAP = 1.5
-"""A time step this many times the usual one ends a window."""
-
 
 @dataclass(frozen=True)
 class SegmentFrames:
     """Frames of one segment in one trial, mirrored to the right side.
 
-    subject, trial: identifiers; angles: (F, J, 3) rad; reference_angles: (J, 3) rad; displacement:
-    (F, n) m, NaN hidden; noise: (F, n, n) m², bone truth projected on the outputs; time: (F,) s.
+    subject, trial: identifiers; angles: (F, R, 3) rad, of the joints and below them other inputs
+    (prior/inputs.py); reference_angles: (R, 3) rad, the same in the reference posture; displacement: (F, n)
+    m, NaN hidden; noise: (F, n, n) m², bone truth projected on the outputs; time: (F,) s.
     """
 
     subject: str
@@ -52,15 +52,6 @@ class SegmentFrames:
     def step(self) -> float:
         """Usual time step, s."""
         return float(np.median(np.diff(self.time))) if self.time.size > 1 else LONGEST_TIME_CONSTANT
-
-
-def windows(time: FloatArray) -> FloatArray:
-    """Index of the unbroken window each instant lies in, shape (F,)."""
-    if time.size < 2:
-        return np.zeros(time.size)
-    steps = np.diff(time)
-    broken = np.concatenate([[0], (steps > GAP * np.median(steps)).astype(int)])
-    return np.cumsum(broken).astype(np.float64)
 
 
 def mirror_signs(markers: int) -> FloatArray:
@@ -122,7 +113,11 @@ def adjacent_joints(pairs: xr.Dataset, segment: str, joints: tuple[str, ...]) ->
 
 
 def segment_frames(
-    pairs: xr.Dataset, segment: str, markers: tuple[str, ...], dof: dict[str, tuple[str, ...]]
+    pairs: xr.Dataset,
+    segment: str,
+    markers: tuple[str, ...],
+    dof: dict[str, tuple[str, ...]],
+    inputs: tuple[str, ...] = (),
 ) -> list[SegmentFrames]:
     """Split paired data of a segment by trial.
 
@@ -132,10 +127,15 @@ def segment_frames(
     segment : its name
     markers : the outputs' markers in order; a marker that the pairs lack is hidden throughout
     dof : names of the three degrees of freedom of every joint; their order is that of the angles
+    inputs : optional inputs beside the angles, from INPUTS
 
     Returns
     -------
     One item for each trial with usable frames, these in order of time; none where the pairs lack the segment.
+
+    Raises
+    ------
+    MismatchError : the pairs lack a joint or what an input needs.
     """
     labels = [str(marker) for marker in pairs["marker"].values]
     columns = np.array([labels.index(marker) if marker in labels else -1 for marker in markers])
@@ -147,6 +147,7 @@ def segment_frames(
     if segment not in names:
         return []
     sides = [str(side) for side in pairs["segment_side"].values[:, names.index(segment)]]
+    gravity = _gravity(pairs, names.index(segment)) if TILT in inputs else None
     frame_subject, frame_trial = pairs["subject"].values, pairs["trial"].values
     frame_time = pairs["time"].values
     result = []
@@ -159,8 +160,16 @@ def segment_frames(
         displacement = pairs["displacement"].values[own][:, columns].copy()
         displacement[:, columns < 0] = np.nan
         # A displacement without the angles that drive it cannot be placed and is dropped.
-        both = angles[own] + references[at]
-        known = np.isfinite(both[:, list(touching)]).all(axis=(1, 2))
+        driving, reference = [angles[own]], [references[at]]
+        known = np.isfinite((angles[own] + references[at])[:, list(touching)]).all(axis=(1, 2))
+        if gravity is not None:
+            driving.append(tilt(gravity.rotation[own], gravity.up, sides[at])[:, None])
+            reference.append(tilt(gravity.reference[at], gravity.up, sides[at])[None])
+            known &= np.isfinite(driving[-1] + reference[-1]).all(axis=(1, 2))
+        if VELOCITY in inputs:
+            driving.append(angle_changes(frame_time[own], angles[own]))
+            reference.append(np.zeros(references[at].shape))
+            known &= np.isfinite(driving[-1][:, list(touching)]).all(axis=(1, 2))
         usable = known & np.isfinite(displacement).any(axis=(1, 2))
         position = displacement + pairs["reference"].values[at][columns]
         if sides[at] == "left":
@@ -177,14 +186,46 @@ def segment_frames(
                 SegmentFrames(
                     subject=subject,
                     trial=trial,
-                    angles=angles[own][usable],
-                    reference_angles=references[at],
+                    angles=np.concatenate(driving, axis=1)[usable],
+                    reference_angles=np.concatenate(reference),
                     displacement=displacement.reshape(int(usable.sum()), -1),
                     noise=noise,
                     time=frame_time[own][usable],
                 )
             )
     return result
+
+
+@dataclass(frozen=True)
+class _Gravity:
+    """Rotations lab ← bone, (F, 3, 3), and at every subject's reference; the lab axis that points up."""
+
+    rotation: FloatArray
+    reference: FloatArray
+    up: int
+
+
+def _gravity(pairs: xr.Dataset, segment: int) -> _Gravity:
+    """What the tilt of a segment is told from.
+
+    Raises
+    ------
+    MismatchError : the pairs do not say which way is up or how the bone lay in the reference posture.
+    """
+    name = str(pairs["segment"].values[segment])
+    known = "reference_rotation" in pairs and str(pairs.attrs.get("up", "")) in AXES
+    if known:
+        reference = pairs["reference_rotation"].values[:, segment]
+        known = bool(np.isfinite(reference).all())
+    if not known:
+        raise MismatchError(
+            message(
+                ("pairs", f"segment {name}"),
+                f"input {TILT} needs the pose of every subject's reference posture in the lab",
+                f"Pair again, from static trials, or learn without {TILT}.",
+            )
+        )
+    return _Gravity(pairs["bone_rotation"].values[:, segment], reference, AXES.index(str(pairs.attrs["up"])))
 
 
 def patterns(seen: BoolArray) -> BoolArray:

@@ -17,6 +17,8 @@ Lu & O'Connor (1999), J Biomech 32, 129–134 (poses of linked segments by least
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 
 from sta_prior import se3
@@ -156,7 +158,8 @@ def _relaxation(made: FloatArray, change: FloatArray) -> FloatArray:
 
 
 def _take(segment: SegmentProblem, frames: IntArray) -> SegmentProblem:
-    return SegmentProblem(segment.index, segment.points[frames], segment.reference, segment.artifact)
+    changes = None if segment.changes is None else segment.changes[frames]
+    return replace(segment, points=segment.points[frames], changes=changes)
 
 
 def solve_frames(

@@ -10,12 +10,14 @@ T ← T·Exp(ξ); a Jacobian's last axis is the 6·S pose unknowns in segment or
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 
 from sta_prior.angles import JointConvention, joint_angle_pose_jacobians
 from sta_prior.checks import BoolArray, FloatArray
 from sta_prior.gaussian import symmetrise
+from sta_prior.prior.inputs import tilt, tilt_jacobian
 from sta_prior.prior.interface import Artifact
 from sta_prior.rigid import marker_jacobian
 from sta_prior.se3 import inverse, skew, transform_points
@@ -27,18 +29,28 @@ ANCHOR = 1e-2
 """Precision (SD 10 rad, 10 m) that gives the normal matrix of an undetermined frame an inverse."""
 
 
+class Gravity(NamedTuple):
+    """What a tilt is told from: the lab axis that points up, 0 … 2, and the side of the body."""
+
+    up: int
+    side: str
+
+
 @dataclass(frozen=True)
 class SegmentProblem:
     """One segment of a trial: its position in the tree, markers and artifact.
 
     index: position among the segments; points: (F, m, 3) m, lab, NaN hidden; reference: (m, 3) m,
-    bone frame; artifact: prior bound to this trial, 3m outputs.
+    bone frame; artifact: prior bound to this trial, 3m outputs; gravity: where the prior takes the segment's
+    tilt; changes: (F, J, 3) rad, of the joint angles in CHANGE_TIME, where it takes these.
     """
 
     index: int
     points: FloatArray
     reference: FloatArray
     artifact: Artifact
+    gravity: Gravity | None = None
+    changes: FloatArray | None = None
 
 
 @dataclass(frozen=True)
@@ -110,6 +122,29 @@ def angles_and_jacobians(joints: list[JointProblem], poses: FloatArray) -> tuple
     return angles, jacobian
 
 
+def drive(
+    segment: SegmentProblem, poses: FloatArray, angles: FloatArray, angle_jacobian: FloatArray
+) -> tuple[FloatArray, FloatArray]:
+    """All inputs of a segment's artifact, (F, rows, 3) rad, and their derivative in all poses.
+
+    Changes of the angles are taken as they are: their derivative would reach into other frames.
+    """
+    rows, slopes = [angles], [angle_jacobian]
+    if segment.gravity is not None:
+        rotation = poses[:, segment.index, :3, :3]
+        slope = np.zeros((poses.shape[0], 1, 3, angle_jacobian.shape[-1]))
+        first = 6 * segment.index
+        slope[:, 0, :, first : first + 3] = tilt_jacobian(rotation, *segment.gravity)
+        rows.append(tilt(rotation, *segment.gravity)[:, None])
+        slopes.append(slope)
+    if segment.changes is not None:
+        rows.append(segment.changes)
+        slopes.append(np.zeros(angle_jacobian.shape))
+    if len(rows) == 1:
+        return angles, angle_jacobian
+    return np.concatenate(rows, axis=1), np.concatenate(slopes, axis=1)
+
+
 def marker_term(
     segment: SegmentProblem,
     poses: FloatArray,
@@ -136,6 +171,7 @@ def marker_term(
     information it would count the artifact's own size as width of the cluster: markers on a line
     would seem to fix the rotation about it. The expected information has them at a + μ.
     """
+    angles, angle_jacobian = drive(segment, poses, angles, angle_jacobian)
     moments = segment.artifact.moments(angles)
     pose = poses[:, segment.index]
     frames, markers = segment.points.shape[:2]

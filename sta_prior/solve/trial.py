@@ -18,14 +18,15 @@ from sta_prior.angles import GIMBAL_WARNING, gimbal_margin
 from sta_prior.checks import FloatArray, nearest
 from sta_prior.errors import InputError, StaPriorWarning, message
 from sta_prior.pairs.belonging import DISTANCE_LIMIT, distance_misfit
-from sta_prior.pairs.pairing import AXES, angles_of_poses, dof_names, spread_over_dof
+from sta_prior.pairs.pairing import AXES, angles_of_poses, dof_names, segment_side, spread_over_dof
 from sta_prior.prior.base import Binding, Prior
+from sta_prior.prior.inputs import TILT, VELOCITY, angle_changes
 from sta_prior.prior.interface import IsotropicArtifact
 from sta_prior.rigid import RigidFit
 from sta_prior.solve.frame import bridge, first_look, solve_frames
 from sta_prior.solve.observability import describe_observability
 from sta_prior.solve.posterior import SOURCES, FrameSolution
-from sta_prior.solve.terms import JointProblem, SegmentProblem
+from sta_prior.solve.terms import Gravity, JointProblem, SegmentProblem
 from sta_prior.study import Reference, Trial
 
 Estimator = Literal["rigid", "linked", "frame-map"]
@@ -98,7 +99,10 @@ def solve(
     else:
         if estimator == "linked":
             segments = [_with_scatter(segment, fit) for segment, fit in zip(segments, fits, strict=True)]
-        result = solve_frames(segments, joints, bridge(rigid_poses, joints))
+        start = bridge(rigid_poses, joints)
+        if binding is not None and binding.inputs:
+            segments = _with_inputs(segments, trial, binding, start, skin["time"].values)
+        result = solve_frames(segments, joints, start)
     data = _dataset(trial, skin, result, rigid_poses, estimator)
     _mark_informed(data, binding)
     data.attrs.update(
@@ -138,6 +142,24 @@ def _segments(
         )
         problems.append(SegmentProblem(index, points[:, own], reference.markers[own], artifact))
     return problems
+
+
+def _with_inputs(
+    segments: list[SegmentProblem], trial: Trial, binding: Binding, start: FloatArray, instants: FloatArray
+) -> list[SegmentProblem]:
+    """The segments with what their prior takes beside the joint angles; changes are those of a first look."""
+    lab = trial.subject.lab
+    if TILT in binding.inputs:
+        up = "xyz".index(lab.up)
+        names = [segment.name for segment in lab.segments]
+        segments = [
+            replace(segment, gravity=Gravity(up, segment_side(lab, names[segment.index])))
+            for segment in segments
+        ]
+    if VELOCITY in binding.inputs:
+        changes = angle_changes(instants, angles_of_poses(lab, start))
+        segments = [replace(segment, changes=np.nan_to_num(changes)) for segment in segments]
+    return segments
 
 
 def _joints(trial: Trial, reference: Reference) -> list[JointProblem]:

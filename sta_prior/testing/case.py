@@ -16,6 +16,7 @@ from sta_prior.checks import FloatArray
 from sta_prior.errors import StaPriorWarning, message
 from sta_prior.prior.base import Prior
 from sta_prior.prior.family import Posture, SegmentModel
+from sta_prior.prior.inputs import row_count
 from sta_prior.prior.interface import Artifact
 from sta_prior.prior.statistics import gather_angles
 from sta_prior.testing.example import Setting, example_trial, setting_of
@@ -97,14 +98,18 @@ def make_case(prior: Prior, pairs: xr.Dataset | None) -> Case:
         known, references = (gather_angles(pairs, name, dof) for name in ("angle", "reference_angle"))
         known = known[np.isfinite(known).all(axis=(1, 2))]
         references = references[np.isfinite(references).all(axis=(1, 2))]
+    # Other inputs than the angles stay near those of the reference posture.
+    extra = row_count(prior.inputs, count) - count
+    known = np.concatenate([known, generator.uniform(-0.01, 0.01, (known.shape[0], extra, 3))], axis=1)
+    references = np.concatenate([references, np.zeros((references.shape[0], extra, 3))], axis=1)
     reference = references.mean(axis=0)
     inside = known[generator.permutation(known.shape[0])[:FRAMES]]
     beyond = inside[: FRAMES // 2].copy()
-    both = np.concatenate([known, references])[..., 0]
+    both = np.concatenate([known, references])[:, :count, 0]
     low, high = both.min(axis=0), both.max(axis=0)
-    away = generator.uniform(0.15, 0.6, beyond.shape[:2])
+    away = generator.uniform(0.15, 0.6, (beyond.shape[0], count))
     order = np.arange(beyond.shape[0])
-    beyond[..., 0] = np.where(order[:, None] % 2, high + away, low - away)
+    beyond[:, :count, 0] = np.where(order[:, None] % 2, high + away, low - away)
     # In every other pair of frames the first joint alone is beyond.
     beyond[order % 4 > 1, 1:] = inside[: beyond.shape[0]][order % 4 > 1, 1:]
     outward = np.tile(np.median(known, axis=0), (2 * count, STEPS, 1, 1))
