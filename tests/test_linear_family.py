@@ -14,7 +14,7 @@ from sta_prior.prior.artifact import GROWTH_LENGTH, FeatureArtifact
 from sta_prior.prior.basis import SMALLEST_POWER, SOFT_EDGE, Basis, Term, orthonormal
 from sta_prior.prior.hierarchy import Weights, new_subject, without_subject
 from sta_prior.prior.interface import IsotropicArtifact
-from sta_prior.prior.linear import reaches_of, linear_basis
+from sta_prior.prior.linear import linear_basis, reaches_of
 
 REFERENCE = np.array([[0.1, 0.02, -0.03], [-0.2, 0.01, 0.05]])
 

@@ -173,7 +173,7 @@ def angle_changes(time: FloatArray, angles: FloatArray) -> FloatArray:
     Savitzky & Golay (1964), Anal Chem 36, 1627–1639 (derivative of a moving parabola; from memory). Never
     across a gap.
     """
-    flat = np.unwrap(angles.reshape(time.size, -1), axis=0)
+    flat = angles.reshape(time.size, -1)
     result = np.full(flat.shape, np.nan)
     whole = np.isfinite(flat).all(axis=1)
     stretch = windows(time) + np.concatenate([[0], np.cumsum(np.diff(whole.astype(int)) != 0)])
@@ -181,11 +181,11 @@ def angle_changes(time: FloatArray, angles: FloatArray) -> FloatArray:
         own = np.flatnonzero(whole & (stretch == part))
         if own.size < 2:
             continue
-        step = float(np.diff(time[own]).mean())
+        unbroken, step = np.unwrap(flat[own], axis=0), float(np.diff(time[own]).mean())
         length = 2 * round(0.5 * SMOOTHING / step) + 1
         if 3 <= length <= own.size:
-            slope = savgol_filter(flat[own], length, 2, deriv=1, delta=step, axis=0)
+            slope = savgol_filter(unbroken, length, 2, deriv=1, delta=step, axis=0)
         else:
-            slope = np.gradient(flat[own], step, axis=0)
+            slope = np.gradient(unbroken, step, axis=0)
         result[own] = CHANGE_TIME * slope
     return result.reshape(angles.shape)

@@ -11,6 +11,7 @@ import numpy as np
 
 from sta_prior.checks import IntArray
 from sta_prior.prior.base import JointLabel
+from sta_prior.prior.inputs import input_columns, row_count
 from sta_prior.prior.statistics import mirror_signs
 from sta_prior.testing.case import Case, differ
 from sta_prior.testing.example import Setting
@@ -19,8 +20,9 @@ from sta_prior.testing.example import Setting
 def _compare(case: Case, setting: Setting, keep: dict[str, IntArray], signs: bool, words: str) -> None:
     """Moments in another setting against those of the plain one, outputs kept and turned round."""
     names = [label.name for label in setting.joints]
-    order = [names.index(label.name) for label in case.prior.joints]
-    angles = np.zeros((case.angles.shape[0], len(names), 3))
+    own_joints = [names.index(label.name) for label in case.prior.joints]
+    order = input_columns(case.prior.inputs, own_joints, len(names))
+    angles = np.zeros((case.angles.shape[0], row_count(case.prior.inputs, len(names)), 3))
     angles[:, order] = case.angles
     plain = case.artifacts(case.setting)
     for segment, artifact in case.artifacts(setting).items():
@@ -28,7 +30,7 @@ def _compare(case: Case, setting: Setting, keep: dict[str, IntArray], signs: boo
         if signs:
             turn = mirror_signs(own.size // 3)
         got, whole = artifact.moments(angles), plain[segment].moments(case.angles)
-        derivative = np.zeros((angles.shape[0], own.size, len(names), 3))
+        derivative = np.zeros((angles.shape[0], own.size, *angles.shape[1:]))
         derivative[:, :, order] = whole.mean_derivative[:, own] * turn[:, None, None]
         k = whole.features.shape[1]
         constant = (plain[segment].residual.shape[0] * np.arange(k)[:, None] + own).reshape(-1)
@@ -92,7 +94,7 @@ def check_joints(case: Case) -> bool:
     setting = replace(
         case.setting,
         joints=(other, *case.prior.joints[::-1]),
-        angles=np.concatenate([np.full((1, 3), 0.7), case.reference[::-1]]),
+        angles=np.concatenate([np.full((1, 3), 0.7), case.setting.angles[::-1]]),
     )
     keep = {name: _outputs(list(range(len(own)))) for name, own in case.setting.segments.items()}
     _compare(case, setting, keep, False, "changes with the order of the trial's joints")

@@ -39,7 +39,7 @@ class Case:
 
     pairs: what it learned from, or None; inside, beyond: (F, joints, 3) rad, within the range of the
     pairs and outside it; outward: (paths, STEPS, joints, 3) rad, away from the edge of the data one joint at
-    a time, none where the edge is not known; reference: (joints, 3) rad.
+    a time, none where the edge is not known; reference: (joints, 3) rad. Other inputs stand below the joints.
     """
 
     prior: Prior
@@ -57,7 +57,7 @@ class Case:
     @cached_property
     def setting(self) -> Setting:
         """All markers and joints of the prior, right side."""
-        return setting_of(self.prior, self.reference)
+        return setting_of(self.prior, self.reference[: len(self.prior.joints)])
 
     @property
     def learned_subjects(self) -> list[str]:

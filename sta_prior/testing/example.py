@@ -255,7 +255,7 @@ def example_trial(setting: Setting) -> Trial:
         markers=np.concatenate(positions),
         joint_centres=np.full((len(joints), 2, 3), np.nan),
         angles=setting.angles,
-        poses=np.full((len(segments), 4, 4), np.nan),
+        poses=np.broadcast_to(np.eye(4), (len(segments), 4, 4)),
         marker_sd=np.full(len(lab.markers), np.nan),
         kind="points",
         notes=(),
