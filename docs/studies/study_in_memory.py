@@ -15,16 +15,18 @@ import xarray as xr
 from sta_prior.angles import JointConvention, joint_angles
 from sta_prior.checks import FloatArray
 from sta_prior.prior.family import Posture, SegmentModel
+from sta_prior.prior.inputs import TILT, VELOCITY, angle_changes, tilt
 from sta_prior.prior.interface import Artifact
 from sta_prior.se3 import inverse, transform_points
 from sta_prior.simulate import MARKERS, SEGMENTS, TASKS, Population, simulate_population
 from sta_prior.simulate.subject import MARKER_COUNTS, SimulatedSubject, SimulatedTrial, simulate_subject
 from sta_prior.solve.frame import bridge, first_look, solve_frames
 from sta_prior.solve.posterior import FrameSolution
-from sta_prior.solve.terms import JointProblem, SegmentProblem
+from sta_prior.solve.terms import Gravity, JointProblem, SegmentProblem
 
 KNEE = JointConvention("knee", "right")
 TRAVEL_SD = 0.005
+UP = 1
 SPLIT = MARKER_COUNTS[0]
 EACH_TASK_TWICE = tuple((task, repetition) for repetition in (1, 2) for task in TASKS)
 
@@ -104,6 +106,16 @@ def pairs_of(subjects: Sequence[SimulatedSubject], population: Population) -> xr
                 np.array([[subject.style.reference_angles] for subject in subjects]),
                 {"units": "rad"},
             ),
+            "bone_rotation": (
+                ("frame", "segment", "row", "col"),
+                np.concatenate([trial.imaged_pose[mask][..., :3, :3] for _, trial, mask in kept]),
+                {"units": "1"},
+            ),
+            "reference_rotation": (
+                ("subject", "segment", "row", "col"),
+                np.array([subject.reference_pose[..., :3, :3] for subject in subjects]),
+                {"units": "1"},
+            ),
             "bone_sd_position": (("trial",), np.full(count, settings.bone_sd_position), {"units": "m"}),
             "bone_sd_rotation": (("trial",), np.full(count, settings.bone_sd_rotation), {"units": "rad"}),
         },
@@ -128,20 +140,29 @@ def pairs_of(subjects: Sequence[SimulatedSubject], population: Population) -> xr
             "trial_activity": ("trial", [trial.activity for _, trial, _ in kept]),
             "trial_digest": ("trial", [f"{a}/{b}" for a, b in zip(*names, strict=True)]),
         },
-        attrs={"invented_data": 1},
+        attrs={"invented_data": 1, "up": "xyz"[UP]},
     )
 
 
 def artifacts_for(
-    models: Mapping[str, SegmentModel], subject: SimulatedSubject, inflation: float | None = None
+    models: Mapping[str, SegmentModel],
+    subject: SimulatedSubject,
+    inflation: float | None = None,
+    inputs: Sequence[str] = (),
 ) -> list[Artifact]:
     """Artifact of thigh and shank of a subject never imaged; the models' own inflation by default."""
     reference = reference_markers(subject)
-    own = reference[:SPLIT], reference[SPLIT:]
-    return [
-        models[name].for_new_subject(Posture(subject.style.reference_angles[None], markers), inflation)
-        for name, markers in zip(SEGMENTS, own, strict=True)
-    ]
+    artifacts: list[Artifact] = []
+    for index, (name, markers) in enumerate(
+        zip(SEGMENTS, (reference[:SPLIT], reference[SPLIT:]), strict=True)
+    ):
+        rows = [subject.style.reference_angles]
+        if TILT in inputs:
+            rows.append(tilt(subject.reference_pose[index, :3, :3], UP, "right"))
+        if VELOCITY in inputs:
+            rows.append(np.zeros(3))
+        artifacts.append(models[name].for_new_subject(Posture(np.array(rows), markers), inflation))
+    return artifacts
 
 
 def solve_trial(
@@ -150,14 +171,21 @@ def solve_trial(
     trial: SimulatedTrial,
     frames: slice,
     travel_sd: float = TRAVEL_SD,
+    inputs: Sequence[str] = (),
 ) -> FrameSolution:
     """Solve some frames of a skin trial with the estimator frame-map."""
     reference = reference_markers(subject)
-    points = trial.points[frames]
+    points = trial.points
     segments = [
         SegmentProblem(0, points[:, :SPLIT], reference[:SPLIT], artifacts[0]),
         SegmentProblem(1, points[:, SPLIT:], reference[SPLIT:], artifacts[1]),
     ]
     proximal, distal = subject.body.centres
     joints = [JointProblem(0, 1, KNEE, proximal, distal, travel_sd)]
-    return solve_frames(segments, joints, bridge(first_look(segments, 2)[0], joints))
+    start = bridge(first_look(segments, 2)[0], joints)
+    changes = angle_changes(trial.time, knee_angles(start)[:, None])[frames] if VELOCITY in inputs else None
+    gravity = Gravity(UP, "right") if TILT in inputs else None
+    segments = [
+        replace(item, points=item.points[frames], gravity=gravity, changes=changes) for item in segments
+    ]
+    return solve_frames(segments, joints, start[frames])
