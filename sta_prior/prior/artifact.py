@@ -12,7 +12,7 @@ import numpy as np
 from sta_prior.checks import FloatArray
 from sta_prior.prior.basis import Basis
 from sta_prior.prior.hierarchy import Weights
-from sta_prior.prior.interface import Moments
+from sta_prior.prior.interface import Design, Moments
 
 GROWTH_LENGTH = 0.25
 """Angle beyond the training data over which the spread grows by the magnitude prior's, rad: about 14°.
@@ -41,6 +41,25 @@ class FeatureArtifact:
         """Covariance of the trial-constant unknowns, shape (K·n, K·n), m²."""
         return self.weights.covariance
 
+    def _growth(self, angles: FloatArray) -> FloatArray | None:
+        """What the covariance gains beyond the training data, (F, n, n) m²; None where nothing."""
+        excess = self.basis.excess(angles)
+        if not (excess > 0.0).any():
+            return None
+        growth = 1.0 - np.exp(-0.5 * (excess / GROWTH_LENGTH) ** 2)
+        return np.asarray(growth[:, None, None] * self.magnitude)
+
+    def design(self, angles: FloatArray) -> Design:
+        """Mean, features and their derivatives at the angles, shape (frames, joints, 3) rad."""
+        features, slopes = self.basis.values(angles, self.reference), self.basis.derivatives(angles)
+        return Design(
+            mean=features @ self.weights.mean,
+            mean_derivative=np.einsum("fkjd,kn->fnjd", slopes, self.weights.mean, optimize=True),
+            features=features,
+            feature_derivative=slopes,
+            growth=self._growth(angles),
+        )
+
     def moments(self, angles: FloatArray) -> Moments:
         """Mean, its derivative and covariance at the angles, shape (frames, joints, 3) rad."""
         features = self.basis.values(angles, self.reference)
@@ -52,10 +71,9 @@ class FeatureArtifact:
         folded = spread[first, second] + np.where((first < second)[:, None, None], spread[second, first], 0.0)
         products = features[:, first] * features[:, second]
         covariance = (products @ folded.reshape(first.size, n * n)).reshape(-1, n, n) + self.residual
-        excess = self.basis.excess(angles)
-        if (excess > 0.0).any():
-            growth = 1.0 - np.exp(-0.5 * (excess / GROWTH_LENGTH) ** 2)
-            covariance = covariance + growth[:, None, None] * self.magnitude
+        growth = self._growth(angles)
+        if growth is not None:
+            covariance = covariance + growth
         derivative = np.einsum("fkjd,kn->fnjd", self.basis.derivatives(angles), self.weights.mean)
         return Moments(
             mean=features @ self.weights.mean,

@@ -10,7 +10,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from sta_prior.checks import FloatArray, IntArray
-from sta_prior.prior.interface import Artifact, Moments
+from sta_prior.prior.interface import Artifact, Design, Moments, design_of
 
 
 @dataclass(frozen=True)
@@ -62,6 +62,30 @@ class Augmented:
         first = blocks[0].shape[0]
         result[:first, :first], result[first:, first:] = blocks
         return result
+
+    def design(self, angles: FloatArray) -> Design:
+        """Design at joint angles of shape (F, joints, 3), rad."""
+        known, others = design_of(self.known, angles), design_of(self.others, angles)
+        frames, joints, _ = angles.shape
+        mean = np.zeros((frames, self._n))
+        derivative = np.zeros((frames, self._n, joints, 3))
+        for at, part in ((self.at_known, known), (self.at_others, others)):
+            mean[:, at] = part.mean
+            derivative[:, at] = part.mean_derivative
+        growth = None
+        if known.growth is not None or others.growth is not None:
+            nothing = [np.zeros((frames, at.size, at.size)) for at in (self.at_known, self.at_others)]
+            parts = (known.growth, others.growth)
+            growth = self._joined(
+                *(zero if part is None else part for part, zero in zip(parts, nothing, strict=True))
+            )
+        return Design(
+            mean=mean,
+            mean_derivative=derivative,
+            features=np.concatenate([known.features, others.features], axis=1),
+            feature_derivative=np.concatenate([known.feature_derivative, others.feature_derivative], axis=1),
+            growth=growth,
+        )
 
     def moments(self, angles: FloatArray) -> Moments:
         """Moments at joint angles of shape (F, joints, 3), rad."""

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from sta_prior.checks import FloatArray, IntArray
 from sta_prior.prior.inputs import Driver
-from sta_prior.prior.interface import Artifact, Moments
+from sta_prior.prior.interface import Artifact, Design, Moments, design_of
 from sta_prior.prior.statistics import SegmentFrames, mirror_signs
 
 Values = NDArray[Any]
@@ -178,6 +178,23 @@ class Restricted:
     def _matrix(self, matrix: FloatArray) -> FloatArray:
         kept: FloatArray = matrix[..., self.outputs[:, None], self.outputs] * np.outer(self.signs, self.signs)
         return kept
+
+    def design(self, angles: FloatArray) -> Design:
+        """Design at the trial's joint angles, shape (F, joints, 3), rad."""
+        inner = design_of(self.inner, angles[:, list(self.joints)])
+        frames, count = inner.features.shape
+        derivative = np.zeros((frames, self.outputs.size, self.total, 3))
+        kept = inner.mean_derivative[:, self.outputs] * self.signs[:, None, None]
+        derivative[:, :, list(self.joints)] = kept
+        slopes = np.zeros((frames, count, self.total, 3))
+        slopes[:, :, list(self.joints)] = inner.feature_derivative
+        return Design(
+            mean=inner.mean[:, self.outputs] * self.signs,
+            mean_derivative=derivative,
+            features=inner.features,
+            feature_derivative=slopes,
+            growth=None if inner.growth is None else self._matrix(inner.growth),
+        )
 
     def moments(self, angles: FloatArray) -> Moments:
         """Moments at the trial's joint angles, shape (F, joints, 3), rad."""

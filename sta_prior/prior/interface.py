@@ -11,6 +11,7 @@ from typing import Protocol
 import numpy as np
 
 from sta_prior.checks import FloatArray
+from sta_prior.gaussian import nearest_psd
 
 
 @dataclass(frozen=True)
@@ -31,6 +32,25 @@ class Moments:
     mean_derivative: FloatArray
     features: FloatArray
     covariance: FloatArray
+
+
+@dataclass(frozen=True)
+class Design:
+    """Artifact of one segment at F frames as the smoother takes it: trial-constant unknowns kept apart.
+
+    Attributes
+    ----------
+    mean, mean_derivative, features : as Moments has them
+    feature_derivative : shape (F, K, joints, 3), 1/rad
+    growth : shape (F, n, n), m²
+        What the covariance has beyond the trial-constant unknowns' and the residual's; None where nothing.
+    """
+
+    mean: FloatArray
+    mean_derivative: FloatArray
+    features: FloatArray
+    feature_derivative: FloatArray
+    growth: FloatArray | None
 
 
 class Artifact(Protocol):
@@ -60,6 +80,44 @@ class Artifact(Protocol):
 
     def moments(self, angles: FloatArray) -> Moments:
         """Moments at joint angles of shape (F, joints, 3), rad."""
+
+
+_STEP = 1e-5
+_NO_GROWTH = 1e-3
+
+
+def design_of(artifact: Artifact, angles: FloatArray) -> Design:
+    """Design at joint angles (F, joints, 3) rad: the artifact's own where it offers one, else from its moments.
+
+    Where it offers none, the features are differentiated by central differences, and what its covariance has
+    beyond Z P Zᵀ and the residual counts as growth.
+    """
+    own = getattr(artifact, "design", None)
+    if own is not None:
+        found: Design = own(angles)
+        return found
+    moments = artifact.moments(angles)
+    frames, joints, _ = angles.shape
+    slopes = np.zeros((*moments.features.shape, joints, 3))
+    for joint in range(joints) if moments.features.shape[1] else ():
+        for column in range(3):
+            step = np.zeros((joints, 3))
+            step[joint, column] = _STEP
+            change = artifact.moments(angles + step).features - artifact.moments(angles - step).features
+            slopes[..., joint, column] = change / (2.0 * _STEP)
+    n, count = moments.mean.shape[1], moments.features.shape[1]
+    beyond = moments.covariance - artifact.residual
+    if count:
+        spread = artifact.constant_covariance.reshape(count, n, count, n)
+        beyond = beyond - np.einsum(
+            "fk,kalb,fl->fab", moments.features, spread, moments.features, optimize=True
+        )
+    least = _NO_GROWTH * float(np.trace(artifact.residual))
+    grown = np.einsum("faa->fa", beyond).sum(axis=1) > least
+    growth = np.where(grown[:, None, None], beyond, 0.0) if grown.any() else None
+    if growth is not None:
+        growth = nearest_psd(growth)
+    return Design(moments.mean, moments.mean_derivative, moments.features, slopes, growth)
 
 
 @dataclass(frozen=True)
