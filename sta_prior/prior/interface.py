@@ -87,7 +87,7 @@ _NO_GROWTH = 1e-3
 
 
 def design_of(artifact: Artifact, angles: FloatArray) -> Design:
-    """Design at joint angles (F, joints, 3) rad: the artifact's own where it offers one, else from its moments.
+    """Design at joint angles (F, joints, 3) rad: the artifact's own, else made from its moments.
 
     Where it offers none, the features are differentiated by central differences, and what its covariance has
     beyond Z P Zᵀ and the residual counts as growth.
@@ -97,7 +97,7 @@ def design_of(artifact: Artifact, angles: FloatArray) -> Design:
         found: Design = own(angles)
         return found
     moments = artifact.moments(angles)
-    frames, joints, _ = angles.shape
+    joints = angles.shape[1]
     slopes = np.zeros((*moments.features.shape, joints, 3))
     for joint in range(joints) if moments.features.shape[1] else ():
         for column in range(3):

@@ -10,8 +10,8 @@ T⁻¹dT/dt = ϖ, and for white noise on jerk its derivative α too. From one fr
 
 References
 ----------
-Barfoot, Tong & Särkkä (2014), Robotics: Science and Systems X, doi 10.15607/RSS.2014.X.001; Anderson & Barfoot
-(2015), IROS, doi 10.1109/IROS.2015.7353368 (the prior on rigid motions; both from memory).
+Barfoot, Tong & Särkkä (2014), Robotics: Science and Systems X, doi 10.15607/RSS.2014.X.001; Anderson &
+Barfoot (2015), IROS, doi 10.1109/IROS.2015.7353368 (the prior on rigid motions; both from memory).
 Bar-Shalom, Li & Kirubarajan (2001), Estimation with Applications to Tracking and Navigation, ch. 6 (Q, from
 memory); discretised by filterpy.
 """
