@@ -29,6 +29,7 @@ KERNELS = (
     *("se3", "gaussian", "angles", "rigid"),
     *("prior/interface", "prior/linear", "prior/hierarchy", "prior/fitting"),
     *("solve/terms", "solve/frame", "solve/posterior"),
+    *("solve/chain", "solve/chain_kernels", "solve/chain_marginals"),
 )
 NOT_IN_A_KERNEL = {"xarray", "pathlib", "matplotlib", "h5netcdf", "ezc3d", "typer", "rich"}
 
