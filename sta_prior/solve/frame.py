@@ -25,6 +25,7 @@ from sta_prior import se3
 from sta_prior.checks import BoolArray, FloatArray, IntArray
 from sta_prior.rigid import RigidFit, fit_rigid
 from sta_prior.solve.posterior import FrameSolution, describe_posterior, join
+from sta_prior.solve.relaxation import relaxation
 from sta_prior.solve.terms import JointProblem, SegmentProblem, System, assemble
 
 MARKER_SD = 0.0005
@@ -34,8 +35,6 @@ TOLERANCE = 1e-8
 MAXIMUM_ITERATIONS = 60
 _CHUNK = 1000
 _LARGEST_STEP = np.array([0.2, 0.2, 0.2, 0.05, 0.05, 0.05])
-_RELAXATION = (0.1, 20.0)
-
 # Levenberg's term of the iteration, 1/rad² and 1/m²: a tenth of the least information with which a
 # pose counts as determined. It keeps a direction that is all but open from wandering, and with it
 # the frame's other segments from being called unsettled.
@@ -108,7 +107,7 @@ def _iterate(
 
     Three guards, each frame by itself; none moves the optimum. A step is cut to _LARGEST_STEP. Weakly
     known directions are held (_HOLD). And since the covariance follows the angles, steps can swing or
-    crawl: _relaxation lengthens or shortens them.
+    crawl: relaxation lengthens or shortens them.
     """
     frames, count = poses.shape[:2]
     hold = np.diag(np.tile(_HOLD, count))
@@ -124,37 +123,13 @@ def _iterate(
         system = assemble(part, joints, poses[active], marker_sd)
         step = -np.linalg.solve(system.normal + hold, system.gradient[..., None])[..., 0] / limit
         longest = np.maximum(np.abs(step).max(axis=1), 1e-300)
-        factor = np.minimum(_relaxation(made[active], before[active] - step), 1.0 / longest)
+        factor = np.minimum(relaxation(made[active], before[active] - step), 1.0 / longest)
         before[active], made[active] = step, factor[:, None] * step
         poses[active] = poses[active] @ se3.exp((made[active] * limit).reshape(active.size, count, 6))
         moving[active] = ~(np.abs(step * limit).max(axis=1) <= TOLERANCE)
         if not moving.any():
             break
     return poses, assemble(segments, joints, poses, marker_sd), iterations, ~moving
-
-
-def _relaxation(made: FloatArray, change: FloatArray) -> FloatArray:
-    """Factor on the next step of each frame, from the last one: Aitken's, for vectors.
-
-    Parameters
-    ----------
-    made : shape (F, n), last move; NaN before the first
-    change : shape (F, n), by how much the move shrank the full step
-
-    Returns
-    -------
-    shape (F,): below 1 where steps swing, above 1 where they crawl, 1 where nothing can be said:
-    at first, and where the step grows, on the way out of a point that does not hold.
-
-    References
-    ----------
-    Irons & Tuck (1969), Int J Numer Methods Eng 1, 275–277 (from memory).
-    """
-    squared = np.einsum("fn,fn->f", change, change)
-    shrinking = np.einsum("fn,fn->f", made, change)
-    known = np.isfinite(shrinking) & (shrinking > 0.0)
-    factor = np.where(known, shrinking, 1.0) / np.where(known, squared, 1.0)
-    return np.clip(factor, *_RELAXATION)
 
 
 def _take(segment: SegmentProblem, frames: IntArray) -> SegmentProblem:

@@ -1,4 +1,7 @@
-"""Maximum a posteriori trajectories with posterior covariance (prototype driver)."""
+"""Maximum a posteriori trajectories: all frames of a trial together, with posterior covariance.
+
+Kernel: arrays in, arrays out. Conventions: docs/conventions.md. The model: solve/trajectory.py.
+"""
 
 from __future__ import annotations
 
@@ -7,112 +10,103 @@ from dataclasses import dataclass
 import numpy as np
 
 from sta_prior.checks import FloatArray
+from sta_prior.prior.interface import design_of
+from sta_prior.solve.chain import ChainFactor, bounded_constants, factor, step
+from sta_prior.solve.chain_marginals import marginals
 from sta_prior.solve.constants import reduce_constants
 from sta_prior.solve.motion import first_rates, make_motion
+from sta_prior.solve.relaxation import relaxation
+from sta_prior.solve.spans import TrajectorySystem
 from sta_prior.solve.terms import JointProblem, SegmentProblem, angles_and_jacobians, drive
-from sta_prior.solve.trajectory import (
-    Blocks, Trajectory, TrajectoryProblem, assemble_trajectory, moved, place_hidden,
-)
-from sta_prior.prior.interface import design_of
+from sta_prior.solve.trajectory import HiddenOutputs, Trajectory, TrajectoryProblem, moved, place_hidden
 
 CONSTANT_TIME = 1.0
+"""Longest stretch of a trial whose information about the trial-constant unknowns counts in full, s."""
+
+TOLERANCE = 1e-7
+MAXIMUM_ITERATIONS = 40
+_SHORTEST, _LONGEST = 1e-3, 4.0
 
 
-@dataclass
-class Factor:
-    lower: FloatArray
-    link: FloatArray
-    arrow: FloatArray  # A^-1 B
-    schur: FloatArray
-    inverse_schur: FloatArray
+@dataclass(frozen=True)
+class Smoothed:
+    """Optimum of a trajectory problem.
+
+    problem, hidden, state; covariance: (F, 6S, 6S) of all poses' right perturbations, the constants' share
+    included; bound: kappa; iterations, stop_reason.
+    """
+
+    problem: TrajectoryProblem
+    hidden: HiddenOutputs
+    state: Trajectory
+    covariance: FloatArray
+    bound: float
+    iterations: int
+    stop_reason: str
 
 
-def factor(blocks: Blocks, kappa: float):
-    T, p, _ = blocks.diagonal.shape
-    c = blocks.arrow.shape[2]
-    L = np.zeros((T, p, p)); M = np.zeros((T, p, p))
-    rhs = np.concatenate([blocks.arrow, blocks.gradient[..., None]], axis=2)
-    Y = np.zeros((T, p, c + 1))
-    for t in range(T):
-        d = blocks.diagonal[t]
-        r = rhs[t]
-        if t:
-            M[t] = np.linalg.solve(L[t - 1], blocks.below[t - 1].T).T
-            d = d - M[t] @ M[t].T
-            r = r - M[t] @ Y[t - 1]
-        L[t] = np.linalg.cholesky(d)
-        Y[t] = np.linalg.solve(L[t], r)
-    X = np.zeros_like(Y)
-    for t in range(T - 1, -1, -1):
-        r = Y[t]
-        if t < T - 1:
-            r = r - M[t + 1].T @ X[t + 1]
-        X[t] = np.linalg.solve(L[t].T, r)
-    arrow, shift = X[..., :c], X[..., c]
-    data = blocks.corner - np.einsum("fpa,fpb->ab", blocks.arrow, arrow, optimize=True)
-    reduced = blocks.corner_gradient - np.einsum("fpa,fp->a", blocks.arrow, shift)
-    return L, M, arrow, shift, 0.5 * (data + data.T), reduced
-
-
-def marginals(L, M, k):
-    T, p, _ = L.shape
-    out = np.zeros((T, k, k))
-    S = None
-    eye = np.eye(p)
-    for t in range(T - 1, -1, -1):
-        Li = np.linalg.solve(L[t], eye)
-        P = Li.T @ Li
-        if t < T - 1:
-            G = Li.T @ M[t + 1].T
-            P = P + G @ S @ G.T
-        S = P
-        out[t] = P[:k, :k]
-    return out
-
-
-def smooth(segments: list[SegmentProblem], joints: list[JointProblem], start: FloatArray, step: float,
-           marker_sd: float = 0.0005, constant_time: float = CONSTANT_TIME, order: int = 2, density_factor: float = 1.0,
-           maximum: int = 30, verbose: bool = False):
-    from dataclasses import replace
-    angles, jac = angles_and_jacobians(joints, start)
+def make_problem(
+    segments: list[SegmentProblem],
+    joints: list[JointProblem],
+    start: FloatArray,
+    time_step: float,
+    marker_sd: float,
+    order: int = 2,
+) -> TrajectoryProblem:
+    """Reduce the constants and estimate the motion priors from a first look, start (F, S, 4, 4)."""
+    angles, slope = angles_and_jacobians(joints, start)
     modes = []
     for segment in segments:
-        inputs, _ = drive(segment, start, angles, jac)
-        design = design_of(segment.artifact, inputs)
-        modes.append(reduce_constants(segment.artifact.constant_covariance, design.features, segment.reference.size))
-    motions = [make_motion(start[:, s.index], step, order) for s in segments]
-    motions = [replace(m, density=m.density * density_factor) for m in motions]
-    problem = TrajectoryProblem(segments, joints, motions, modes, step, marker_sd)
+        inputs, _ = drive(segment, start, angles, slope)
+        features = design_of(segment.artifact, inputs).features
+        covariance = segment.artifact.constant_covariance
+        modes.append(reduce_constants(covariance, features, segment.reference.size))
+    motions = [make_motion(start[:, segment.index], time_step, order) for segment in segments]
+    return TrajectoryProblem(segments, joints, motions, modes, time_step, marker_sd)
+
+
+def begin(problem: TrajectoryProblem, hidden: HiddenOutputs, start: FloatArray) -> Trajectory:
+    """State to begin the iteration from."""
+    rates = np.stack(
+        [first_rates(start[:, s.index], problem.step, problem.order) for s in problem.segments], axis=1
+    )
+    nothing = np.zeros((problem.frames, hidden.count))
+    return Trajectory(start.copy(), rates, nothing, np.zeros(problem.constants))
+
+
+def smooth(problem: TrajectoryProblem, start: FloatArray, constant_time: float = CONSTANT_TIME) -> Smoothed:
+    """Maximum a posteriori trajectory by Gauss-Newton with step control."""
     hidden = place_hidden(problem)
-    rates = np.stack([first_rates(start[:, s.index], step, order) for s in segments], axis=1)
-    state = Trajectory(start.copy(), rates, np.zeros((problem.frames, hidden.count)), np.zeros(problem.constants))
-    kappa = max(1.0, problem.frames * step / constant_time)
-    blocks = assemble_trajectory(problem, state, hidden)
-    merit = blocks.cost + 0.5 * kappa * float(state.constants @ state.constants)
-    c = problem.constants
-    for it in range(maximum):
-        L, M, arrow, shift, data, reduced = factor(blocks, kappa)
-        du = -np.linalg.solve(kappa * np.eye(c) + data, kappa * state.constants + reduced)
-        dx = -(shift + arrow @ du)
-        size = np.abs(dx[:, : 6 * len(segments)]).max()
-        scale = 1.0
+    bound = max(1.0, problem.frames * problem.step / constant_time)
+    state = begin(problem, hidden, start)
+
+    def solved(at: Trajectory) -> tuple[float, ChainFactor]:
+        system = TrajectorySystem(problem, at, hidden)
+        found = factor(system, problem.frames)
+        return system.cost / bound + 0.5 * float(at.constants @ at.constants), found
+
+    merit, system = solved(state)
+    posterior = bounded_constants(system, bound)
+    made = before = np.full((1, problem.frames * 6 * len(problem.segments)), np.nan)
+    reason, iterations = f"not converged in {MAXIMUM_ITERATIONS} iterations", 0
+    while iterations < MAXIMUM_ITERATIONS:
+        iterations += 1
+        change = step(system, posterior, state.constants)
+        full = change.states[:, : 6 * len(problem.segments)].reshape(1, -1)
+        # Curvature that Gauss-Newton leaves out makes it crawl along one direction: lengthen the step there.
+        length = float(np.clip(relaxation(made, before - full)[0], 1.0, _LONGEST))
         while True:
-            trial = moved(problem, state, scale * dx, scale * du)
-            new = assemble_trajectory(problem, trial, hidden)
-            value = new.cost + 0.5 * kappa * float(trial.constants @ trial.constants)
-            if value <= merit + 1e-9 * abs(merit) or scale < 1e-3:
+            ahead = moved(problem, state, length * change.states, length * change.constants)
+            value, there = solved(ahead)
+            if value <= merit * (1.0 + 1e-10) or length < _SHORTEST:
                 break
-            scale *= 0.5
-        if verbose:
-            print(it, merit, value, scale, size)
-        state, blocks = trial, new
-        done = size < 1e-6 and scale == 1.0
-        merit = value
-        if done:
+            length *= 0.5
+        before, made = full, length * full
+        size = float(np.abs(full).max())
+        state, merit, system = ahead, value, there
+        posterior = bounded_constants(system, bound)
+        if length >= 1.0 and size < TOLERANCE:
+            reason = f"step below {TOLERANCE:g} rad and m in every frame"
             break
-    L, M, arrow, shift, data, reduced = factor(blocks, kappa)
-    k = 6 * len(segments)
-    cov = marginals(L, M, k)
-    inner = kappa * np.linalg.inv(kappa * np.eye(c) + data)
-    cov = cov + np.einsum("fka,ab,flb->fkl", arrow[:, :k], inner, arrow[:, :k], optimize=True)
-    return state, cov, problem, it + 1
+    found = marginals(system, posterior, leading=6 * len(problem.segments))
+    return Smoothed(problem, hidden, state, found.covariance, bound, iterations, reason)
