@@ -435,7 +435,7 @@ def test_constants_less_informed_than_their_coupling_are_refused() -> None:
 def test_constants_that_are_not_finite_are_refused() -> None:
     with pytest.raises(ShapeError) as caught:
         bounded_constants(factor(from_arrays(*broken(), np.array([[np.nan]])), 7))
-    assert str(caught.value) == "constants: constants_information is not finite."
+    assert str(caught.value) == "constants: their information is not finite."
 
 
 def test_another_prior_gradient_is_refused() -> None:

@@ -186,11 +186,12 @@ def _eliminate(span: Span, start: int, before: FloatArray, panels: FloatArray) -
     """Write the panels of a span; raise where a block is not positive definite."""
     states, constants = span.coupling.shape[1:]
     size = kernels.sizes(states, constants, panels.shape[-1])
-    failed = kernels.eliminate(*span[:4], before, panels, size, kernels.LETTERS, kernels.NUMBERS)
+    with kernels.one_thread():
+        failed = kernels.eliminate(*span[:4], before, panels, size, kernels.LETTERS, kernels.NUMBERS)
     if failed < 0:
         return
     _refuse_infinite(span, start)
-    unknown = max(int(size[-1]) - 1, 0)
+    unknown = int(size[-1]) - 1
     raise NotDeterminedError(
         message(
             f"frame {start + failed}",
@@ -261,7 +262,8 @@ def factor(spans: Spans, frames: int, *, span: int = SPAN, memory: float = MEMOR
         before[index] = previous
         _eliminate(part, start, before[index], own)
         arrow = _arrow(own, states, constants)
-        gram += arrow.T @ arrow
+        with kernels.one_thread():
+            gram += arrow.T @ arrow
         log_determinant += 2.0 * float(np.log(np.einsum("nii->ni", own[:, :, :states])).sum())
         if not (np.isfinite(gram).all() and np.isfinite(log_determinant)):
             _refuse_infinite(part, start)
@@ -308,7 +310,7 @@ def bounded_constants(
         raise InputError(message(("constants", "bound"), wrong))
     precision = np.eye(system.constants) + system.information / value
     if not np.isfinite(precision).all():
-        raise ShapeError(message("constants", "constants_information is not finite"))
+        raise ShapeError(message("constants", "their information is not finite"))
     try:
         root = np.asarray(np.linalg.cholesky(precision), dtype=np.float64)
     except np.linalg.LinAlgError as error:

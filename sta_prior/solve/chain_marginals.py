@@ -84,7 +84,6 @@ def marginal_spans(
     states, constants = system.states, system.constants
     kept = _kept(system, leading)
     covariance, after = np.zeros((states, states)), np.zeros((states, constants))
-    work, root = np.empty((2, states, states)), posterior.factor
     for index in reversed(range(len(system.edges) - 1)):
         start, stop = system.edges[index : index + 2]
         panels, count = panels_of(system, index), stop - start
@@ -92,35 +91,30 @@ def marginal_spans(
         responses[-1] = after
         diagonal = np.empty((count, kept, kept))
         beside = np.empty((count if lagged else 0, kept, kept))
-        size = kernels.sizes(states, constants, panels.shape[-1])
-        kernels.covariances(
-            panels, covariance, responses, diagonal, beside, work, size, kernels.LETTERS, kernels.NUMBERS
-        )
+        work, size = np.empty((2, states, states)), kernels.sizes(states, constants, panels.shape[-1])
+        with kernels.one_thread():
+            kernels.covariances(
+                panels, covariance, responses, diagonal, beside, work, size, kernels.LETTERS, kernels.NUMBERS
+            )
+            whitened = _solved(posterior, responses[:, :kept], "N")
+            cross = -_solved(posterior, whitened[:-1], "T") if with_constants else None
+            share = whitened[:-1] @ whitened[:-1].swapaxes(-1, -2)
+            if lagged:
+                beside += whitened[:-1] @ whitened[1:].swapaxes(-1, -2)
         after = responses[0]
-        # Rows of Z = X L⁻ᵀ, so that X S⁻¹ Xᵀ = Z Zᵀ; Fortran reads them as columns.
-        rows = responses[:, :kept].reshape((count + 1) * kept, constants)
-        whitened = rows
-        if constants:
-            whitened = solve_triangular(root, rows.T, lower=True, check_finite=False).T
-        share = whitened.reshape(count + 1, kept, constants)
-        if lagged:
-            beside += share[:-1] @ share[1:].swapaxes(-1, -2)
-            beside = beside[: min(count, system.frames - 1 - start)]
-        cross = None
-        if with_constants:
-            cross = np.zeros((count, kept, constants))
-            if constants:
-                own = whitened[: count * kept].T
-                solved = solve_triangular(root, own, lower=True, trans="T", check_finite=False)
-                cross[:] = -solved.T.reshape(cross.shape)
-        yield Marginals(
-            start=start,
-            stop=stop,
-            states=diagonal,
-            share=share[:-1] @ share[:-1].swapaxes(-1, -2),
-            lagged=beside if lagged else None,
-            with_constants=cross,
-        )
+        # The last frame has none after it.
+        pairs = beside[: system.frames - 1 - start] if lagged else None
+        yield Marginals(start, stop, diagonal, share, pairs, cross)
+
+
+def _solved(posterior: ConstantsPosterior, rows: FloatArray, turned: str) -> FloatArray:
+    """Rows of X L⁻ᵀ ("N") or of X L⁻¹ ("T"), X of shape (n, k, c) and S = L Lᵀ."""
+    if not rows.shape[-1]:
+        return rows
+    # Fortran reads rows as columns.
+    columns = rows.reshape(-1, rows.shape[-1]).T
+    solved = solve_triangular(posterior.factor, columns, lower=True, trans=turned, check_finite=False)
+    return np.asarray(solved.T.reshape(rows.shape), dtype=np.float64)
 
 
 def marginals(
