@@ -11,8 +11,7 @@ import numpy as np
 
 from sta_prior.checks import FloatArray
 from sta_prior.prior.interface import design_of
-from sta_prior.solve.chain import ChainFactor, bounded_constants, factor, step
-from sta_prior.solve.chain_marginals import marginals
+from sta_prior.solve.chain import ChainFactor, ConstantsPosterior, bounded_constants, factor, step
 from sta_prior.solve.constants import reduce_constants
 from sta_prior.solve.motion import first_rates, make_motion
 from sta_prior.solve.relaxation import relaxation
@@ -32,15 +31,15 @@ _SHORTEST, _LONGEST = 1e-3, 4.0
 class Smoothed:
     """Optimum of a trajectory problem.
 
-    problem, hidden, state; covariance: (F, 6S, 6S) of all poses' right perturbations, the constants' share
-    included; bound: kappa; iterations, stop_reason.
+    problem, hidden, state; factor, constants: of the information at the optimum, constants by bounded
+    information; iterations, stop_reason.
     """
 
     problem: TrajectoryProblem
     hidden: HiddenOutputs
     state: Trajectory
-    covariance: FloatArray
-    bound: float
+    factor: ChainFactor
+    constants: ConstantsPosterior
     iterations: int
     stop_reason: str
 
@@ -108,5 +107,6 @@ def smooth(problem: TrajectoryProblem, start: FloatArray, constant_time: float =
         if length >= 1.0 and size < TOLERANCE:
             reason = f"step below {TOLERANCE:g} rad and m in every frame"
             break
-    found = marginals(system, posterior, leading=6 * len(problem.segments))
-    return Smoothed(problem, hidden, state, found.covariance, bound, iterations, reason)
+    # Steps see the markers where they are, the information where the prior expects them.
+    informed = factor(TrajectorySystem(problem, state, hidden, expected=True), problem.frames)
+    return Smoothed(problem, hidden, state, informed, bounded_constants(informed, bound), iterations, reason)

@@ -26,19 +26,24 @@ from sta_prior.solve.trajectory import (
     TrajectoryProblem,
 )
 
+ANCHOR, WHOLE_ANCHOR = 1e-4, 5e-2
+"""Precision that anchors a pose in every frame, and at most over the whole trial, 1/rad² and 1/m²: a spread
+of metres and radians, far from what counts as determined."""
+
 
 @dataclass(frozen=True)
 class Rows:
     """A chain of correlated residuals over the frames of a span and one to either side.
 
-    residual: (F, n) e; jacobian: (F, n, m) in the frame's unknowns at ``columns`` (m,); constant: (F, n, k) in
-    the constants at ``at`` (k,); decay: (F,) ρ towards the frame before, 0 where the chain begins; whitener:
-    L with L Q Lᵀ = 1 for the innovations' covariance Q, (1, n, n) or (F, n, n); active: (F,).
+    residual: (F, n) e; jacobian: (F, n, m) in the first m unknowns of the frame; through: (F, n, m), the part
+    of it that the prior's mean makes, 0 for a joint; constant: (F, n, k) in the constants at ``at`` (k,);
+    decay: (F,) ρ towards the frame before, 0 where the chain begins; whitener: L with L Q Lᵀ = 1 for the
+    innovations' covariance Q, (1, n, n) or (F, n, n); active: (F,).
     """
 
     residual: FloatArray
     jacobian: FloatArray
-    columns: IntArray
+    through: FloatArray | None
     constant: FloatArray
     at: IntArray
     decay: FloatArray
@@ -46,19 +51,29 @@ class Rows:
     active: BoolArray
 
     def whitened(self) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
-        """Innovations (F, n), derivatives in the frame's unknowns and in those of the frame before, constants'.
+        """Innovations (F, n), their derivatives in the frame's unknowns, in those before, in the constants.
 
         The first frame of the rows has nothing before it here and counts as the beginning of a chain.
         """
         factor = self.whitener * self.active[:, None, None]
-        decay = np.where(self.active, self.decay, 0.0)[:, None, None]
-        now = factor @ self.jacobian
-        past = np.zeros_like(now)
+        decay = self.kept_decay
         residual, constant = self.residual.copy(), self.constant.copy()
         residual[1:] -= decay[1:, :, 0] * self.residual[:-1]
         constant[1:] -= decay[1:] * self.constant[:-1]
-        past[1:] = decay[1:] * (factor[1:] @ self.jacobian[:-1])
+        now, past = self.derivatives(self.jacobian)
         return np.einsum("fab,fb->fa", factor, residual), now, past, factor @ constant
+
+    @property
+    def kept_decay(self) -> FloatArray:
+        """Decay where there are rows, (F, 1, 1)."""
+        return np.where(self.active, self.decay, 0.0)[:, None, None]
+
+    def derivatives(self, jacobian: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Whitened derivatives (F, n, m) in the frame's unknowns and, sign turned, in those before."""
+        factor = self.whitener * self.active[:, None, None]
+        past = np.zeros_like(jacobian)
+        past[1:] = self.kept_decay[1:] * (factor[1:] @ jacobian[:-1])
+        return factor @ jacobian, past
 
 
 def whitener(covariance: FloatArray) -> FloatArray:
@@ -69,7 +84,7 @@ def whitener(covariance: FloatArray) -> FloatArray:
 
 
 @dataclass(frozen=True)
-class _Part:
+class Part:
     """The frames that a span is made from: its own, start … stop − 1, and one to either side.
 
     first, last: of all frames, last exclusive; own: the span's among them.
@@ -82,10 +97,12 @@ class _Part:
 
     @property
     def frames(self) -> slice:
+        """All of them among the trial's."""
         return slice(self.first, self.last)
 
     @property
     def own(self) -> slice:
+        """The span's among them."""
         return slice(self.start - self.first, self.stop - self.first)
 
     @property
@@ -99,18 +116,23 @@ class TrajectorySystem:
     """A trajectory problem at a state, to be handed over in spans; adds up its cost on the way.
 
     cost: half the squared residuals of the spans asked for since it was set to zero, without the prior of the
-    constants.
+    constants; expected: take the markers where the prior expects them, for the information (see marker_term).
     """
 
     problem: TrajectoryProblem
     state: Trajectory
     hidden: HiddenOutputs
+    expected: bool = False
     cost: float = 0.0
+
+    def part(self, start: int, stop: int) -> Part:
+        """Frames of a span and one to either side."""
+        return Part(start, stop, max(start - 1, 0), min(stop + 1, self.problem.frames))
 
     def __call__(self, start: int, stop: int) -> Span:
         """Give what the frames start … stop − 1 add to the information and its gradient."""
         problem = self.problem
-        part = _Part(start, stop, max(start - 1, 0), min(stop + 1, problem.frames))
+        part = self.part(start, stop)
         count, size, constants = stop - start, problem.moving + self.hidden.count, problem.constants
         span = Span(
             np.zeros((count, size, size)),
@@ -120,12 +142,13 @@ class TrajectorySystem:
             np.zeros((constants, constants)),
             np.zeros(constants),
         )
-        for rows in self._rows(part):
+        for rows in self.rows(part):
             self._add(span, part, rows)
         self._add_motion(span, part)
         return span
 
-    def _rows(self, part: _Part) -> list[Rows]:
+    def rows(self, part: Part) -> list[Rows]:
+        """Chains of residuals of all segments and joints that constrain, in this order."""
         problem, frames = self.problem, part.frames
         poses = self.state.poses[frames]
         angles, slope = angles_and_jacobians(problem.joints, poses)
@@ -135,32 +158,32 @@ class TrajectorySystem:
                 rows.append(self._joint(index, own, part, poses))
         return rows
 
-    def _add(self, span: Span, part: _Part, rows: Rows) -> None:
+    def _add(self, span: Span, part: Part, rows: Rows) -> None:
         white, now, past, moved = rows.whitened()
         own, after = part.own, part.after
         follow = after.stop - after.start
         self.cost += 0.5 * float((white[own] ** 2).sum())
-        grid = np.ix_(rows.columns, rows.columns)
+        width = rows.jacobian.shape[-1]
         later, earlier = np.swapaxes(now[own], 1, 2), np.swapaxes(past[after], 1, 2)
         block = later @ now[own]
         block[:follow] += earlier @ past[after]
-        span.diagonal[:, grid[0], grid[1]] += block
-        span.lower[:follow, grid[0], grid[1]] -= np.swapaxes(now[after], 1, 2) @ past[after]
+        span.diagonal[:, :width, :width] += block
+        span.lower[:follow, :width, :width] -= np.swapaxes(now[after], 1, 2) @ past[after]
         pull = np.einsum("fnp,fn->fp", now[own], white[own])
         pull[:follow] -= np.einsum("fnp,fn->fp", past[after], white[after])
-        span.gradient[:, rows.columns] += pull
+        span.gradient[:, :width] += pull
         if not rows.at.size:
             return
         mixed = later @ moved[own]
         mixed[:follow] -= earlier @ moved[after]
-        span.coupling[:, rows.columns[:, None], rows.at] += mixed
+        span.coupling[:, :width, rows.at] += mixed
         flat = moved[own].reshape(-1, rows.at.size)
         assert span.constants_information is not None
         assert span.constants_gradient is not None
         span.constants_information[np.ix_(rows.at, rows.at)] += flat.T @ flat
         span.constants_gradient[rows.at] += flat.T @ white[own].reshape(-1)
 
-    def _markers(self, index: int, part: _Part, angles: FloatArray, angle_jacobian: FloatArray) -> Rows:
+    def _markers(self, index: int, part: Part, angles: FloatArray, angle_jacobian: FloatArray) -> Rows:
         """Markers of one segment against reference, prior mean and constants."""
         problem, state, frames = self.problem, self.state, part.frames
         segment, modes = problem.segments[index], problem.modes[index].modes
@@ -179,15 +202,19 @@ class TrajectorySystem:
         if weights.size:
             slope = slope + np.einsum("fkjd,kn->fnjd", design.feature_derivative, weights, optimize=True)
         width = input_jacobian.shape[-1]
-        jacobian = np.zeros((count, n, width + self.hidden.count))
-        jacobian[..., :width] = -slope.reshape(count, n, -1) @ input_jacobian.reshape(count, -1, width)
-        first = 6 * segment.index
-        jacobian[..., first : first + 6] -= marker_jacobian(np.nan_to_num(points_bone))
+        through = np.zeros((count, n, width + self.hidden.count))
+        through[..., :width] = -slope.reshape(count, n, -1) @ input_jacobian.reshape(count, -1, width)
+        jacobian, first = through.copy(), 6 * segment.index
+        place_of = np.nan_to_num(points_bone)
+        if self.expected:
+            mean = design.mean + design.features @ weights
+            place_of = segment.reference + mean.reshape(count, markers, 3)
+        jacobian[..., first : first + 6] -= marker_jacobian(place_of)
         constant = -(design.features @ modes.reshape(modes.shape[0], -1)).reshape(count, n, -1)
         place = self.hidden.column[index][frames]
         at_frame, at_output = np.nonzero(place >= 0)
         slots = place[at_frame, at_output]
-        jacobian[at_frame, at_output] = 0.0
+        jacobian[at_frame, at_output] = through[at_frame, at_output] = 0.0
         constant[at_frame, at_output] = 0.0
         jacobian[at_frame, at_output, width + slots] = 1.0
         residual[at_frame, at_output] = state.hidden[frames][at_frame, slots]
@@ -197,7 +224,7 @@ class TrajectorySystem:
         return Rows(
             residual=residual,
             jacobian=jacobian,
-            columns=np.concatenate([np.arange(width), problem.moving + np.arange(self.hidden.count)]),
+            through=through,
             constant=constant,
             at=np.arange(at.start, at.stop),
             decay=decay,
@@ -220,7 +247,7 @@ class TrajectorySystem:
         factors = whitener(innovation(values, np.broadcast_to(spread, (values.size, *spread.shape))))
         return factors if values.size == 1 else factors[which]
 
-    def _joint(self, index: int, own: slice, part: _Part, poses: FloatArray) -> Rows:
+    def _joint(self, index: int, own: slice, part: Part, poses: FloatArray) -> Rows:
         """Travel of one joint centre about its constant offset."""
         joint = self.problem.joints[index]
         sd = max(joint.travel_sd, BALL_JOINT_SD)
@@ -232,7 +259,7 @@ class TrajectorySystem:
         return Rows(
             residual=travel - offset * self.state.constants[own],
             jacobian=slope,
-            columns=np.arange(slope.shape[-1]),
+            through=None,
             constant=np.broadcast_to(-offset * np.eye(3), (frames, 3, 3)),
             at=np.arange(own.start, own.stop),
             decay=decay,
@@ -240,11 +267,11 @@ class TrajectorySystem:
             active=np.ones(frames, dtype=bool),
         )
 
-    def _add_motion(self, span: Span, part: _Part) -> None:
+    def _add_motion(self, span: Span, part: Part) -> None:
         problem, state = self.problem, self.state
-        self._hold_unused(span, part)
+        self._hold(span, part)
         for index, motion in enumerate(problem.motions):
-            at = problem.state(index)
+            at = problem.state(index, self.hidden.count)
             if part.start == 0:
                 self._begin(span, index, at)
             frames = slice(part.first, part.last)
@@ -280,10 +307,15 @@ class TrajectorySystem:
         span.gradient[0, at] += weight * start
         self.cost += 0.5 * float(weight @ start**2)
 
-    def _hold_unused(self, span: Span, part: _Part) -> None:
-        """A hidden unknown without a hidden output in a frame stays zero."""
+    def _hold(self, span: Span, part: Part) -> None:
+        """Anchor the poses, and the hidden unknowns that no hidden output uses in a frame, which stay zero.
+
+        The anchor holds a direction that nothing else does; it has no gradient and moves no optimum.
+        """
+        poses = np.arange(self.problem.poses)
+        span.diagonal[:, poses, poses] += min(ANCHOR, WHOLE_ANCHOR / self.problem.frames)
         own = slice(part.start, part.stop)
         for slot in range(self.hidden.count):
             used = np.any([(column[own] == slot).any(axis=1) for column in self.hidden.column], axis=0)
-            place = self.problem.moving + slot
+            place = self.problem.poses + slot
             span.diagonal[~used, place, place] = 1.0

@@ -2,9 +2,9 @@
 
 Kernel: arrays in, arrays out. Conventions: docs/conventions.md.
 
-Unknowns of a frame: poses (6 a segment), rates (see solve/motion.py), and the artifact of every marker that is
-hidden there. Unknowns of the trial (the arrow): subject deviations, reduced to modes (solve/constants.py), and
-a constant offset of every joint centre.
+Unknowns of a frame: poses (6 a segment), the artifact of every marker that is hidden there, and rates (see
+solve/motion.py). Unknowns of the trial (the arrow): subject deviations, reduced to modes
+(solve/constants.py), and a constant offset of every joint centre.
 
 The residual artifact r decays with its own time constant: with ρ = exp(−Δ/τ) the rows
 
@@ -101,17 +101,22 @@ class TrajectoryProblem:
     @property
     def constants(self) -> int:
         """Number of trial-constant unknowns."""
-        joints = [own.stop for own in self.joint_slices if own is not None]
-        return max([self.constant_slices[-1].stop, *joints])
+        joints = [int(own.stop) for own in self.joint_slices if own is not None]
+        return max([int(self.constant_slices[-1].stop), *joints])
 
     def decay(self, segment: int) -> float:
         """ρ, correlation of a segment's residual from one frame to the next."""
         return float(np.exp(-self.step / max(self.segments[segment].artifact.time_constant, 1e-6)))
 
-    def state(self, segment: int) -> IntArray:
-        """Columns of a segment's pose and rates among a frame's unknowns."""
-        count, extra = len(self.segments), self.order - 1
-        first = 6 * count + 6 * extra * segment
+    @property
+    def poses(self) -> int:
+        """Pose unknowns of a frame."""
+        return 6 * len(self.segments)
+
+    def state(self, segment: int, hidden: int) -> IntArray:
+        """Columns of a segment's pose and rates among a frame's unknowns; hidden: how many of these."""
+        extra = self.order - 1
+        first = self.poses + hidden + 6 * extra * segment
         return np.concatenate([6 * segment + np.arange(6), first + np.arange(6 * extra)])
 
 
@@ -119,8 +124,8 @@ class TrajectoryProblem:
 class HiddenOutputs:
     """Where the hidden outputs of each segment stand among a frame's unknowns.
 
-    column: (F, n) by segment, −1 where seen; restart: (F,) by segment, frames before which the chain of residuals
-    begins anew; active: (F,) by segment, frames with rows; count: hidden unknowns of a frame at most.
+    column: (F, n) by segment, −1 where seen; restart: (F,) by segment, frames before which the chain of
+    residuals begins anew; active: (F,) by segment, frames with rows; count: hidden unknowns of a frame.
     """
 
     column: list[IntArray]
@@ -136,12 +141,13 @@ FORGOTTEN = 0.01
 def place_hidden(problem: TrajectoryProblem) -> HiddenOutputs:
     """Find the hidden outputs; a segment out of view for long has no rows there."""
     columns, restarts, actives = [], [], []
-    used = np.zeros(problem.frames, dtype=np.int64)
+    used: IntArray = np.zeros(problem.frames, dtype=np.int64)
     for segment in problem.segments:
-        seen = np.isfinite(segment.points).all(axis=2)
-        any_seen = seen.any(axis=1)
+        seen: BoolArray = np.asarray(np.isfinite(segment.points).all(axis=2))
+        any_seen: BoolArray = np.asarray(seen.any(axis=1))
         longest = -np.log(FORGOTTEN) * max(segment.artifact.time_constant, 1e-6) / problem.step
-        active, restart = any_seen.copy(), np.zeros(problem.frames, dtype=bool)
+        active: BoolArray = any_seen.copy()
+        restart: BoolArray = np.zeros(problem.frames, dtype=bool)
         shown = np.flatnonzero(any_seen)
         if shown.size:
             restart[shown[0]] = True
@@ -163,13 +169,13 @@ def moved(
     problem: TrajectoryProblem, state: Trajectory, step: FloatArray, constants: FloatArray
 ) -> Trajectory:
     """State after a step, (F, p) and (c,)."""
-    count, extra = len(problem.segments), problem.order - 1
-    turn = step[:, : 6 * count].reshape(-1, count, 6)
-    rates = step[:, 6 * count : problem.moving].reshape(-1, count, extra, 6)
+    count, hidden = len(problem.segments), state.hidden.shape[1]
+    turn = step[:, : problem.poses].reshape(-1, count, 6)
+    rates = step[:, problem.poses + hidden :].reshape(state.rates.shape)
     return replace(
         state,
         poses=state.poses @ se3.exp(turn),
         rates=state.rates + rates,
-        hidden=state.hidden + step[:, problem.moving :],
+        hidden=state.hidden + step[:, problem.poses : problem.poses + hidden],
         constants=state.constants + constants,
     )
