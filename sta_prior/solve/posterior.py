@@ -16,7 +16,7 @@ from sta_prior.solve.terms import ANCHOR, JointProblem, Linearised, SegmentProbl
 SOURCES = ("markers", "artifact_prior", "joint", "motion")
 
 # A pose is reported as not determined when its SD in some direction exceeds these: rad, m.
-_UNDETERMINED = np.array([0.6, 0.6, 0.6, 0.3, 0.3, 0.3])
+UNDETERMINED = np.array([0.6, 0.6, 0.6, 0.3, 0.3, 0.3])
 
 # Part of the largest information below which the markers say nothing about a direction of the pose.
 _OPEN_DIRECTION = 1e-8
@@ -63,14 +63,14 @@ def _pose_covariance(system: System, count: int, converged: BoolArray) -> tuple[
     information = system.information
     covariance = symmetrise(np.linalg.solve(information + ANCHOR * np.eye(size), identity))
     sd = np.sqrt(np.einsum("fxx->fx", covariance)).reshape(frames, count, 6)
-    determined = (sd < _UNDETERMINED).all(axis=2) & converged[:, None]
+    determined = (sd < UNDETERMINED).all(axis=2) & converged[:, None]
     whole = np.flatnonzero(determined.all(axis=1))
     # Where all is determined the anchor is not needed and must not enter the covariance.
     covariance[whole] = symmetrise(np.linalg.solve(information[whole], identity[whole]))
     return covariance, determined
 
 
-def _variance(jacobian: FloatArray, covariance: FloatArray) -> FloatArray:
+def variance_along(jacobian: FloatArray, covariance: FloatArray) -> FloatArray:
     """Diagonal of J P Jᵀ: jacobian (F, ..., 6S), covariance (F, 6S, 6S)."""
     flat = jacobian.reshape(jacobian.shape[0], -1, jacobian.shape[-1])
     variance = np.einsum("fax,fax->fa", flat @ covariance, flat)
@@ -89,7 +89,7 @@ def _artifact(term: Linearised, covariance: FloatArray) -> tuple[FloatArray, Flo
     left = np.einsum("faa->fa", term.artifact_covariance) - np.einsum(
         "fab,fab->fa", gain, term.artifact_covariance
     )
-    return mean, np.sqrt(np.maximum(left, 0.0) + _variance(slope, covariance))
+    return mean, np.sqrt(np.maximum(left, 0.0) + variance_along(slope, covariance))
 
 
 def _shares(term: Linearised, covariance: FloatArray) -> tuple[FloatArray, FloatArray]:
@@ -105,7 +105,7 @@ def _shares(term: Linearised, covariance: FloatArray) -> tuple[FloatArray, Float
     return markers, prior
 
 
-def _conflict(term: Linearised, index: int, determined: BoolArray) -> tuple[FloatArray, FloatArray]:
+def conflict_of(term: Linearised, index: int, determined: BoolArray) -> tuple[FloatArray, FloatArray]:
     """Whitened squared deformation that no pose of the segment explains, and its freedom.
 
     Freedom is 3m − 6 for m markers; markers on a line leave one direction of the pose untouched and
@@ -148,14 +148,14 @@ def describe_posterior(
     """
     frames, count = poses.shape[:2]
     covariance, determined = _pose_covariance(system, count, converged)
-    angles, angle_sd = system.angles.copy(), np.sqrt(_variance(system.angle_jacobian, covariance))
+    angles, angle_sd = system.angles.copy(), np.sqrt(variance_along(system.angle_jacobian, covariance))
     travel = np.full((frames, len(joints), 3), np.nan)
     travel_sd = np.full((frames, len(joints), 3), np.nan)
     for index, joint in enumerate(joints):
         hidden = ~(determined[:, joint.proximal] & determined[:, joint.distal])
         if joint.has_centre:
             travel[:, index], jacobian = joint_travel(joint, poses)
-            travel_sd[:, index] = np.sqrt(_variance(jacobian, covariance))
+            travel_sd[:, index] = np.sqrt(variance_along(jacobian, covariance))
         for array in (angles, angle_sd, travel, travel_sd):
             array[hidden, index] = np.nan
 
@@ -171,7 +171,7 @@ def describe_posterior(
         markers, prior = _shares(term, covariance)
         share[:, :, 0] += markers
         share[:, :, 1] += prior
-        conflict[:, segment.index], freedom[:, segment.index] = _conflict(term, segment.index, seen)
+        conflict[:, segment.index], freedom[:, segment.index] = conflict_of(term, segment.index, seen)
     share[:, :, 2] = np.einsum("fxy,fyx->fx", covariance, system.joint_normal)
     share = share.reshape(frames, count, 6, len(SOURCES))
     # Where another segment is undetermined the anchor takes part in the inverse: restore the sum.

@@ -70,7 +70,7 @@ class TrajectoryProblem:
     @property
     def frames(self) -> int:
         """Number of frames."""
-        return self.segments[0].points.shape[0]
+        return int(self.segments[0].points.shape[0])
 
     @property
     def order(self) -> int:
@@ -102,7 +102,7 @@ class TrajectoryProblem:
     def constants(self) -> int:
         """Number of trial-constant unknowns."""
         joints = [int(own.stop) for own in self.joint_slices if own is not None]
-        return max([int(self.constant_slices[-1].stop), *joints])
+        return max(int(self.constant_slices[-1].stop), *joints, 0)
 
     def decay(self, segment: int) -> float:
         """ρ, correlation of a segment's residual from one frame to the next."""
