@@ -23,7 +23,7 @@ from sta_prior.batch.job import Inputs, Job, Outcome, keep_inputs, read_inputs, 
 from sta_prior.batch.output import trial_files
 from sta_prior.errors import InputError, message
 from sta_prior.io.files import atomic_path, file_digest
-from sta_prior.solve import DEFAULT_ESTIMATOR, ESTIMATORS, solve
+from sta_prior.solve import DEFAULT_ESTIMATOR, ESTIMATORS, WITH_PRIOR, solve
 from sta_prior.study import Study, Trial
 
 LIBRARIES = ("numpy", "scipy", "xarray", "ezc3d")
@@ -104,7 +104,7 @@ def solve_study(
         )
         for trial in chosen
     ]
-    if estimator not in ESTIMATORS or (estimator == "frame-map" and inputs.prior is None):
+    if estimator not in ESTIMATORS or (estimator in WITH_PRIOR and inputs.prior is None):
         solve(chosen[0], None, estimator)  # says so once, not once a trial
     outcomes: list[Outcome] = []
     try:

@@ -1,5 +1,5 @@
 """Estimators: frame-wise least squares and maximum a posteriori, and the trial they are told as."""
 
-from sta_prior.solve.trial import DEFAULT_ESTIMATOR, ESTIMATORS, solve
+from sta_prior.solve.trial import DEFAULT_ESTIMATOR, ESTIMATORS, WITH_PRIOR, solve
 
-__all__ = ["DEFAULT_ESTIMATOR", "ESTIMATORS", "solve"]
+__all__ = ["DEFAULT_ESTIMATOR", "ESTIMATORS", "WITH_PRIOR", "solve"]

@@ -9,12 +9,13 @@ that do; the covariance of what is left out joins the residual.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from sta_prior.checks import FloatArray
-from sta_prior.gaussian import symmetrise
+from sta_prior.gaussian import nearest_psd, symmetrise
+from sta_prior.prior.interface import Artifact, Design, Moments
 
 NEGLIGIBLE = 2e-4
 """RMS displacement per output below which all that is left out together may stay, m."""
@@ -29,6 +30,47 @@ class ConstantModes:
 
     modes: FloatArray
     rest: FloatArray
+
+
+@dataclass(frozen=True)
+class Lumped:
+    """An artifact whose trial-constant unknowns count as residual: for trials solved without constants.
+
+    inner: the artifact itself.
+    """
+
+    inner: Artifact
+
+    @property
+    def residual(self) -> FloatArray:
+        """Residual covariance, shape (n, n), m²."""
+        return self.inner.residual
+
+    @property
+    def time_constant(self) -> float:
+        """Decay time of the residual's correlation, s."""
+        return self.inner.time_constant
+
+    @property
+    def constant_covariance(self) -> FloatArray:
+        """No trial-constant unknowns: shape (0, 0)."""
+        return np.zeros((0, 0))
+
+    def moments(self, angles: FloatArray) -> Moments:
+        """Moments at joint angles of shape (F, joints, 3), rad."""
+        found = self.inner.moments(angles)
+        return replace(found, features=found.features[:, :0])
+
+    def design(self, angles: FloatArray) -> Design:
+        """Design at joint angles of shape (F, joints, 3), rad: all of the covariance beyond r is growth."""
+        found = self.inner.moments(angles)
+        return Design(
+            mean=found.mean,
+            mean_derivative=found.mean_derivative,
+            features=found.features[:, :0],
+            feature_derivative=np.zeros((angles.shape[0], 0, *angles.shape[1:])),
+            growth=nearest_psd(found.covariance - self.inner.residual),
+        )
 
 
 def reduce_constants(covariance: FloatArray, features: FloatArray, outputs: int) -> ConstantModes:

@@ -9,7 +9,7 @@ from dataclasses import dataclass, fields
 
 import numpy as np
 
-from sta_prior.checks import BoolArray, FloatArray
+from sta_prior.checks import BoolArray, FloatArray, IntArray
 from sta_prior.gaussian import symmetrise
 from sta_prior.solve.terms import ANCHOR, JointProblem, Linearised, SegmentProblem, System, joint_travel
 
@@ -54,6 +54,19 @@ class FrameSolution:
     determined: BoolArray
     iterations: int
     stop_reason: str
+
+    def at(self, frames: IntArray) -> FrameSolution:
+        """The solution at some frames."""
+        if frames.size == self.poses.shape[0]:
+            return self
+        kept: dict[str, object] = {}
+        for field in fields(FrameSolution):
+            value = getattr(self, field.name)
+            if isinstance(value, list):
+                kept[field.name] = [part[frames] for part in value]
+            else:
+                kept[field.name] = value[frames] if isinstance(value, np.ndarray) else value
+        return FrameSolution(**kept)  # type: ignore[arg-type]
 
 
 def _pose_covariance(system: System, count: int, converged: BoolArray) -> tuple[FloatArray, BoolArray]:

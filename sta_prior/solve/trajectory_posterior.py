@@ -5,13 +5,17 @@ Kernel: arrays in, arrays out. Conventions: docs/conventions.md.
 
 from __future__ import annotations
 
+import math
 from dataclasses import replace
+from typing import Literal
 
 import numpy as np
 
 from sta_prior.checks import BoolArray, FloatArray
 from sta_prior.prior.interface import design_of
 from sta_prior.solve.chain_marginals import Marginals, marginal_spans
+from sta_prior.solve.constants import Lumped
+from sta_prior.solve.frame import MARKER_SD
 from sta_prior.solve.posterior import (
     SOURCES,
     UNDETERMINED,
@@ -20,11 +24,49 @@ from sta_prior.solve.posterior import (
     join,
     variance_along,
 )
-from sta_prior.solve.smoother import Smoothed
+from sta_prior.solve.smoother import CONSTANT_TIME, Smoothed, make_problem, smooth
 from sta_prior.solve.spans import Rows, TrajectorySystem
-from sta_prior.solve.terms import SegmentProblem, angles_and_jacobians, drive, joint_travel, marker_term
+from sta_prior.solve.terms import (
+    JointProblem,
+    SegmentProblem,
+    angles_and_jacobians,
+    drive,
+    joint_travel,
+    marker_term,
+)
+
+Constants = Literal["bounded", "full", "none"]
+CONSTANTS: tuple[str, ...] = ("bounded", "full", "none")
 
 MARKERS, PRIOR, JOINT, MOTION = range(len(SOURCES))
+
+
+def solve_trajectory(
+    segments: list[SegmentProblem],
+    joints: list[JointProblem],
+    start: FloatArray,
+    time_step: float,
+    marker_sd: float = MARKER_SD,
+    constants: Constants = "bounded",
+    order: int = 2,
+) -> FrameSolution:
+    """Smooth a trial: maximum a posteriori over all frames, with posterior covariance.
+
+    Parameters
+    ----------
+    segments, joints : as for `solve_frames`
+    start : shape (F, S, 4, 4), lab ← bone, finite (see bridge)
+    time_step : s
+    marker_sd : instrument noise of a marker, m
+    constants : "bounded" (the default) takes at most CONSTANT_TIME of information about the trial-constant
+        unknowns, "full" all, "none" counts them as residual
+    order : 2 for white noise on acceleration, 3 on jerk
+    """
+    if constants == "none":
+        segments = [replace(segment, artifact=Lumped(segment.artifact)) for segment in segments]
+    problem = make_problem(segments, joints, start, time_step, marker_sd, order)
+    limit = math.inf if constants == "full" else CONSTANT_TIME
+    return describe_trajectory(smooth(problem, start, limit))
 
 
 def describe_trajectory(smoothed: Smoothed) -> FrameSolution:

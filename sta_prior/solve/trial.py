@@ -8,7 +8,7 @@ from __future__ import annotations
 import time
 import warnings
 from dataclasses import replace
-from typing import Literal
+from typing import Literal, cast
 
 import numpy as np
 import xarray as xr
@@ -27,11 +27,14 @@ from sta_prior.solve.frame import bridge, first_look, solve_frames
 from sta_prior.solve.observability import describe_observability
 from sta_prior.solve.posterior import SOURCES, FrameSolution
 from sta_prior.solve.terms import Gravity, JointProblem, SegmentProblem
+from sta_prior.solve.timeline import even_grid, on_grid
+from sta_prior.solve.trajectory_posterior import CONSTANTS, Constants, solve_trajectory
 from sta_prior.study import Reference, Trial
 
-Estimator = Literal["rigid", "linked", "frame-map"]
-ESTIMATORS: tuple[str, ...] = ("rigid", "linked", "frame-map")
-DEFAULT_ESTIMATOR = "frame-map"
+Estimator = Literal["rigid", "linked", "frame-map", "smoother"]
+ESTIMATORS: tuple[str, ...] = ("rigid", "linked", "frame-map", "smoother")
+WITH_PRIOR = ("frame-map", "smoother")
+DEFAULT_ESTIMATOR = "smoother"
 POSE = ("rx", "ry", "rz", "tx", "ty", "tz")
 
 SMALLEST_SPREAD = 0.001
@@ -48,16 +51,20 @@ def solve(
     prior: Prior | None = None,
     estimator: str = DEFAULT_ESTIMATOR,
     personal: xr.Dataset | None = None,
+    constants: str = "bounded",
 ) -> xr.Dataset:
     """Solve one skin trial. Bone truth in the study, if any, is never read here.
 
     Parameters
     ----------
     trial : from a study
-    prior : needed by ``frame-map``; ``rigid`` and ``linked`` work without
+    prior : needed by ``frame-map`` and ``smoother``; ``rigid`` and ``linked`` work without
     estimator : "rigid" (frame-wise least squares), "linked" (least squares with joint
-        constraints) or "frame-map" (frame-wise maximum a posteriori)
+        constraints), "frame-map" (frame-wise maximum a posteriori) or "smoother" (maximum a posteriori of the
+        whole trial, the default)
     personal : paired data with frames of the trial's own subject
+    constants : what the smoother learns of the subject's own deviation from the trial: "bounded", "full" or
+        "none", see `solve_trajectory`
 
     Returns
     -------
@@ -69,18 +76,12 @@ def solve(
     MismatchError : the prior does not fit the lab file.
     """
     started = time.perf_counter()
-    if estimator not in ESTIMATORS:
+    _check_choice("--estimator", "estimator", estimator, ESTIMATORS)
+    _check_choice("--constants", "choice", constants, CONSTANTS)
+    if estimator in WITH_PRIOR and prior is None:
         raise InputError(
             message(
-                "--estimator",
-                f"no estimator {estimator} here, known: {', '.join(ESTIMATORS)}",
-                nearest(estimator, ESTIMATORS),
-            )
-        )
-    if estimator == "frame-map" and prior is None:
-        raise InputError(
-            message(
-                "--estimator frame-map",
+                f"--estimator {estimator}",
                 "needs a prior",
                 "Give --prior, or use --estimator rigid or linked.",
             )
@@ -88,7 +89,7 @@ def solve(
     reference = trial.subject.reference()
     skin = trial.skin()
     points = skin["position"].values
-    binding = prior.bind(trial, personal) if prior is not None and estimator == "frame-map" else None
+    binding = prior.bind(trial, personal) if prior is not None and estimator in WITH_PRIOR else None
     segments = _segments(trial, points, reference, binding)
     joints = _joints(trial, reference)
     count = len(segments)
@@ -102,7 +103,10 @@ def solve(
         start = bridge(rigid_poses, joints)
         if binding is not None and binding.inputs:
             segments = _with_inputs(segments, trial, binding, start, skin["time"].values)
-        result = solve_frames(segments, joints, start)
+        if estimator == "smoother":
+            result = _smooth(segments, joints, start, skin["time"].values, constants)
+        else:
+            result = solve_frames(segments, joints, start)
     data = _dataset(trial, skin, result, rigid_poses, estimator)
     _mark_informed(data, binding)
     data.attrs.update(
@@ -117,7 +121,7 @@ def solve(
             "suspects": "",
             "reference_notes": "; ".join([*reference.notes, *notes]),
             "belief": binding.basis_of_belief if binding is not None else "no prior",
-            "covariance": "posterior" if estimator == "frame-map" else SCATTER,
+            "covariance": "posterior" if estimator in WITH_PRIOR else SCATTER,
             "subject": trial.subject.id,
             "trial": trial.id,
             "activity": trial.activity,
@@ -126,6 +130,36 @@ def solve(
     if trial.subject.invented or (prior is not None and prior.invented):
         data.attrs["invented_data"] = 1
     return data
+
+
+def _check_choice(option: str, what: str, chosen: str, known: tuple[str, ...]) -> None:
+    if chosen not in known:
+        raise InputError(
+            message(option, f"no {what} {chosen} here, known: {', '.join(known)}", nearest(chosen, known))
+        )
+
+
+def _smooth(
+    segments: list[SegmentProblem],
+    joints: list[JointProblem],
+    start: FloatArray,
+    instants: FloatArray,
+    constants: str,
+) -> FrameSolution:
+    """The smoother's solution at the file's own instants; frames that the file lacks are lost frames."""
+    timeline = even_grid(instants)
+    whole = [
+        replace(
+            segment,
+            points=on_grid(segment.points, timeline),
+            changes=None if segment.changes is None else np.nan_to_num(on_grid(segment.changes, timeline)),
+        )
+        for segment in segments
+    ]
+    first = bridge(on_grid(start, timeline), joints)
+    return solve_trajectory(whole, joints, first, timeline.step, constants=cast(Constants, constants)).at(
+        timeline.at
+    )
 
 
 def _segments(
@@ -312,7 +346,7 @@ def _dataset(
             one,
         ),
     }
-    if estimator == "frame-map":
+    if estimator in WITH_PRIOR:
         # Least squares has no law for the deformation that a p-value could refer to.
         variables["conflict_p"] = (("time", "segment"), conflict, one)
     data = xr.Dataset(
