@@ -32,8 +32,11 @@ QUANTILE = float(norm.ppf(0.95))
 
 
 def run_study(seed: int, mechanism: str) -> dict[str, FloatArray]:
-    """Figures by variant: left-out RMS, mm, and coverage at 90 % of thigh and shank; RMS error of three angles,
-    degrees, of the thigh's and the shank's position, mm; coverage of three angles."""
+    """Run one study.
+
+    By variant: left-out RMS, mm, and coverage at 90 % of thigh and shank; RMS error of three angles, degrees, of
+    the thigh's and the shank's position, mm; coverage of three angles.
+    """
     couriers = make_couriers(seed, mechanism, SUBJECTS, FRESH)
     pairs = pairs_of(couriers.learned, couriers.population)
     result = {}
