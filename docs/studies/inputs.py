@@ -34,8 +34,8 @@ QUANTILE = float(norm.ppf(0.95))
 def run_study(seed: int, mechanism: str) -> dict[str, FloatArray]:
     """Run one study.
 
-    By variant: left-out RMS, mm, and coverage at 90 % of thigh and shank; RMS error of three angles, degrees, of
-    the thigh's and the shank's position, mm; coverage of three angles.
+    By variant: left-out RMS, mm, and coverage at 90 % of thigh and shank; RMS error of three angles, degrees,
+    of the thigh's and the shank's position, mm; coverage of three angles.
     """
     couriers = make_couriers(seed, mechanism, SUBJECTS, FRESH)
     pairs = pairs_of(couriers.learned, couriers.population)
