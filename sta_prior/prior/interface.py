@@ -11,6 +11,7 @@ from typing import Protocol
 import numpy as np
 
 from sta_prior.checks import FloatArray
+from sta_prior.prior.time_scales import TimeScales
 
 
 @dataclass(frozen=True)
@@ -41,7 +42,8 @@ class Artifact(Protocol):
     residual : shape (n, n), m²
         Covariance of what the trial-constant unknowns do not explain.
     time_constant : s
-        Decay time of the residual's correlation.
+        Decay time of the residual's correlation; the slowest where there are two. An artifact with two has
+        ``time_scales`` besides (see time_scales_of).
     constant_covariance : shape (K·n, K·n), m²
         Of the trial-constant unknowns, feature-major.
     """
@@ -60,6 +62,12 @@ class Artifact(Protocol):
 
     def moments(self, angles: FloatArray) -> Moments:
         """Moments at joint angles of shape (F, joints, 3), rad."""
+
+
+def time_scales_of(artifact: Artifact) -> TimeScales:
+    """Correlation of a residual over time: the artifact's ``time_scales``, or its one ``time_constant``."""
+    own = getattr(artifact, "time_scales", None)
+    return own if isinstance(own, TimeScales) else TimeScales.single(artifact.time_constant)
 
 
 @dataclass(frozen=True)
