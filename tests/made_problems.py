@@ -15,6 +15,7 @@ from sta_prior.prior.artifact import FeatureArtifact
 from sta_prior.prior.basis import Basis, Term
 from sta_prior.prior.hierarchy import Weights
 from sta_prior.prior.interface import Artifact
+from sta_prior.prior.time_scales import TimeScales
 from sta_prior.solve.terms import JointProblem, SegmentProblem
 
 # Bone frames: x forward, y up, z right; m. Joint centres: below the thigh's origin, and so on.
@@ -70,7 +71,7 @@ def made_artifact(
         basis=Basis(terms, mixing),
         weights=Weights(mean, np.asarray(np.kron(features, outputs))),
         residual=random_covariance(rng, n, residual_sd),
-        time_constant=0.1,
+        time_scales=TimeScales.single(0.1),
         reference=REFERENCE_ANGLES,
         magnitude=np.zeros((n, n)),
     )

@@ -39,7 +39,7 @@ def chosen_outputs(artifact: FeatureArtifact, markers: list[int]) -> FeatureArti
         basis=artifact.basis,
         weights=weights,
         residual=artifact.residual[np.ix_(outputs, outputs)],
-        time_constant=artifact.time_constant,
+        time_scales=artifact.time_scales,
         reference=artifact.reference,
         magnitude=artifact.magnitude[np.ix_(outputs, outputs)],
     )

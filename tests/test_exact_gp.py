@@ -173,7 +173,8 @@ def test_a_refit_keeps_what_belongs_to_the_angles(small: tuple[list[SegmentFrame
     assert again.subject_names == ("S1", "S2", "S3", "S4")
     np.testing.assert_allclose(again.lengths, fit.lengths)
     np.testing.assert_allclose(again.levels, fit.levels)
-    assert again.time_constant == fit.time_constant
+    np.testing.assert_array_equal(again.time_constants, fit.time_constants)
+    np.testing.assert_array_equal(again.time_shares, fit.time_shares)
     assert again.log_likelihood != fit.log_likelihood
 
 

@@ -50,7 +50,9 @@ def assert_same_prior(one: Prior, other: Prior, rtol: float = 1e-9) -> None:
             np.testing.assert_allclose(got, expected, rtol=1e-9, err_msg=part)
         assert model.basis.reaches == twin.basis.reaches
         np.testing.assert_allclose(model.magnitude, twin.magnitude, rtol=1e-12)
-        assert model.time_constant == pytest.approx(twin.time_constant, rel=1e-9)
+        for part in ("constants", "shares"):
+            got, expected = getattr(model.time_scales, part), getattr(twin.time_scales, part)
+            np.testing.assert_allclose(got, expected, rtol=1e-6, err_msg=part)
         assert model.inflation == pytest.approx(twin.inflation, rel=1e-9)
         np.testing.assert_allclose(model.layout, twin.layout, rtol=1e-12)
         for part in ("residual", "subject_covariance", "trial_covariance"):

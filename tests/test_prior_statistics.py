@@ -1,8 +1,6 @@
-"""From paired data to sufficient statistics: frames of a segment, noise of the bone truth, decay time."""
+"""From paired data to sufficient statistics: frames of a segment, noise of the bone truth."""
 
 from __future__ import annotations
-
-from dataclasses import replace
 
 import made_priors as made
 import numpy as np
@@ -15,11 +13,8 @@ from sta_prior.checks import FloatArray
 from sta_prior.errors import MismatchError
 from sta_prior.prior.linear import linear_basis
 from sta_prior.prior.statistics import (
-    LONGEST_TIME_CONSTANT,
-    SegmentFrames,
     adjacent_joints,
     bone_noise,
-    estimate_time_constant,
     gather_angles,
     mirror_signs,
     segment_frames,
@@ -206,104 +201,3 @@ def test_statistics_hold_every_seen_frame_once() -> None:
     noise = np.sum([block.noise_gram for block in trial.blocks], axis=0)
     shown = np.delete(frames.noise, slice(4, 9), axis=0)
     np.testing.assert_allclose(noise[4, 4], window / 20 * shown[:, 4, 4].sum(), rtol=1e-10)
-
-
-def ar1_frames(
-    generator: np.random.Generator,
-    time_constant: float,
-    noise_sd: float,
-    trials: int = 60,
-    length: int = 80,
-    count: int = 2,
-) -> list[SegmentFrames]:
-    """Trials of a few windows: a residual of variance 1 that decays with time, and declared white noise."""
-    time = np.concatenate([2 * length * index + np.arange(length) for index in range(count)]) / 100.0
-    frames = count * length
-    rho = np.exp(-0.01 / time_constant) if time_constant else 0.0
-    made_trials = []
-    for index in range(trials):
-        residual = np.zeros((frames, 6))
-        for frame in range(frames):
-            fresh = generator.standard_normal(6)
-            first = frame % length == 0
-            residual[frame] = fresh if first else rho * residual[frame - 1] + np.sqrt(1 - rho**2) * fresh
-        angles = np.zeros((frames, 1, 3))
-        angles[:, 0, 0] = 0.6 - 0.5 * np.cos(2 * np.pi * time + index)
-        residual += noise_sd * generator.standard_normal(residual.shape)
-        noise = np.broadcast_to(noise_sd**2 * np.eye(6), (frames, 6, 6))
-        made_trials.append(SegmentFrames("S", f"t{index}", angles, np.zeros((1, 3)), residual, noise, time))
-    return made_trials
-
-
-@pytest.mark.parametrize("noise_sd", [0.0, 1.0])
-def test_decay_time_is_recovered_though_the_bone_truth_is_noisy(noise_sd: float) -> None:
-    """τ = 20 ms, ρ = 0.607, less what three features take from 160 frames; tolerance 5 % (Monte Carlo).
-
-    Of an AR(1) that varies faster than the features they take b = 3/160·(1 + ρ)/(1 − ρ) from the products at
-    lags one and two alike, of white noise 3/160. A window of 80 frames has 79 pairs at lag one and 78 at lag
-    two. First order, worked by hand.
-    """
-    frames = ar1_frames(np.random.default_rng(14), 0.02, noise_sd)
-    rho = np.exp(-0.5)
-    taken = 3 / 160 * (1 + rho) / (1 - rho) + 3 / 160 * noise_sd**2
-    expected = -0.01 / np.log(78 * (rho**2 - taken) / (79 * (rho - taken)))
-    assert expected == pytest.approx(0.0160, abs=5e-4)
-    assert estimate_time_constant(frames, linear_basis((0,))) == pytest.approx(expected, rel=0.05)
-
-
-def test_decay_time_is_capped_at_both_ends() -> None:
-    generator = np.random.default_rng(15)
-    basis = linear_basis((0,))
-    assert estimate_time_constant(ar1_frames(generator, 1.0, 0.0, trials=4), basis) == LONGEST_TIME_CONSTANT
-    # Neighbours that have nothing in common tell no decay time: the slowest, which counts frames least.
-    white = ar1_frames(generator, 0.0, 0.0, trials=4)
-    assert estimate_time_constant(white, basis) == LONGEST_TIME_CONSTANT
-
-
-def test_decay_time_is_never_shorter_than_a_millisecond() -> None:
-    """Products of neighbours 2, of next but one c, a block of five frames: τ = −10 ms/ln(c/2).
-
-    The 400 frames have 399 neighbours, and 398 next but one.
-    """
-    basis, time = linear_basis(()), np.arange(400) / 100.0
-    nothing, noise = np.zeros((400, 0, 3)), np.zeros((400, 3, 3))
-    for product in (0.5, 1e-4, 2e-5):
-        expected = max(-0.01 / np.log(0.5 * product * 399 / 398), 0.001)
-        block = np.array([1.0, 2.0 / (1.0 + product), product, 0.0, 0.0])
-        displacement = np.zeros((400, 3))
-        displacement[:, 0] = np.tile(np.concatenate([block, -block]), 40)
-        frames = SegmentFrames("S", "t", nothing, np.zeros((0, 3)), displacement, noise, time)
-        assert estimate_time_constant([frames], basis) == pytest.approx(expected, rel=1e-6)
-
-
-def test_decay_time_does_not_ask_how_noisy_the_bone_truth_was_said_to_be() -> None:
-    basis = linear_basis((0,))
-    frames = ar1_frames(np.random.default_rng(18), 0.02, 1.0, trials=4)
-    louder = [replace(item, noise=100.0 * item.noise) for item in frames]
-    assert estimate_time_constant(louder, basis) == estimate_time_constant(frames, basis) < 0.03
-
-
-def test_decay_time_looks_only_at_neighbours_of_one_window() -> None:
-    """Forty windows of three frames a trial: a third of all neighbours lie in two windows.
-
-    Those would take a third off ρ = 0.607, and leave 11 ms. Tolerance 15 %: Monte Carlo, and the features.
-    """
-    frames = ar1_frames(np.random.default_rng(17), 0.02, 0.0, trials=30, length=3, count=40)
-    assert estimate_time_constant(frames, linear_basis((0,))) == pytest.approx(0.02, rel=0.15)
-
-
-def test_decay_time_does_not_depend_on_scale_or_length_of_the_gaps() -> None:
-    """Scaling the displacement changes nothing; neither does a marker that is hidden in a whole window."""
-    frames = ar1_frames(np.random.default_rng(16), 0.02, 0.0, trials=20)
-    basis = linear_basis((0,))
-    one = estimate_time_constant(frames, basis)
-    scaled = [replace(item, displacement=0.003 * item.displacement) for item in frames]
-    assert estimate_time_constant(scaled, basis) == pytest.approx(one, rel=1e-9)
-    shifted = [replace(item, time=item.time + np.where(item.window > 0, 5.0, 0.0)) for item in frames]
-    assert estimate_time_constant(shifted, basis) == pytest.approx(one, rel=1e-12)
-    hidden = []
-    for item in frames:
-        displacement = item.displacement.copy()
-        displacement[item.window > 0, 3:] = np.nan
-        hidden.append(replace(item, displacement=displacement))
-    assert estimate_time_constant(hidden, basis) == pytest.approx(one, rel=0.15)

@@ -24,6 +24,7 @@ from sta_prior.prior.family import Own, Posture, Restricted, SegmentData, Segmen
 from sta_prior.prior.family import restrict as plain_restrict
 from sta_prior.prior.feature_model import LINEAR
 from sta_prior.prior.statistics import SegmentFrames, segment_frames
+from sta_prior.prior.time_scales import TimeScales
 from sta_prior.testing import FailedCheckError, check_prior, example_pairs
 from sta_prior.testing.battery import CHECKS
 from sta_prior.testing.example import OWN, RESIDUAL, SIZE
@@ -90,6 +91,7 @@ class BentArtifact:
     residual_of: Callable[[FloatArray], FloatArray] = lambda residual: residual
     constant_of: Callable[[FloatArray], FloatArray] = lambda constant: constant
     time: float | None = None
+    time_scales: object = None
 
     @property
     def residual(self) -> FloatArray:
@@ -226,6 +228,10 @@ def steep_beyond(moments: Moments, angles: FloatArray) -> Moments:
     return replace(moments, mean_derivative=moments.mean_derivative + 0.01 * held[:, None, None, None])
 
 
+def scaled(scales: object, time: float = 0.08) -> Fault:
+    return Fault(artifact=lambda artifact, posture: BentArtifact(artifact, time=time, time_scales=scales))
+
+
 def by_first_marker(artifact: Artifact, posture: Posture) -> Artifact:
     factor = 1.0 + abs(float(posture.markers[0, 1]))
     return BentArtifact(artifact, lambda m, angles: replace(m, covariance=factor * m.covariance))
@@ -235,8 +241,8 @@ COUNT = iter(range(1, 1000))
 
 
 def another_each_time(model: SegmentModel) -> SegmentModel:
-    assert hasattr(model, "time_constant")
-    return replace(model, time_constant=0.01 + 1e-6 * next(COUNT))  # type: ignore[type-var]
+    assert hasattr(model, "time_scales")
+    return replace(model, time_scales=TimeScales.single(0.01 + 1e-6 * next(COUNT)))  # type: ignore[type-var]
 
 
 def short_beliefs(name: str, values: Values) -> Values:
@@ -255,6 +261,26 @@ FAULTS: dict[str, tuple[Fault, str]] = {
     "negative time": (
         Fault(artifact=lambda artifact, posture: BentArtifact(artifact, time=-0.02)),
         "time_constant is -0.02 s, expected 0 or more.",
+    ),
+    "time scales of another kind": (
+        scaled((0.08, 0.02)),
+        "time_scales is a tuple, expected TimeScales.",
+    ),
+    "one share too few": (
+        scaled(TimeScales(np.array([0.08, 0.02]), np.array([1.0]))),
+        "time_scales has constants of shape (2,) and shares of shape (1,), expected one or two of each.",
+    ),
+    "fast before slow": (
+        scaled(TimeScales(np.array([0.02, 0.08]), np.array([0.5, 0.5]))),
+        "decay times are 0.02 and 0.08 s, expected the slowest first, all above 0.",
+    ),
+    "shares of more than all": (
+        scaled(TimeScales(np.array([0.08, 0.02]), np.array([0.7, 0.4]))),
+        "shares of the decay times are 0.7 and 0.4, expected above 0 and of sum 1.",
+    ),
+    "not the slowest": (
+        scaled(TimeScales(np.array([0.08, 0.02]), np.array([0.5, 0.5])), 0.02),
+        "time_constant is 0.02 s, the slowest decay time is 0.08 s.",
     ),
     "depends on other frames": (bent(mean_of_all), "mean of a frame alone is not that among others."),
     "lopsided": (bent(lopsided), "covariance is not symmetric."),

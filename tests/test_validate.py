@@ -199,7 +199,7 @@ def test_a_subject_left_out_is_predicted_as_one_never_imaged(family: FeatureFami
     weights = new_subject(fit)
     predicted = [
         FeatureArtifact(
-            model.basis, weights, fit.residual, model.time_constant, item.reference_angles, model.magnitude
+            model.basis, weights, fit.residual, model.time_scales, item.reference_angles, model.magnitude
         ).moments(item.angles)
         for item in own
     ]

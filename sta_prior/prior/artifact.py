@@ -13,6 +13,7 @@ from sta_prior.checks import FloatArray
 from sta_prior.prior.basis import Basis
 from sta_prior.prior.hierarchy import Weights
 from sta_prior.prior.interface import Design, Moments
+from sta_prior.prior.time_scales import TimeScales
 
 GROWTH_LENGTH = 0.25
 """Angle beyond the training data over which the spread grows by the magnitude prior's, rad: about 14°.
@@ -25,16 +26,21 @@ class FeatureArtifact:
     """Belief about weights of features, plus a residual.
 
     weights: belief about the trial's weights, K features × n outputs; residual: (n, n) m²;
-    time_constant: s; reference: (joints, 3) rad; magnitude: (n, n) m², what the covariance gains far
-    beyond the training data.
+    time_scales: of the residual; reference: (joints, 3) rad; magnitude: (n, n) m², what the covariance gains
+    far beyond the training data.
     """
 
     basis: Basis
     weights: Weights
     residual: FloatArray
-    time_constant: float
+    time_scales: TimeScales
     reference: FloatArray
     magnitude: FloatArray
+
+    @property
+    def time_constant(self) -> float:
+        """Slowest decay time of the residual's correlation, s."""
+        return self.time_scales.slowest
 
     @property
     def constant_covariance(self) -> FloatArray:

@@ -10,7 +10,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from sta_prior.checks import FloatArray, IntArray
-from sta_prior.prior.interface import Artifact, Design, Moments, design_of
+from sta_prior.prior.interface import Artifact, Design, Moments, design_of, time_scales_of
+from sta_prior.prior.time_scales import TimeScales
 
 
 @dataclass(frozen=True)
@@ -43,8 +44,13 @@ class Augmented:
 
     @property
     def time_constant(self) -> float:
-        """Decay time of the residual's correlation, s: the known markers'."""
+        """Slowest decay time of the residual's correlation, s: the known markers'."""
         return self.known.time_constant
+
+    @property
+    def time_scales(self) -> TimeScales:
+        """Correlation of the residual over time: the known markers'."""
+        return time_scales_of(self.known)
 
     @property
     def constant_covariance(self) -> FloatArray:

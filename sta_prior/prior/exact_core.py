@@ -24,6 +24,7 @@ from sta_prior.checks import FloatArray, IntArray
 from sta_prior.gaussian import symmetrise
 from sta_prior.prior.artifact import GROWTH_LENGTH
 from sta_prior.prior.interface import Moments
+from sta_prior.prior.time_scales import TimeScales
 
 FLEXION = 0
 SMALLEST_DIRECTION = 1e-9
@@ -249,7 +250,7 @@ class ExactArtifact:
     reach : shape (D, 2), rad, lowest and highest flexion of the training frames
     inducing : shape (K, D), rad, angles whose values make up the trial-constant unknowns
     residual : shape (n, n), m²
-    time_constant : s
+    time_scales : of the residual
     magnitude : shape (n, n), m², what the covariance gains far beyond the training data
     inflation : factor on the variance of all that is constant in a trial
 
@@ -274,9 +275,14 @@ class ExactArtifact:
     reach: FloatArray
     inducing: FloatArray
     residual: FloatArray
-    time_constant: float
+    time_scales: TimeScales
     magnitude: FloatArray
     inflation: float = 1.0
+
+    @property
+    def time_constant(self) -> float:
+        """Slowest decay time of the residual's correlation, s."""
+        return self.time_scales.slowest
 
     def _cross(self, x: FloatArray) -> FloatArray:
         """Covariance with the training frames of the artifact at flexion x (P, D), offset left out."""

@@ -8,7 +8,7 @@ Frames at flexion x of subjects and trials, with k the covariance of f(x) − f(
 
 p + s + t = 1; M and Σ are full covariances over the segment's outputs; o is what a trial adds to the
 reference; w_i carries the bone-truth noise of the frame. A subject never imaged shares only p with the
-frames. Frames are thinned to nearly independent ones, three decay times of the residual apart.
+frames. Frames are thinned to nearly independent ones, three (slowest) decay times of the residual apart.
 
 References
 ----------
@@ -38,8 +38,10 @@ from sta_prior.prior.exact_core import (
 from sta_prior.prior.exact_model import ExactFit, Observed, noise_factor, observe
 from sta_prior.prior.fitting import INSTRUMENT_SD
 from sta_prior.prior.hierarchy import unison_covariance
+from sta_prior.prior.lag_products import learn_time_scales
 from sta_prior.prior.linear import linear_basis
-from sta_prior.prior.statistics import SegmentFrames, estimate_time_constant
+from sta_prior.prior.statistics import SegmentFrames
+from sta_prior.prior.time_scales import TimeScales
 
 USE_ANOTHER = "Use reduced-rank-gp, which sums frames instead of keeping them."
 LEVEL_NAMES = ("subject share", "trial share", "offset of a trial")
@@ -185,7 +187,7 @@ def fit_exact(
     adjacent : positions of the joints whose flexion drives the artifact
     magnitude : shape (n, n), m², what the covariance gains far beyond the data; mean square displacement
         with equal signs in unison by default
-    start : an earlier fit whose covariance over angles, levels and decay time are kept: only M and Σ are
+    start : an earlier fit whose covariance over angles, levels and decay times are kept: only M and Σ are
         learned from these frames
     settings : see ExactSettings
 
@@ -210,10 +212,10 @@ def fit_exact(
             message("exact-gp", "no joint touches the segment, so no angle can drive it", "Add a joint.")
         )
     joints = np.array(adjacent, dtype=np.int64)
-    constant = start.time_constant if start is not None else _time_constant(frames, adjacent)
+    scales = start.time_scales if start is not None else _time_scales(frames, adjacent)
     subjects = tuple(sorted({item.subject for item in frames}))
     keys = tuple(sorted({(item.subject, item.trial) for item in frames}))
-    spacing = settings.spacing * constant
+    spacing = settings.spacing * scales.slowest
     seen = observe(frames, joints, spacing, subjects, keys)
     _refuse(seen, subjects, settings)
     reach = _reach(seen)
@@ -266,7 +268,8 @@ def fit_exact(
         reach=reach,
         inducing=inducing_angles(kernel, seen.angles, seen.references.mean(axis=0), reach),
         magnitude=mean_square * unison_covariance(n) if magnitude is None else magnitude,
-        time_constant=constant,
+        time_constants=scales.constants,
+        time_shares=scales.shares,
         spacing=spacing,
         log_likelihood=likelihood,
         iterations=iterations,
@@ -274,10 +277,10 @@ def fit_exact(
     )
 
 
-def _time_constant(frames: Sequence[SegmentFrames], adjacent: tuple[int, ...]) -> float:
+def _time_scales(frames: Sequence[SegmentFrames], adjacent: tuple[int, ...]) -> TimeScales:
     angles = [item.angles for item in frames]
     references = [item.reference_angles for item in frames]
-    return estimate_time_constant(list(frames), orthonormal(linear_basis(adjacent), angles, references))
+    return learn_time_scales(frames, orthonormal(linear_basis(adjacent), angles, references))
 
 
 def _refuse(seen: Observed, subjects: tuple[str, ...], settings: ExactSettings) -> None:

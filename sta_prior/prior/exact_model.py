@@ -15,6 +15,7 @@ import numpy as np
 from sta_prior.checks import BoolArray, FloatArray, IntArray
 from sta_prior.prior.exact_core import FLEXION, AngleKernel, ExactArtifact, JointGaussian, joint_gaussian
 from sta_prior.prior.statistics import SegmentFrames
+from sta_prior.prior.time_scales import TimeScales
 
 
 @dataclass(frozen=True)
@@ -86,7 +87,8 @@ class ExactFit:
     subject, trial : shape (N,), indices into subject_names, trial_names
     trial_subject : shape (T,), index of the subject of each trial
     reach : shape (D, 2), rad; inducing : shape (K, D), rad; magnitude : shape (n, n), m²
-    time_constant, spacing : s
+    time_constants, time_shares : shape (k,), s and unitless, correlation of the residual over time
+    spacing : s, between thinned frames
     log_likelihood, iterations, stop_reason : how the fit ended
     """
 
@@ -112,11 +114,17 @@ class ExactFit:
     reach: FloatArray
     inducing: FloatArray
     magnitude: FloatArray
-    time_constant: float
+    time_constants: FloatArray
+    time_shares: FloatArray
     spacing: float
     log_likelihood: float
     iterations: int
     stop_reason: str
+
+    @property
+    def time_scales(self) -> TimeScales:
+        """Correlation of the residual over time."""
+        return TimeScales(self.time_constants, self.time_shares)
 
     @property
     def kernel(self) -> AngleKernel:
@@ -221,7 +229,7 @@ class ExactFit:
             reach=self.reach,
             inducing=self.inducing,
             residual=self.residual,
-            time_constant=self.time_constant,
+            time_scales=self.time_scales,
             magnitude=self.magnitude,
             inflation=1.0 if known else inflation,
         )

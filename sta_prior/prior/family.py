@@ -16,8 +16,9 @@ from numpy.typing import NDArray
 
 from sta_prior.checks import FloatArray, IntArray
 from sta_prior.prior.inputs import Driver
-from sta_prior.prior.interface import Artifact, Design, Moments, design_of
+from sta_prior.prior.interface import Artifact, Design, Moments, design_of, time_scales_of
 from sta_prior.prior.statistics import SegmentFrames, mirror_signs
+from sta_prior.prior.time_scales import TimeScales
 
 Values = NDArray[Any]
 
@@ -161,8 +162,13 @@ class Restricted:
 
     @property
     def time_constant(self) -> float:
-        """Decay time of the residual's correlation, s."""
+        """Slowest decay time of the residual's correlation, s."""
         return self.inner.time_constant
+
+    @property
+    def time_scales(self) -> TimeScales:
+        """Correlation of the residual over time."""
+        return time_scales_of(self.inner)
 
     @property
     def constant_covariance(self) -> FloatArray:

@@ -28,10 +28,12 @@ from sta_prior.prior.hierarchy import (
     without_subject,
 )
 from sta_prior.prior.inputs import INPUTS, Driver
+from sta_prior.prior.lag_products import learn_time_scales
 from sta_prior.prior.linear import linear_basis, reaches_of
 from sta_prior.prior.other_models import beyond_data
 from sta_prior.prior.reduced_rank import reduced_rank_basis
-from sta_prior.prior.statistics import SegmentFrames, estimate_time_constant, summarise
+from sta_prior.prior.statistics import SegmentFrames, summarise
+from sta_prior.prior.time_scales import TimeScales
 
 REFIT = FitSettings(maximum_iterations=10)
 
@@ -43,8 +45,8 @@ _KINDS = ("angle", *INPUTS)
 class FeatureModel:
     """Learned weights of features, with subject and trial levels.
 
-    trials: sufficient statistics of what was learned from; time_constant: s; magnitude: (n, n) m², what the
-    covariance gains far beyond the training data.
+    trials: sufficient statistics of what was learned from; time_scales: of the residual; magnitude: (n, n)
+    m², what the covariance gains far beyond the training data.
     """
 
     name: str
@@ -53,7 +55,7 @@ class FeatureModel:
     basis: Basis
     hierarchy: Hierarchy
     trials: tuple[TrialStatistics, ...]
-    time_constant: float
+    time_scales: TimeScales
     magnitude: FloatArray
     inflation: float = 1.0
 
@@ -66,7 +68,7 @@ class FeatureModel:
         return replace(self, inflation=inflation)
 
     def refitted(self, frames: Sequence[SegmentFrames]) -> FeatureModel:
-        """Fit the hierarchy to other frames, from where it stood; basis and time constant are kept."""
+        """Fit the hierarchy to other frames, from where it stood; basis and time scales are kept."""
         trials = tuple(summarise(item, self.basis) for item in frames)
         hierarchy = fit_hierarchy(
             list(trials),
@@ -82,7 +84,7 @@ class FeatureModel:
             self.basis,
             weights,
             self.hierarchy.residual,
-            self.time_constant,
+            self.time_scales,
             posture.angles,
             self.magnitude,
         )
@@ -125,7 +127,7 @@ class FeatureModel:
         # With several joints they are told by their place in the lab file; names are the shell's.
         names = [f"flexion of joint {gain.joint + 1}" if len(gains) > 1 else "flexion" for gain in gains]
         return (
-            f"residual {residual:.1f} mm SD per axis, decay time {self.time_constant:.3f} s; "
+            f"residual {residual:.1f} mm SD per axis, {self.time_scales.words()}; "
             + "".join(f"{gain.words(name)}; " for gain, name in zip(gains, names, strict=True))
             + f"fit: {self.hierarchy.stop_reason}"
         )
@@ -162,7 +164,8 @@ class FeatureModel:
             "observed_residual": Variable(outputs, fit.observed_residual, "m2"),
             "iterations": Variable((), np.array(fit.iterations, dtype=np.int64)),
             "stop_reason": Variable((), np.array(fit.stop_reason)),
-            "time_constant": Variable((), np.array(self.time_constant), "s"),
+            "time_constants": Variable(("scale",), self.time_scales.constants, "s"),
+            "time_shares": Variable(("scale",), self.time_scales.shares),
             "magnitude": Variable(outputs, self.magnitude, "m2"),
             "block_seen": Variable(("block", "output"), stack("seen").astype(np.int8)),
             "block_feature_gram": Variable(("block", *features), stack("feature_gram")),
@@ -189,7 +192,7 @@ class FeatureFamily:
         angles = [item.angles for item in data.frames]
         references = [item.reference_angles for item in data.frames]
         basis = orthonormal(self.basis(data.adjacent, angles, references, data.extra), angles, references)
-        constant = estimate_time_constant(list(data.frames), basis)
+        scales = learn_time_scales(data.frames, basis)
         trials = tuple(summarise(item, basis) for item in data.frames)
         hierarchy = fit_hierarchy(list(trials), basis.relative_variance, basis.total_relative_variance)
         return FeatureModel(
@@ -199,7 +202,7 @@ class FeatureFamily:
             basis=basis,
             hierarchy=hierarchy,
             trials=trials,
-            time_constant=constant,
+            time_scales=scales,
             magnitude=beyond_data(data.name, data.layout),
         )
 
@@ -259,7 +262,7 @@ def read_feature_model(name: str, stored: Mapping[str, Values]) -> FeatureModel:
             stop_reason=str(stored["stop_reason"]),
         ),
         trials=_blocks(stored),
-        time_constant=float(stored["time_constant"]),
+        time_scales=TimeScales(stored["time_constants"], stored["time_shares"]),
         magnitude=stored["magnitude"],
         inflation=float(stored["inflation"]),
     )

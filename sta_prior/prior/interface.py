@@ -12,6 +12,7 @@ import numpy as np
 
 from sta_prior.checks import FloatArray
 from sta_prior.gaussian import nearest_psd
+from sta_prior.prior.time_scales import TimeScales
 
 
 @dataclass(frozen=True)
@@ -61,7 +62,8 @@ class Artifact(Protocol):
     residual : shape (n, n), m²
         Covariance of what the trial-constant unknowns do not explain.
     time_constant : s
-        Decay time of the residual's correlation.
+        Decay time of the residual's correlation; the slowest where there are two. An artifact with two has
+        ``time_scales`` besides (see time_scales_of).
     constant_covariance : shape (K·n, K·n), m²
         Of the trial-constant unknowns, feature-major.
     """
@@ -118,6 +120,12 @@ def design_of(artifact: Artifact, angles: FloatArray) -> Design:
     if growth is not None:
         growth = nearest_psd(growth)
     return Design(moments.mean, moments.mean_derivative, moments.features, slopes, growth)
+
+
+def time_scales_of(artifact: Artifact) -> TimeScales:
+    """Correlation of a residual over time: the artifact's ``time_scales``, or its one ``time_constant``."""
+    own = getattr(artifact, "time_scales", None)
+    return own if isinstance(own, TimeScales) else TimeScales.single(artifact.time_constant)
 
 
 @dataclass(frozen=True)

@@ -29,7 +29,7 @@ from sta_prior.prior.statistics import SegmentFrames
 _UNITS = {
     "outputs": "m2", "residual": "m2", "observed_residual": "m2", "bone": "m2", "magnitude": "m2",
     "displacement": "m", "angles": "rad", "references": "rad", "reach": "rad", "inducing": "rad",
-    "scale": "rad", "lengths": "rad", "time_constant": "s", "spacing": "s",
+    "scale": "rad", "lengths": "rad", "time_constants": "s", "spacing": "s",
 }  # fmt: skip
 
 
@@ -85,7 +85,7 @@ class ExactModel:
         residual = 1000.0 * float(np.sqrt(np.diag(self.fit.residual).mean()))
         lengths = ", ".join(f"{np.degrees(length):.0f}°" for length in self.fit.lengths)
         return (
-            f"residual {residual:.1f} mm SD per axis, decay time {self.fit.time_constant:.3f} s; "
+            f"residual {residual:.1f} mm SD per axis, {self.fit.time_scales.words()}; "
             f"length scale {lengths}; {self.fit.subject.size} frames; fit: {self.fit.stop_reason}"
         )
 

@@ -19,11 +19,8 @@ from sta_prior.pairs.pairing import AXES
 from sta_prior.prior.basis import Basis
 from sta_prior.prior.hierarchy import TrialStatistics, frame_weights, make_block
 from sta_prior.prior.inputs import TILT, VELOCITY, angle_changes, tilt, windows
+from sta_prior.prior.time_scales import LONGEST_TIME_CONSTANT
 from sta_prior.rigid import marker_jacobian
-
-LONGEST_TIME_CONSTANT = 0.1
-"""Cap of the residual's decay time, s: a single fitted exponential otherwise runs to the longest
-constant allowed and soaks up what the basis does not fit."""
 
 
 @dataclass(frozen=True)
@@ -252,32 +249,3 @@ def summarise(
             make_block(features[here], frames.displacement[here], frames.noise[here], weights[here], pattern)
         )
     return TrialStatistics(frames.subject, frames.trial, tuple(blocks))
-
-
-def estimate_time_constant(trials: list[SegmentFrames], basis: Basis) -> float:
-    """Decay time of what the basis leaves over, s, from frames of unbroken windows.
-
-    Each trial is fitted by itself with a weak ridge. White noise, of the bone truth or the markers, adds to
-    the variance of the residuals but not to their products at lags of one and two frames, so the ratio of
-    these, pooled over trials and outputs, gives the decay. Capped at LONGEST_TIME_CONSTANT.
-    """
-    products, counts, steps = np.zeros(2), np.zeros(2), []
-    for frames in trials:
-        features = basis.values(frames.angles, frames.reference_angles)
-        outputs = np.where(np.isfinite(frames.displacement), frames.displacement, 0.0)
-        seen: BoolArray = np.isfinite(frames.displacement)
-        gram = features.T @ features
-        ridge = 1e-3 * np.trace(gram) / gram.shape[0] * np.eye(gram.shape[0])
-        fitted = features @ np.linalg.solve(gram + ridge, features.T @ outputs)
-        residual = np.where(seen, outputs - fitted, 0.0)
-        for lag in (1, 2):
-            same = frames.window[lag:] == frames.window[:-lag]
-            both = seen[lag:] & seen[:-lag] & same[:, None]
-            products[lag - 1] += float((residual[lag:] * residual[:-lag])[both].sum())
-            counts[lag - 1] += int(both.sum())
-        steps.append(frames.step)
-    if (products <= 0.0).any():
-        return LONGEST_TIME_CONSTANT
-    near, far = products / counts
-    constant = -float(np.median(steps)) / np.log(min(far / near, 0.999))
-    return float(np.clip(constant, 1e-3, LONGEST_TIME_CONSTANT))

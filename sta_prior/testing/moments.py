@@ -8,7 +8,8 @@ from __future__ import annotations
 import numpy as np
 
 from sta_prior.checks import FloatArray
-from sta_prior.prior.interface import Artifact, Moments
+from sta_prior.prior.interface import Artifact, Moments, time_scales_of
+from sta_prior.prior.time_scales import TimeScales
 from sta_prior.testing.case import PARTS, ROUNDING, Case, differ, lowest
 
 SHORT = 1e-3
@@ -42,7 +43,34 @@ def check_shapes(case: Case) -> bool:
                 raise case.fail(segment, f"{name} has values that are not finite numbers")
         if not (np.isfinite(artifact.time_constant) and artifact.time_constant >= 0.0):
             raise case.fail(segment, f"time_constant is {artifact.time_constant} s, expected 0 or more")
+        _check_time_scales(case, segment, artifact)
     return True
+
+
+def _check_time_scales(case: Case, segment: str, artifact: Artifact) -> None:
+    """Shares of a whole, slowest first; the one decay time that everything else reads is the slowest."""
+    own = getattr(artifact, "time_scales", None)
+    if own is not None and not isinstance(own, TimeScales):
+        raise case.fail(segment, f"time_scales is a {type(own).__name__}, expected TimeScales")
+    scales = time_scales_of(artifact)
+    constants, shares = scales.constants, scales.shares
+    if constants.shape != shares.shape or constants.shape not in ((1,), (2,)):
+        raise case.fail(
+            segment,
+            f"time_scales has constants of shape {constants.shape} and shares of shape {shares.shape}, "
+            "expected one or two of each",
+        )
+    shown = " and ".join(f"{constant:g}" for constant in constants)
+    if constants.size == 2 and not (constants[0] > constants[1] > 0.0):
+        raise case.fail(segment, f"decay times are {shown} s, expected the slowest first, all above 0")
+    if not ((shares > 0.0).all() and abs(float(shares.sum()) - 1.0) < ROUNDING):
+        shown = " and ".join(f"{share:g}" for share in shares)
+        raise case.fail(segment, f"shares of the decay times are {shown}, expected above 0 and of sum 1")
+    if artifact.time_constant != scales.slowest:
+        raise case.fail(
+            segment,
+            f"time_constant is {artifact.time_constant:g} s, the slowest decay time is {scales.slowest:g} s",
+        )
 
 
 def check_frames_alone(case: Case) -> bool:
