@@ -20,7 +20,7 @@ from sta_prior.errors import StaPriorError, message
 from sta_prior.prior import DEFAULT_FAMILY, known_families
 from sta_prior.prior.inputs import INPUTS
 from sta_prior.screen import Screen, check_target, warnings_as_notes
-from sta_prior.solve import DEFAULT_ESTIMATOR, ESTIMATORS
+from sta_prior.solve import CONSTANTS, DEFAULT_ESTIMATOR, ESTIMATORS
 
 app = typer.Typer(
     name="sta-prior",
@@ -161,6 +161,18 @@ def solve(
         str | None, typer.Option("--scheduler", metavar="ADDRESS", help="dask.distributed scheduler.")
     ] = None,
     resume: Annotated[bool, typer.Option("--resume", help="Keep solutions of the very same input.")] = False,
+    exclude_suspects: Annotated[
+        bool, typer.Option("--exclude-suspects", help="Solve without markers that do not fit the prior.")
+    ] = False,
+    constants: Annotated[
+        str,
+        typer.Option(
+            "--constants",
+            metavar="NAME",
+            help="What the smoother learns of the subject from the trial itself. "
+            f"One of: {', '.join(CONSTANTS)}.",
+        ),
+    ] = "bounded",
     quiet: Quiet = False,
     as_json: Json = False,
 ) -> None:
@@ -195,6 +207,8 @@ def solve(
                 workers,
                 scheduler,
                 resume,
+                constants,
+                exclude_suspects,
                 progress,
             )
         page = build_report(out)

@@ -41,6 +41,14 @@ class Job:
     prior: str | None
     personal: str | None
     resume: bool
+    constants: str = "bounded"
+    exclude_suspects: bool = False
+
+    @property
+    def options(self) -> str:
+        """Choices that a solution depends on beside its inputs and the estimator."""
+        words = [f"constants {self.constants}"] if self.constants != "bounded" else []
+        return ", ".join([*words, *(["suspects excluded"] if self.exclude_suspects else [])])
 
 
 @dataclass(frozen=True)
@@ -61,6 +69,7 @@ class Outcome:
     stop_reason: str = ""
     seconds: float = 0.0
     observability: str = ""
+    suspects: str = ""
     input_digest: str = ""
 
 
@@ -135,11 +144,13 @@ def _failure(job: Job, reason: str) -> Outcome:
 def _solve_and_write(job: Job) -> Outcome:
     inputs = inputs_of(job)
     trial = inputs.study.trial(job.subject, job.trial)
-    digests = input_digests(trial, inputs)
+    digests = {**input_digests(trial, inputs), "options": job.options}
     solution = _kept_solution(job, trial, digests) if job.resume else None
     status = "solved" if solution is None else "kept"
     if solution is None:
-        solution = solve(trial, inputs.prior, job.estimator, inputs.personal)
+        solution = solve(
+            trial, inputs.prior, job.estimator, inputs.personal, job.constants, job.exclude_suspects
+        )
         _refuse_empty(solution, trial)
         write_trial(Path(job.out), solution, trial, digests)
     determined = np.isfinite(solution["position"].values).all(axis=(1, 2))
@@ -156,6 +167,7 @@ def _solve_and_write(job: Job) -> Outcome:
         stop_reason=str(solution.attrs["stop_reason"]),
         seconds=float(solution.attrs["seconds"]),
         observability=str(solution.attrs["observability"]),
+        suspects=str(solution.attrs["suspects"]),
         input_digest=digests["skin"],
     )
 

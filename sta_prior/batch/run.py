@@ -23,7 +23,7 @@ from sta_prior.batch.job import Inputs, Job, Outcome, keep_inputs, read_inputs, 
 from sta_prior.batch.output import trial_files
 from sta_prior.errors import InputError, message
 from sta_prior.io.files import atomic_path, file_digest
-from sta_prior.solve import DEFAULT_ESTIMATOR, ESTIMATORS, WITH_PRIOR, solve
+from sta_prior.solve import CONSTANTS, DEFAULT_ESTIMATOR, ESTIMATORS, WITH_PRIOR, solve
 from sta_prior.study import Study, Trial
 
 LIBRARIES = ("numpy", "scipy", "xarray", "ezc3d")
@@ -53,6 +53,8 @@ def solve_study(
     workers: int = 1,
     scheduler: str | None = None,
     resume: bool = False,
+    constants: str = "bounded",
+    exclude_suspects: bool = False,
     progress: Callable[[Outcome], None] = lambda outcome: None,
 ) -> Run:
     """Solve every chosen trial of a study and write solutions, summary and run file.
@@ -65,6 +67,7 @@ def solve_study(
     workers : processes on this machine
     scheduler : address of a dask.distributed scheduler instead (extra ``cluster``)
     resume : keep solutions of the very same input
+    constants, exclude_suspects : as in `solve`
     progress : called with every outcome
 
     Returns
@@ -101,11 +104,17 @@ def solve_study(
             prior=prior_name,
             personal=personal_name,
             resume=resume,
+            constants=constants,
+            exclude_suspects=exclude_suspects,
         )
         for trial in chosen
     ]
-    if estimator not in ESTIMATORS or (estimator in WITH_PRIOR and inputs.prior is None):
-        solve(chosen[0], None, estimator)  # says so once, not once a trial
+    if (
+        estimator not in ESTIMATORS
+        or constants not in CONSTANTS
+        or (estimator in WITH_PRIOR and inputs.prior is None)
+    ):
+        solve(chosen[0], None, estimator, constants=constants)  # says so once, not once a trial
     outcomes: list[Outcome] = []
     try:
         with _backend(scheduler) as processes, _outcomes(jobs, processes or workers) as coming:
@@ -204,6 +213,7 @@ def _write_account(folder: Path, job: Job, outcomes: Sequence[Outcome], inputs: 
         "study": Path(job.study).name,
         "study_digest": file_digest(job.study),
         "estimator": job.estimator,
+        "options": job.options,
         "prior": Path(job.prior).name if job.prior else "",
         "prior_digest": inputs.prior_digest,
         "prior_notes": list(inputs.prior.notes) if inputs.prior is not None else [],

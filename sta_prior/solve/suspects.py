@@ -25,6 +25,7 @@ from sta_prior.solve.terms import (
     marker_term,
     precision_of_seen,
 )
+from sta_prior.study import Lab
 
 FALSE_ALARM = 0.01
 """Nominal chance that a trial of good markers has a suspect: shared among its markers. Subjects whose tissue
@@ -198,6 +199,18 @@ def _name_swap(
         replace(known_as.get(marker, found[0]), marker=marker, partner=partner)
         for marker, partner in (pair, pair[::-1])
     ]
+
+
+def name_suspects(suspects: list[Suspect], lab: Lab, excluded: bool = False) -> str:
+    """Suspects in words, worst first in each segment; empty where there is none."""
+    words = []
+    for item in suspects:
+        markers = lab.segments[item.segment].markers
+        why = f"{1000.0 * item.distance:.0f} mm from where the others put it"
+        if item.partner >= 0:
+            why = f"swapped with {markers[item.partner]}?"
+        words.append(f"{markers[item.marker]} ({why})")
+    return ", ".join(words) + (" [left out]" if words and excluded else "")
 
 
 def hide(segments: list[SegmentProblem], suspects: list[Suspect]) -> list[SegmentProblem]:

@@ -23,9 +23,10 @@ from sta_prior.prior.base import Binding, Prior
 from sta_prior.prior.inputs import TILT, VELOCITY, angle_changes
 from sta_prior.prior.interface import IsotropicArtifact
 from sta_prior.rigid import RigidFit
-from sta_prior.solve.frame import bridge, first_look, solve_frames
+from sta_prior.solve.frame import MARKER_SD, bridge, first_look, solve_frames
 from sta_prior.solve.observability import describe_observability
 from sta_prior.solve.posterior import SOURCES, FrameSolution
+from sta_prior.solve.suspects import Suspect, find_suspects, hide, name_suspects
 from sta_prior.solve.terms import Gravity, JointProblem, SegmentProblem
 from sta_prior.solve.timeline import even_grid, on_grid
 from sta_prior.solve.trajectory_posterior import CONSTANTS, Constants, solve_trajectory
@@ -52,6 +53,7 @@ def solve(
     estimator: str = DEFAULT_ESTIMATOR,
     personal: xr.Dataset | None = None,
     constants: str = "bounded",
+    exclude_suspects: bool = False,
 ) -> xr.Dataset:
     """Solve one skin trial. Bone truth in the study, if any, is never read here.
 
@@ -65,6 +67,7 @@ def solve(
     personal : paired data with frames of the trial's own subject
     constants : what the smoother learns of the subject's own deviation from the trial: "bounded", "full" or
         "none", see `solve_trajectory`
+    exclude_suspects : solve without the markers that do not fit the prior; they are named in any case
 
     Returns
     -------
@@ -86,7 +89,7 @@ def solve(
                 "Give --prior, or use --estimator rigid or linked.",
             )
         )
-    reference = trial.subject.reference()
+    lab, reference = trial.subject.lab, trial.subject.reference()
     skin = trial.skin()
     points = skin["position"].values
     binding = prior.bind(trial, personal) if prior is not None and estimator in WITH_PRIOR else None
@@ -95,6 +98,13 @@ def solve(
     count = len(segments)
     rigid_poses, fits = first_look(segments, count)
     notes = _reference_notes(trial, points, reference)
+    suspects: list[Suspect] = []
+    if binding is not None:
+        suspects = find_suspects(segments, joints, bridge(rigid_poses, joints), MARKER_SD)
+        _warn_of_suspects(trial, suspects, exclude_suspects)
+    if suspects and exclude_suspects:
+        segments = hide(segments, suspects)
+        rigid_poses, fits = first_look(segments, count)
     if estimator == "rigid":
         result = _rigid_solution(segments, joints, rigid_poses, fits)
     else:
@@ -117,8 +127,8 @@ def solve(
             "seconds": round(time.perf_counter() - started, 3),
             "prior_digest": prior.digest if binding is not None and prior is not None else "",
             "input_digest": trial.digest(),
-            "observability": describe_observability(segments, result.determined, trial.subject.lab),
-            "suspects": "",
+            "observability": describe_observability(segments, result.determined, lab),
+            "suspects": name_suspects(suspects, lab, exclude_suspects),
             "reference_notes": "; ".join([*reference.notes, *notes]),
             "belief": binding.basis_of_belief if binding is not None else "no prior",
             "covariance": "posterior" if estimator in WITH_PRIOR else SCATTER,
@@ -262,6 +272,17 @@ def _reference_notes(trial: Trial, points: FloatArray, reference: Reference) -> 
                 stacklevel=4,
             )
     return notes
+
+
+def _warn_of_suspects(trial: Trial, suspects: list[Suspect], excluded: bool) -> None:
+    if suspects:
+        words = name_suspects(suspects, trial.subject.lab, excluded)
+        advice = "Solved without." if excluded else "Look at them; --exclude-suspects solves without."
+        warnings.warn(
+            message((trial.subject.id, trial.id), f"markers do not fit the prior: {words}", advice),
+            StaPriorWarning,
+            stacklevel=4,
+        )
 
 
 def _warn_of_gimbal(trial: Trial, poses: FloatArray) -> None:
