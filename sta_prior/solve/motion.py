@@ -20,6 +20,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from filterpy.common import Q_continuous_white_noise
@@ -50,7 +51,7 @@ class MotionPrior:
     step: float
     density: FloatArray
 
-    @property
+    @cached_property
     def transition(self) -> FloatArray:
         """Φ of one component, (order, order)."""
         result = np.eye(self.order)
@@ -59,77 +60,11 @@ class MotionPrior:
                 result[row, column] = self.step ** (column - row) / math.factorial(column - row)
         return result
 
-    @property
-    def noise(self) -> FloatArray:
-        """Q of one component for unit density, (order, order)."""
-        return np.asarray(Q_continuous_white_noise(dim=self.order, dt=self.step), dtype=np.float64)
-
-    @property
+    @cached_property
     def precision(self) -> FloatArray:
-        """Inverse covariance of e, (6·order, 6·order), component by component within each derivative."""
-        return np.asarray(np.kron(np.linalg.inv(self.noise), np.diag(1.0 / self.density)))
-
-
-def bracket(tangent: FloatArray) -> FloatArray:
-    """Matrix ad(ξ) of the Lie bracket of rigid motions, shape (..., 6, 6)."""
-    result = np.zeros((*tangent.shape, 6))
-    rotation = se3.skew(tangent[..., :3])
-    result[..., :3, :3] = rotation
-    result[..., 3:, 3:] = rotation
-    result[..., 3:, :3] = se3.skew(tangent[..., 3:])
-    return result
-
-
-@dataclass(frozen=True)
-class MotionTerm:
-    """Innovations of one segment over F − 1 steps and their derivatives in its own state.
-
-    residual: (F − 1, 6·order); before, after: (F − 1, 6·order, 6·order), derivative in the state at the
-    step's start and end (pose, velocity, …).
-    """
-
-    residual: FloatArray
-    before: FloatArray
-    after: FloatArray
-
-
-def motion_term(prior: MotionPrior, poses: FloatArray, rates: FloatArray) -> MotionTerm:
-    """Innovations at given states.
-
-    Parameters
-    ----------
-    prior : of the segment
-    poses : shape (F, 4, 4), lab ← bone
-    rates : shape (F, order − 1, 6), rad/s, m/s (and rad/s², m/s²), bone axes
-    """
-    order = prior.order
-    step = se3.log(se3.inverse(poses[:-1]) @ poses[1:])
-    right = se3.right_jacobian_inverse(step)
-    left = se3.left_jacobian_inverse(step)
-    count = step.shape[0]
-    local = np.zeros((count, order, 6))
-    local[:, 0] = step
-    local[:, 1:] = np.einsum("fab,fkb->fka", right, rates[1:])
-    start = np.concatenate([np.zeros((count, 1, 6)), rates[:-1]], axis=1)
-    transition = prior.transition
-    residual = local - np.einsum("ij,fja->fia", transition, start)
-    before = np.zeros((count, order, 6, order, 6))
-    after = np.zeros_like(before)
-    before[:, 0, :, 0] = -left
-    after[:, 0, :, 0] = right
-    for row in range(order):
-        for column in range(1, order):
-            before[:, row, :, column] -= transition[row, column] * np.eye(6)
-    for row in range(1, order):
-        after[:, row, :, row] = right
-        # J_r(ξ)⁻¹ ≈ 1 + ad(ξ)/2: over one step the rest is below rounding of what moves.
-        half = -0.5 * bracket(rates[1:, row - 1])
-        before[:, row, :, 0] += -half @ left
-        after[:, row, :, 0] += half @ right
-    size = 6 * order
-    return MotionTerm(
-        residual.reshape(count, size), before.reshape(count, size, size), after.reshape(count, size, size)
-    )
+        """Inverse of Q of one component for unit density, (order, order)."""
+        noise = np.asarray(Q_continuous_white_noise(dim=self.order, dt=self.step), dtype=np.float64)
+        return np.asarray(np.linalg.inv(noise))
 
 
 def estimate_density(poses: FloatArray, step: float) -> FloatArray:

@@ -10,12 +10,12 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from sta_prior import se3
 from sta_prior.checks import BoolArray, FloatArray, IntArray
 from sta_prior.prior.interface import design_of
-from sta_prior.rigid import marker_jacobian
+from sta_prior.solve import span_kernels as kernels
 from sta_prior.solve.chain import Span
-from sta_prior.solve.motion import motion_term
+from sta_prior.solve.chain_kernels import LETTERS, NUMBERS
+from sta_prior.solve.motion_kernels import add_motion
 from sta_prior.solve.terms import BALL_JOINT_SD, angles_and_jacobians, drive, joint_travel
 from sta_prior.solve.trajectory import (
     JOINT_TIME,
@@ -36,43 +36,40 @@ class Rows:
     """A chain of correlated residuals over the frames of a span and one to either side.
 
     residual: (F, n) e; jacobian: (F, n, m) in the first m unknowns of the frame; through: (F, n, m), the part
-    of it that the prior's mean makes, 0 for a joint; constant: (F, n, k) in the constants at ``at`` (k,);
-    decay: (F,) ρ towards the frame before, 0 where the chain begins; whitener: L with L Q Lᵀ = 1 for the
-    innovations' covariance Q, (1, n, n) or (F, n, n); active: (F,).
+    of it that the prior's mean makes, 0 for a joint; moved: (F, n, k), derivative of the whitened innovations
+    in the constants at ``at``; decay: (F,) ρ towards the frame before, 0 where the chain begins; whiteners: L
+    with L Q Lᵀ = 1 for the innovations' covariance Q, (U, n, n); which: (F,), the frame's, −1 for no rows.
     """
 
     residual: FloatArray
     jacobian: FloatArray
     through: FloatArray | None
-    constant: FloatArray
-    at: IntArray
+    moved: FloatArray
+    at: slice
     decay: FloatArray
-    whitener: FloatArray
-    active: BoolArray
+    whiteners: FloatArray
+    which: IntArray
+
+    @property
+    def white(self) -> FloatArray:
+        """Whitened innovations, (F, n)."""
+        result = np.empty_like(self.residual)
+        kernels.innovations(self.residual, self.decay, self.whiteners, self.which, result)
+        return result
 
     def whitened(self) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
         """Innovations (F, n), their derivatives in the frame's unknowns, in those before, in the constants.
 
         The first frame of the rows has nothing before it here and counts as the beginning of a chain.
         """
-        factor = self.whitener * self.active[:, None, None]
-        decay = self.kept_decay
-        residual, constant = self.residual.copy(), self.constant.copy()
-        residual[1:] -= decay[1:, :, 0] * self.residual[:-1]
-        constant[1:] -= decay[1:] * self.constant[:-1]
         now, past = self.derivatives(self.jacobian)
-        return np.einsum("fab,fb->fa", factor, residual), now, past, factor @ constant
-
-    @property
-    def kept_decay(self) -> FloatArray:
-        """Decay where there are rows, (F, 1, 1)."""
-        return np.where(self.active, self.decay, 0.0)[:, None, None]
+        return self.white, now, past, self.moved
 
     def derivatives(self, jacobian: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Whitened derivatives (F, n, m) in the frame's unknowns and, sign turned, in those before."""
-        factor = self.whitener * self.active[:, None, None]
+        factor = self.whiteners[self.which] * (self.which >= 0)[:, None, None]
         past = np.zeros_like(jacobian)
-        past[1:] = self.kept_decay[1:] * (factor[1:] @ jacobian[:-1])
+        past[1:] = self.decay[1:, None, None] * (factor[1:] @ jacobian[:-1])
         return factor @ jacobian, past
 
 
@@ -81,6 +78,41 @@ def whitener(covariance: FloatArray) -> FloatArray:
     factor = np.linalg.cholesky(covariance)
     identity = np.broadcast_to(np.eye(covariance.shape[-1]), covariance.shape)
     return np.asarray(np.linalg.solve(factor, identity))
+
+
+def moved_by(
+    features: FloatArray,
+    modes: FloatArray,
+    decay: FloatArray,
+    whiteners: FloatArray,
+    which: IntArray,
+    hidden: BoolArray,
+) -> FloatArray:
+    """Derivative of the whitened innovations in the constants, (F, n, k); arguments as `Rows` has them.
+
+    Where nothing is hidden and a whitener serves many frames, the features are prewhitened instead of the
+    outputs, and the modes whitened once. Else frame by frame; a hidden output does not feel the constants.
+    """
+    (count, size), (outputs, constants) = features.shape, modes.shape[1:]
+    innovation = features.copy()
+    innovation[1:] -= decay[1:, None] * features[:-1]
+    result = np.zeros((count, outputs, constants))
+    apart = hidden.any(axis=1)
+    apart[1:] |= apart[:-1] & (decay[1:] > 0.0)
+    alone = len(whiteners) == count
+    for kind, factor in enumerate(() if alone else whiteners):
+        turned = (-factor @ modes).reshape(size, outputs * constants)
+        frames = (which == kind) & ~apart
+        if frames.all():
+            return np.asarray((innovation @ turned).reshape(result.shape))
+        result[frames] = (innovation[frames] @ turned).reshape(-1, outputs, constants)
+    frames = (which >= 0) & (apart | alone)
+    if frames.any():
+        flat = modes.reshape(size, -1)
+        felt = (features @ flat).reshape(result.shape) * ~hidden[..., None]
+        felt[1:] -= decay[1:, None, None] * felt[:-1].copy()
+        result[frames] = -whiteners[which[frames]] @ felt[frames]
+    return result
 
 
 @dataclass(frozen=True)
@@ -159,28 +191,15 @@ class TrajectorySystem:
         return rows
 
     def _add(self, span: Span, part: Part, rows: Rows) -> None:
-        white, now, past, moved = rows.whitened()
-        own, after = part.own, part.after
-        follow = after.stop - after.start
+        white, own = rows.white, part.own
         self.cost += 0.5 * float((white[own] ** 2).sum())
-        width = rows.jacobian.shape[-1]
-        later, earlier = np.swapaxes(now[own], 1, 2), np.swapaxes(past[after], 1, 2)
-        block = later @ now[own]
-        block[:follow] += earlier @ past[after]
-        span.diagonal[:, :width, :width] += block
-        span.lower[:follow, :width, :width] -= np.swapaxes(now[after], 1, 2) @ past[after]
-        pull = np.einsum("fnp,fn->fp", now[own], white[own])
-        pull[:follow] -= np.einsum("fnp,fn->fp", past[after], white[after])
-        span.gradient[:, :width] += pull
-        if not rows.at.size:
-            return
-        mixed = later @ moved[own]
-        mixed[:follow] -= earlier @ moved[after]
-        span.coupling[:, :width, rows.at] += mixed
-        flat = moved[own].reshape(-1, rows.at.size)
+        room = kernels.room(rows.jacobian.shape[1:], rows.moved.shape[2], span.coupling.shape[1:])
+        chain = (rows.jacobian, white, rows.moved, rows.decay, rows.whiteners, rows.which)
+        kernels.add_rows(*chain, own.start, rows.at.start, *span[:4], *room, LETTERS, NUMBERS)
         assert span.constants_information is not None
         assert span.constants_gradient is not None
-        span.constants_information[np.ix_(rows.at, rows.at)] += flat.T @ flat
+        flat = rows.moved[own].reshape(-1, rows.moved.shape[2])
+        span.constants_information[rows.at, rows.at] += flat.T @ flat
         span.constants_gradient[rows.at] += flat.T @ white[own].reshape(-1)
 
     def _markers(self, index: int, part: Part, angles: FloatArray, angle_jacobian: FloatArray) -> Rows:
@@ -189,51 +208,42 @@ class TrajectorySystem:
         segment, modes = problem.segments[index], problem.modes[index].modes
         changes = None if segment.changes is None else segment.changes[frames]
         segment = replace(segment, points=segment.points[frames], changes=changes)
-        poses = state.poses[frames]
-        count, markers = segment.points.shape[:2]
-        n, at = 3 * markers, problem.constant_slices[index]
+        poses, at = state.poses[frames], problem.constant_slices[index]
         inputs, input_jacobian = drive(segment, poses, angles, angle_jacobian)
         design = design_of(segment.artifact, inputs)
         weights = modes @ state.constants[at]
-        points_bone = se3.transform_points(se3.inverse(poses[:, segment.index]), segment.points)
-        residual = (points_bone - segment.reference).reshape(count, n)
-        residual = residual - design.mean - design.features @ weights
-        slope = design.mean_derivative
-        if weights.size:
-            slope = slope + np.einsum("fkjd,kn->fnjd", design.feature_derivative, weights, optimize=True)
-        width = input_jacobian.shape[-1]
-        through = np.zeros((count, n, width + self.hidden.count))
-        through[..., :width] = -slope.reshape(count, n, -1) @ input_jacobian.reshape(count, -1, width)
-        jacobian, first = through.copy(), 6 * segment.index
-        place_of = np.nan_to_num(points_bone)
-        if self.expected:
-            mean = design.mean + design.features @ weights
-            place_of = segment.reference + mean.reshape(count, markers, 3)
-        jacobian[..., first : first + 6] -= marker_jacobian(place_of)
-        constant = -(design.features @ modes.reshape(modes.shape[0], -1)).reshape(count, n, -1)
-        place = self.hidden.column[index][frames]
-        at_frame, at_output = np.nonzero(place >= 0)
-        slots = place[at_frame, at_output]
-        jacobian[at_frame, at_output] = through[at_frame, at_output] = 0.0
-        constant[at_frame, at_output] = 0.0
-        jacobian[at_frame, at_output, width + slots] = 1.0
-        residual[at_frame, at_output] = state.hidden[frames][at_frame, slots]
-        active = self.hidden.active[index][frames]
-        residual[~active] = 0.0
-        decay = np.where(self.hidden.restart[index][frames], 0.0, problem.decay(index))
-        return Rows(
-            residual=residual,
-            jacobian=jacobian,
-            through=through,
-            constant=constant,
-            at=np.arange(at.start, at.stop),
-            decay=decay,
-            whitener=self._marker_whitener(index, decay, design.growth),
-            active=active,
+        count, n, width = *design.mean.shape, input_jacobian.shape[-1]
+        place, active = self.hidden.column[index][frames], self.hidden.active[index][frames]
+        residual, jacobian = np.zeros((count, n)), np.zeros((count, n, width + self.hidden.count))
+        through = np.zeros_like(jacobian)
+        kernels.marker_rows(
+            np.ascontiguousarray(poses[:, segment.index]),
+            np.ascontiguousarray(segment.points),
+            segment.reference,
+            design.mean + design.features @ weights,
+            np.ascontiguousarray(design.mean_derivative.reshape(count, n, -1)),
+            np.ascontiguousarray(design.feature_derivative.reshape(count, modes.shape[0], -1)),
+            weights,
+            np.ascontiguousarray(input_jacobian.reshape(count, -1, width)),
+            place,
+            state.hidden[frames],
+            active,
+            6 * segment.index,
+            self.expected,
+            residual,
+            jacobian,
+            through,
         )
+        decay = np.where(self.hidden.restart[index][frames], 0.0, problem.decay(index))
+        whiteners, which = self._marker_whiteners(index, decay, design.growth)
+        which, decay = np.where(active, which, -1), np.where(active, decay, 0.0)
+        moved = moved_by(design.features, modes, decay, whiteners, which, place >= 0)
+        return Rows(residual, jacobian, through, moved, at, decay, whiteners, which)
 
-    def _marker_whitener(self, index: int, decay: FloatArray, growth: FloatArray | None) -> FloatArray:
-        """Of the innovations at frames with the given decay, (F, n, n), or (1, n, n) where all are alike."""
+    def _marker_whiteners(
+        self, index: int, decay: FloatArray, growth: FloatArray | None
+    ) -> tuple[FloatArray, IntArray]:
+        """Of the innovations at frames with the given decay, (U, n, n), and which is whose, (F,)."""
         spread = self.problem.segments[index].artifact.residual + self.problem.modes[index].rest
         noise = self.problem.marker_sd**2 * np.eye(spread.shape[0])
 
@@ -242,58 +252,53 @@ class TrajectorySystem:
             return np.asarray((1.0 - square) * grown + (1.0 + square) * noise)
 
         if growth is not None:
-            return whitener(innovation(decay, spread + growth))
+            return whitener(innovation(decay, spread + growth)), np.arange(decay.size)
         values, which = np.unique(decay, return_inverse=True)
-        factors = whitener(innovation(values, np.broadcast_to(spread, (values.size, *spread.shape))))
-        return factors if values.size == 1 else factors[which]
+        return whitener(innovation(values, np.broadcast_to(spread, (values.size, *spread.shape)))), which
 
     def _joint(self, index: int, own: slice, part: Part, poses: FloatArray) -> Rows:
         """Travel of one joint centre about its constant offset."""
         joint = self.problem.joints[index]
         sd = max(joint.travel_sd, BALL_JOINT_SD)
         travel, slope = joint_travel(joint, poses)
-        frames = travel.shape[0]
         begins = np.arange(part.first, part.last) == 0
-        decay = np.where(begins, 0.0, np.exp(-self.problem.step / JOINT_TIME))
-        offset, left = np.sqrt(OFFSET_SHARE) * sd, np.sqrt((1.0 - OFFSET_SHARE) * (1.0 - decay**2)) * sd
+        decays = np.array([np.exp(-self.problem.step / JOINT_TIME), 0.0])
+        offset, left = np.sqrt(OFFSET_SHARE) * sd, np.sqrt((1.0 - OFFSET_SHARE) * (1.0 - decays**2)) * sd
+        which = begins.astype(np.int64)
+        # An offset that stays moves an innovation by 1 − ρ of itself.
+        share = -offset * (1.0 - decays) / left
         return Rows(
             residual=travel - offset * self.state.constants[own],
             jacobian=slope,
             through=None,
-            constant=np.broadcast_to(-offset * np.eye(3), (frames, 3, 3)),
-            at=np.arange(own.start, own.stop),
-            decay=decay,
-            whitener=np.eye(3) / left[:, None, None],
-            active=np.ones(frames, dtype=bool),
+            moved=share[which, None, None] * np.eye(3),
+            at=own,
+            decay=decays[which],
+            whiteners=np.eye(3) / left[:, None, None],
+            which=which,
         )
 
     def _add_motion(self, span: Span, part: Part) -> None:
+        """Motion priors of all segments, and what holds the first rates and the unknowns without rows."""
         problem, state = self.problem, self.state
         self._hold(span, part)
         for index, motion in enumerate(problem.motions):
             at = problem.state(index, self.hidden.count)
             if part.start == 0:
                 self._begin(span, index, at)
-            frames = slice(part.first, part.last)
-            if part.last - part.first < 2:
-                continue
-            term = motion_term(motion, state.poses[frames, index], state.rates[frames, index])
-            precision = motion.precision
-            pull = term.residual @ precision
-            # Step i leads from local frame i to i + 1: into the span's frames, and out of them.
-            into = slice(max(part.own.start - 1, 0), part.own.stop - 1)
-            out = slice(part.own.start, part.after.stop - 1)
-            follow, lead = out.stop - out.start, part.own.stop - part.own.start - (into.stop - into.start)
-            self.cost += 0.5 * float((pull[into] * term.residual[into]).sum())
-            grid = np.ix_(at, at)
-            turned = np.swapaxes(term.after[into], 1, 2)
-            span.diagonal[lead:, grid[0], grid[1]] += turned @ (precision @ term.after[into])
-            span.gradient[lead:, at] += np.einsum("fab,fa->fb", term.after[into], pull[into])
-            turned = np.swapaxes(term.before[out], 1, 2)
-            weighed = precision @ term.before[out]
-            span.diagonal[:follow, grid[0], grid[1]] += turned @ weighed
-            span.gradient[:follow, at] += np.einsum("fab,fa->fb", term.before[out], pull[out])
-            span.lower[:follow, grid[0], grid[1]] += np.swapaxes(term.after[out], 1, 2) @ weighed
+            self.cost += add_motion(
+                np.ascontiguousarray(state.poses[part.frames, index]),
+                np.ascontiguousarray(state.rates[part.frames, index]),
+                motion.transition,
+                motion.precision,
+                1.0 / motion.density,
+                part.own.start,
+                int(at[0]),
+                int(at[6]),
+                span.diagonal,
+                span.lower,
+                span.gradient,
+            )
 
     def _begin(self, span: Span, index: int, at: IntArray) -> None:
         """Prior of the rates in the first frame: says nothing, but lets a single frame have an answer."""
