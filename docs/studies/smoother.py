@@ -4,9 +4,9 @@
     python docs/studies/smoother.py durations --populations 3
     python docs/studies/smoother.py mismatch --populations 2
 
-One population: a prior from nine imaged subjects; trials of eight archived ones, solved by several estimators. The
-artifact is that of simulate/mechanisms.py, which no family of priors contains, or the simpler `drives`. Results:
-docs/smoother.md.
+One population: a prior from nine imaged subjects; trials of eight archived ones, solved by several
+estimators. The artifact is that of simulate/mechanisms.py, which no family of priors contains, or the simpler
+`drives`. Results: docs/smoother.md.
 """
 
 from __future__ import annotations
@@ -144,8 +144,9 @@ def long_walks(seed: int, mechanism: str, duration: float) -> list[SimulatedSubj
 
 
 HEAD = (
-    "| {} | estimator | knee error, degrees | against rigid | all three | position, mm (thigh / shank) | thigh against "
-    "rigid | angles covered at 90 % | pose components, lowest–highest | normalised error | frames in conflict |"
+    "| {} | estimator | knee error, degrees | against rigid | all three | position, mm (thigh / shank) "
+    "| thigh against rigid | angles covered at 90 % | pose components, lowest–highest | normalised error "
+    "| frames in conflict |"
 )
 RULE = "|" + "---|" * 11
 

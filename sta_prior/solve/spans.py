@@ -97,7 +97,7 @@ def moved_by(
     innovation = features.copy()
     innovation[1:] -= decay[1:, None] * features[:-1]
     result = np.zeros((count, outputs, constants))
-    apart = hidden.any(axis=1)
+    apart: BoolArray = np.asarray(hidden.any(axis=1))
     apart[1:] |= apart[:-1] & (decay[1:] > 0.0)
     alone = len(whiteners) == count
     for kind, factor in enumerate(() if alone else whiteners):
@@ -108,7 +108,7 @@ def moved_by(
         result[frames] = (innovation[frames] @ turned).reshape(-1, outputs, constants)
     frames = (which >= 0) & (apart | alone)
     if frames.any():
-        flat = modes.reshape(size, -1)
+        flat = modes.reshape(size, outputs * constants)
         felt = (features @ flat).reshape(result.shape) * ~hidden[..., None]
         felt[1:] -= decay[1:, None, None] * felt[:-1].copy()
         result[frames] = -whiteners[which[frames]] @ felt[frames]
@@ -222,7 +222,9 @@ class TrajectorySystem:
             segment.reference,
             design.mean + design.features @ weights,
             np.ascontiguousarray(design.mean_derivative.reshape(count, n, -1)),
-            np.ascontiguousarray(design.feature_derivative.reshape(count, modes.shape[0], -1)),
+            np.ascontiguousarray(
+                design.feature_derivative.reshape(count, modes.shape[0], 3 * inputs.shape[1])
+            ),
             weights,
             np.ascontiguousarray(input_jacobian.reshape(count, -1, width)),
             place,
