@@ -24,6 +24,8 @@ from functools import cached_property
 import numpy as np
 from scipy.interpolate import CubicSpline
 from scipy.optimize import minimize
+from scipy.special import ndtr
+from scipy.stats import t as student
 
 from sta_prior.checks import BoolArray, FloatArray, IntArray
 from sta_prior.prior.time_scales import LONGEST_TIME_CONSTANT, SHORTEST_TIME_CONSTANT, TimeScales
@@ -35,7 +37,10 @@ SMALLEST_SHARE = 0.05
 """Of either of two scales: less is not worth a scale of its own."""
 
 SMALLEST_LAG_SHARE = 1.0 / 3.0
-"""Fast decay time against the time step, at least: what is down to e⁻³ at the first lag looks white."""
+"""Decay time against the time step, at least: what is down to e⁻³ at the first lag looks white."""
+
+ONE_SIGMA = float(ndtr(1.0))
+"""Probability below one standard deviation above the mean, 84 %."""
 
 GRID = np.geomspace(SHORTEST_TIME_CONSTANT, LONGEST_TIME_CONSTANT, 9)
 """Decay times, s, at which the loss by the fit is worked out; a spline in their logarithm joins them."""
@@ -81,7 +86,7 @@ class LagProducts:
 
     @property
     def fastest(self) -> float:
-        """Log of the fastest decay time of two that can be told from white noise."""
+        """Log of the fastest decay time that can be told from white noise."""
         return float(np.log(max(SHORTEST_TIME_CONSTANT, SMALLEST_LAG_SHARE * self.step)))
 
     @cached_property
@@ -185,8 +190,8 @@ def _fit(sums: LagProducts, scales: int, starts: Sequence[Sequence[float] | Floa
     return min(fits, key=lambda fit: fit[0])[1]
 
 
-def _better(sums: LagProducts, richer: FloatArray, plainer: FloatArray) -> bool:
-    """Whether units left out prefer the richer of two models, by more than the standard error over units."""
+def _gains(sums: LagProducts, richer: FloatArray, plainer: FloatArray) -> FloatArray:
+    """How much better the richer of two models predicts each unit, left out, (units,), log likelihood."""
     gains = []
     for unit in np.unique(sums.unit):
         left_out, others = sums.chosen(sums.unit == unit), sums.chosen(sums.unit != unit)
@@ -195,8 +200,7 @@ def _better(sums: LagProducts, richer: FloatArray, plainer: FloatArray) -> bool:
             own = _fit(others, whole.size // 2, [whole]) if whole.size else whole
             scores.append(float(_scores(left_out, own)[0].sum()))
         gains.append(scores[0] - scores[1])
-    mean, error = np.mean(gains), np.std(gains, ddof=1) / np.sqrt(len(gains))
-    return bool(mean > error)
+    return np.array(gains)
 
 
 def choose_time_scales(sums: LagProducts) -> TimeScales:
@@ -215,15 +219,17 @@ def choose_time_scales(sums: LagProducts) -> TimeScales:
     -----
     Each number of scales is fitted by the Gaussian composite likelihood of pairs of frames, a unit left out
     at a time, and the unit is scored. The richer model is taken where its mean gain exceeds the standard
-    error of that gain over units. Not the standard error of the scores: they differ far more between subjects
-    than the models do within one. With fewer than two units nothing can be left out: one scale.
+    error of that gain over units (times 1.84 for two units, 1.07 for nine: Student's t at the level of one
+    normal deviate). Not the standard error of the scores: they differ far more between subjects than the
+    models do within one. With fewer than two units nothing can be left out: one scale.
     """
     longest, none = TimeScales.single(LONGEST_TIME_CONSTANT), np.zeros(0)
     if not sums.count.sum():
         return longest
     several = np.unique(sums.unit).size > 1
     one = _fit(sums, 1, _STARTS[1])
-    if one[-1] > 1.0 - SMALLEST_SHARE or (several and not _better(sums, one, none)):
+    looks_white = one[0] <= sums.fastest or one[-1] > 1.0 - SMALLEST_SHARE
+    if looks_white or (several and _gains(sums, one, none).sum() <= 0.0):
         return longest
     plain = TimeScales.single(float(np.exp(one[0])))
     if not several or sums.fastest > np.log(LARGEST_RATIO * LONGEST_TIME_CONSTANT):
@@ -234,7 +240,10 @@ def choose_time_scales(sums: LagProducts) -> TimeScales:
     edge = 1e-3
     if between < edge or not SMALLEST_SHARE + edge < share < 1.0 - SMALLEST_SHARE - edge:
         return plain
-    if not _better(sums, two, one):
+    gains = _gains(sums, two, one)
+    error = float(np.std(gains, ddof=1)) / np.sqrt(gains.size)
+    # The error itself is badly known from few units: Student's t at the level of one normal deviate.
+    if gains.mean() <= student.ppf(ONE_SIGMA, gains.size - 1) * error:
         return plain
     fast = sums.fastest + between * (slow + np.log(LARGEST_RATIO) - sums.fastest)
     return TimeScales(np.exp([slow, fast]), np.array([share, 1.0 - share]))
