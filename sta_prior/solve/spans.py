@@ -198,6 +198,8 @@ class TrajectorySystem:
         kernels.add_rows(*chain, own.start, rows.at.start, *span[:4], *room, LETTERS, NUMBERS)
         assert span.constants_information is not None
         assert span.constants_gradient is not None
+        if not rows.moved.shape[2]:
+            return
         flat = rows.moved[own].reshape(-1, rows.moved.shape[2])
         span.constants_information[rows.at, rows.at] += flat.T @ flat
         span.constants_gradient[rows.at] += flat.T @ white[own].reshape(-1)
