@@ -269,14 +269,13 @@ def _maximise(state: State, prior: _Prior, moments: Moments, counted: float, set
         if at_trials and not settings.trial_level:
             found.append(np.zeros_like(state.trial))
             continue
-        moment = np.einsum("unk,unl->kl", mean, mean, optimize=True) + around.covariance.sum(axis=(0, 1))
+        moment = np.einsum("unk,unl->kl", mean, mean, optimize=True) + around.total()
         moment += pseudo * n * agreement * prior.features
         units = len(mean) + pseudo
         features = _shrink(symmetrise(moment / (n * units)), settings.feature_shrinkage)
         precision, rank = _inverse_on_range(features)
         shared += np.einsum("unk,kl,uml->nm", mean, precision, mean, optimize=True)
-        own = np.einsum("unkl,kl->un", around.covariance, precision)
-        shared += ((around.axes * own[:, None]) @ np.swapaxes(around.axes, -1, -2)).sum(axis=0)
+        shared += around.along(precision)
         weak += pseudo * float(np.trace(precision @ prior.features)) * prior.outputs
         weight += rank * units
         found.append(features)
