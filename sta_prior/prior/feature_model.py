@@ -30,9 +30,10 @@ from sta_prior.prior.hierarchy import (
 from sta_prior.prior.linear import flexion_reaches, linear_basis
 from sta_prior.prior.other_models import beyond_data
 from sta_prior.prior.reduced_rank import reduced_rank_basis
+from sta_prior.prior.shrinkage import USUAL, Shrinkage, choose_shrinkage
 from sta_prior.prior.statistics import SegmentFrames, estimate_time_constant, summarise
 
-REFIT = FitSettings(maximum_iterations=10)
+REFIT = FitSettings(maximum_iterations=20)
 
 
 @dataclass(frozen=True)
@@ -40,7 +41,7 @@ class FeatureModel:
     """Learned weights of features, with subject and trial levels.
 
     trials: sufficient statistics of what was learned from; time_constant: s; magnitude: (n, n) m², what the
-    covariance gains far beyond the training data.
+    covariance gains far beyond the training data; shrinkage: of deviations towards independence.
     """
 
     name: str
@@ -52,6 +53,7 @@ class FeatureModel:
     time_constant: float
     magnitude: FloatArray
     inflation: float = 1.0
+    shrinkage: Shrinkage = USUAL
 
     def knows(self, subject: str) -> bool:
         """Whether it learned from this subject."""
@@ -62,14 +64,14 @@ class FeatureModel:
         return replace(self, inflation=inflation)
 
     def refitted(self, frames: Sequence[SegmentFrames]) -> FeatureModel:
-        """Fit the hierarchy to other frames, from where it stood; basis and time constant are kept."""
+        """Fit the hierarchy to other frames, from where it stood; all else that was learned is kept."""
         trials = tuple(summarise(item, self.basis) for item in frames)
         hierarchy = fit_hierarchy(
             list(trials),
             self.basis.relative_variance,
             self.basis.total_relative_variance,
             self.hierarchy,
-            REFIT,
+            self.shrinkage.settings(REFIT),
         )
         return replace(self, hierarchy=hierarchy, trials=trials)
 
@@ -123,7 +125,7 @@ class FeatureModel:
         return (
             f"residual {residual:.1f} mm SD per axis, decay time {self.time_constant:.3f} s; "
             + "".join(f"{gain.words(name)}; " for gain, name in zip(gains, names, strict=True))
-            + f"fit: {self.hierarchy.stop_reason}"
+            + f"{self.shrinkage.words}; fit: {self.hierarchy.stop_reason}"
         )
 
     def variables(self) -> dict[str, Variable]:
@@ -160,6 +162,8 @@ class FeatureModel:
             "stop_reason": Variable((), np.array(fit.stop_reason)),
             "time_constant": Variable((), np.array(self.time_constant), "s"),
             "magnitude": Variable(outputs, self.magnitude, "m2"),
+            "shrinkage": Variable(("strength",), np.array([self.shrinkage.features, self.shrinkage.outputs])),
+            "shrinkage_reason": Variable((), np.array(self.shrinkage.reason)),
             "block_seen": Variable(("block", "output"), stack("seen").astype(np.int8)),
             "block_feature_gram": Variable(("block", *features), stack("feature_gram")),
             "block_cross": Variable(("block", "feature", "output"), stack("cross"), "m"),
@@ -186,7 +190,12 @@ class FeatureFamily:
         basis = orthonormal(self.basis(data.adjacent, angles, references), angles, references)
         constant = estimate_time_constant(list(data.frames), basis)
         trials = tuple(summarise(item, basis) for item in data.frames)
-        hierarchy = fit_hierarchy(list(trials), basis.relative_variance, basis.total_relative_variance)
+        given = (list(trials), basis.relative_variance, basis.total_relative_variance)
+        hierarchy = fit_hierarchy(*given)
+        shrinkage = choose_shrinkage(*given, hierarchy)
+        settings = shrinkage.settings(FitSettings())
+        if settings != FitSettings():
+            hierarchy = fit_hierarchy(*given, settings=settings)
         return FeatureModel(
             name=data.name,
             markers=data.markers,
@@ -196,6 +205,7 @@ class FeatureFamily:
             trials=trials,
             time_constant=constant,
             magnitude=beyond_data(data.name, data.layout),
+            shrinkage=shrinkage,
         )
 
     def read(self, name: str, stored: Mapping[str, Values]) -> FeatureModel:
@@ -256,7 +266,16 @@ def read_feature_model(name: str, stored: Mapping[str, Values]) -> FeatureModel:
         time_constant=float(stored["time_constant"]),
         magnitude=stored["magnitude"],
         inflation=float(stored["inflation"]),
+        shrinkage=_shrinkage(stored),
     )
+
+
+def _shrinkage(stored: Mapping[str, Values]) -> Shrinkage:
+    """What is stored, or the usual strengths in a file that was made before there was a choice."""
+    if "shrinkage" not in stored:
+        return USUAL
+    features, outputs = stored["shrinkage"].tolist()
+    return Shrinkage(features, outputs, str(stored["shrinkage_reason"]))
 
 
 def merged(trials: Sequence[TrialStatistics]) -> list[TrialStatistics]:
