@@ -40,8 +40,9 @@ class CompleteTrials:
     moment: FloatArray
     counted: float
 
-    def rung(self, deviation: FloatArray, split: Split, inverse: FloatArray) -> TrialRung:
-        """Trials deviating by N(0, A), A = deviation (K, K); inverse: (n, n) Σ⁻¹ backᵀ."""
+    def rung(self, deviation: FloatArray, residual: FloatArray, split: Split) -> TrialRung:
+        """Trials deviating by N(0, A), A = deviation (K, K), with the residual Σ (n, n)."""
+        inverse = np.linalg.solve(residual, split.back.T)
         stiffness, axes = np.linalg.eigh(symmetrise(np.swapaxes(self.root, -1, -2) @ deviation @ self.root))
         score = np.swapaxes(self.told @ inverse, -1, -2) @ axes
         reach = self.root @ axes
@@ -198,6 +199,6 @@ def climb(
     width: FloatArray,
 ) -> Climb:  # fmt: skip
     """Pass everything up; levels: A of subjects and of trials, (K, K); residual: Σ; width: as make_ladder."""
-    below = trials.rung(levels[1], split, np.linalg.solve(residual, split.back.T))
+    below = trials.rung(levels[1], residual, split)
     above = make_rung(levels[0], below.above())
     return Climb(below, above, below.up(), population_covariance(above.above.sum(axis=0), width))

@@ -143,14 +143,14 @@ class LeftOutScore:
             weights = self._dense(state, others, own)
         else:
             weights = self._split(self._complete, state, others, left_out)
-        return np.array(frames) + np.array(weights)
+        return np.asarray(np.add(frames, weights), dtype=np.float64)
 
     def _split(
         self, complete: CompleteTrials, state: State, others: list[TrialStatistics], left_out: Sequence[str]
     ) -> list[float]:
         """Output by output, where every frame shows every output."""
         split = make_split(state.outputs, state.residual)
-        trial = complete.rung(state.trial, split, np.linalg.solve(state.residual, split.back.T))
+        trial = complete.rung(state.trial, state.residual, split)
         told, shift = trial.above(), trial.up()
         kept = [index for index, name in enumerate(self.subjects) if name not in left_out]
         rung = make_rung(state.subject, told[kept])

@@ -12,6 +12,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from sta_prior.checks import FloatArray
+from sta_prior.errors import ShapeError, message
 from sta_prior.prior.artifact import FeatureArtifact
 from sta_prior.prior.basis import Basis, Reach, Term, Wave, orthonormal
 from sta_prior.prior.family import Own, Posture, SegmentData, Values, Variable
@@ -162,7 +163,8 @@ class FeatureModel:
             "stop_reason": Variable((), np.array(fit.stop_reason)),
             "time_constant": Variable((), np.array(self.time_constant), "s"),
             "magnitude": Variable(outputs, self.magnitude, "m2"),
-            "shrinkage": Variable(("strength",), np.array([self.shrinkage.features, self.shrinkage.outputs])),
+            "feature_shrinkage": Variable((), np.array(self.shrinkage.features)),
+            "output_shrinkage": Variable((), np.array(self.shrinkage.outputs)),
             "shrinkage_reason": Variable((), np.array(self.shrinkage.reason)),
             "block_seen": Variable(("block", "output"), stack("seen").astype(np.int8)),
             "block_feature_gram": Variable(("block", *features), stack("feature_gram")),
@@ -213,7 +215,12 @@ class FeatureFamily:
         return read_feature_model(name, stored)
 
 
-def _blocks(stored: Mapping[str, Values]) -> tuple[TrialStatistics, ...]:
+def _blocks(name: str, stored: Mapping[str, Values]) -> tuple[TrialStatistics, ...]:
+    count = stored["block_subject"].shape[0]
+    for key in sorted(key for key in stored if key.startswith("block_")):
+        if len(stored[key]) != count:
+            wrong = f"expected {count} rows, one a block, got {len(stored[key])}"
+            raise ShapeError(message((name, key), wrong))
     grouped: dict[tuple[str, str], list[Block]] = {}
     owners = zip(stored["block_subject"].tolist(), stored["block_trial"].tolist(), strict=True)
     for index, owner in enumerate(owners):
@@ -234,7 +241,13 @@ def _blocks(stored: Mapping[str, Values]) -> tuple[TrialStatistics, ...]:
 
 
 def read_feature_model(name: str, stored: Mapping[str, Values]) -> FeatureModel:
-    """Make a FeatureModel from stored arrays; KeyError where one is missing."""
+    """Make a FeatureModel from stored arrays.
+
+    Raises
+    ------
+    KeyError : an array is missing.
+    ShapeError : arrays that do not fit each other.
+    """
     waves = tuple(
         Wave(
             int(joint), int(dof), centre, limit, length, int(count),
@@ -246,7 +259,7 @@ def read_feature_model(name: str, stored: Mapping[str, Values]) -> FeatureModel:
         Reach(int(joint), int(dof), low, high) for joint, dof, low, high in stored["reaches"].tolist()
     )
     terms = tuple(Term(int(joint), int(dof), int(power)) for joint, dof, power in stored["terms"].tolist())
-    return FeatureModel(
+    model = FeatureModel(
         name=name,
         markers=tuple(str(marker) for marker in stored["markers"]),
         layout=stored["layout"],
@@ -262,20 +275,38 @@ def read_feature_model(name: str, stored: Mapping[str, Values]) -> FeatureModel:
             iterations=int(stored["iterations"]),
             stop_reason=str(stored["stop_reason"]),
         ),
-        trials=_blocks(stored),
+        trials=_blocks(name, stored),
         time_constant=float(stored["time_constant"]),
         magnitude=stored["magnitude"],
         inflation=float(stored["inflation"]),
         shrinkage=_shrinkage(stored),
     )
+    _refuse_misfits(model, stored)
+    return model
+
+
+def _refuse_misfits(model: FeatureModel, stored: Mapping[str, Values]) -> None:
+    """Features are counted by the basis, outputs by the markers."""
+    features, outputs, terms = model.basis.size, 3 * len(model.markers), len(model.basis.terms)
+    sizes = {"feature": features, "output": outputs, "weight": features * outputs, "term": terms}
+    sizes |= {f"{dim}2": size for dim, size in sizes.items()}
+    sizes |= {"place": len(model.markers), "axis": 3}
+    layout = Variable(("place", "axis"), model.layout)
+    for key, variable in {**model.variables(), "layout": layout}.items():
+        got = stored[key].shape if key in stored else variable.values.shape
+        free = got if len(got) == len(variable.dims) else (-1,) * len(variable.dims)
+        expected = tuple(sizes.get(dim, size) for dim, size in zip(variable.dims, free, strict=True))
+        if got != expected:
+            shape = str(expected).replace("-1", "any")
+            raise ShapeError(message((model.name, key), f"expected shape {shape}, got {got}"))
 
 
 def _shrinkage(stored: Mapping[str, Values]) -> Shrinkage:
     """What is stored, or the usual strengths in a file that was made before there was a choice."""
-    if "shrinkage" not in stored:
+    if "feature_shrinkage" not in stored:
         return USUAL
-    features, outputs = stored["shrinkage"].tolist()
-    return Shrinkage(features, outputs, str(stored["shrinkage_reason"]))
+    strengths = float(stored["feature_shrinkage"]), float(stored["output_shrinkage"])
+    return Shrinkage(*strengths, str(stored["shrinkage_reason"]))
 
 
 def merged(trials: Sequence[TrialStatistics]) -> list[TrialStatistics]:

@@ -287,12 +287,14 @@ def _maximise(state: State, prior: _Prior, moments: Moments, counted: float, set
         if at_trials and not settings.trial_level:
             found.append(np.zeros_like(state.trial))
             continue
-        moment = np.einsum("unk,unl->kl", mean, mean, optimize=True) + around.total()
+        flat = mean.reshape(-1, mean.shape[-1])
+        moment = flat.T @ flat + around.total()
         moment += pseudo * n * agreement * prior.features
         units = len(mean) + pseudo
         features = _shrink(symmetrise(moment / (n * units)), settings.feature_shrinkage)
         precision, rank = _inverse_on_range(features)
-        shared += np.einsum("unk,kl,uml->nm", mean, precision, mean, optimize=True)
+        by_output = np.swapaxes(mean, 0, 1)
+        shared += (by_output @ precision).reshape(n, -1) @ by_output.reshape(n, -1).T
         shared += around.along(precision)
         weak += pseudo * float(np.trace(precision @ prior.features)) * prior.outputs
         weight += rank * units

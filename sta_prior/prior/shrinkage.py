@@ -12,10 +12,8 @@ as none at all, or as independence.
 
 References
 ----------
-Breiman, Friedman, Olshen & Stone (1984), Classification and Regression Trees, section 3.4.3 (the rule of one
-standard error; from memory).
-Ledoit & Wolf (2004), J Multivar Anal 88, 365–411, doi 10.1016/S0047-259X(03)00096-4 (a covariance estimate
-drawn towards a plainer one; from memory).
+Breiman et al. (1984), Classification and Regression Trees (the rule of one standard error; from memory).
+Ledoit & Wolf (2004), J Multivar Anal 88, 365–411 (covariances drawn towards a plainer one; from memory).
 """
 
 from __future__ import annotations
@@ -35,7 +33,7 @@ FEWEST_SUBJECTS = 4
 FOLDS = 5
 """Subjects are left out in at most so many groups."""
 
-FIRST_ITERATIONS, FURTHER_ITERATIONS = 15, 6
+FIRST_ITERATIONS, FURTHER_ITERATIONS = 15, 5
 """Of a fit with the usual strengths, from the fit of all subjects; and of others, from that one."""
 
 CHOSEN = "chosen by left-out subjects"
