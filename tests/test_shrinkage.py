@@ -206,7 +206,20 @@ def test_the_choice_does_not_depend_on_the_order_of_trials() -> None:
     assert (one.features, one.outputs) != USUAL_STRENGTHS
 
 
-def test_frames_that_show_every_output_decide_where_they_are_many() -> None:
+def watch(monkeypatch: pytest.MonkeyPatch) -> list[list[TrialStatistics]]:
+    """What the choices are judged on from now on."""
+    judged: list[list[TrialStatistics]] = []
+
+    class Watched(LeftOutScore):
+        def __init__(self, trials: list[TrialStatistics], relative: FloatArray) -> None:
+            judged.append(trials)
+            super().__init__(trials, relative)
+
+    monkeypatch.setattr(shrinkage, "LeftOutScore", Watched)
+    return judged
+
+
+def test_frames_that_show_every_output_decide_where_they_are_many(monkeypatch: pytest.MonkeyPatch) -> None:
     """A marker hidden in a fifth of the frames of each trial: the choice is that of the other frames."""
     drawn = made.draw_trials(np.random.default_rng(8), truth(False), [2] * 5, 20)
     for item in drawn:
@@ -217,20 +230,15 @@ def test_frames_that_show_every_output_decide_where_they_are_many() -> None:
     ]
     assert [len(trial.blocks) for trial in whole] == [2] * 10
     start = fit_hierarchy(whole, np.ones(4))
+    judged = watch(monkeypatch)
     one = choose_shrinkage(whole, np.ones(4), 4.0, start)
     assert one == choose_shrinkage(complete, np.ones(4), 4.0, start)
+    assert judged == [complete, complete]
 
 
 def test_a_marker_that_a_subject_never_shows_is_no_hindrance(monkeypatch: pytest.MonkeyPatch) -> None:
     """All frames are then judged, and the choice among correlated deviations is the weakest."""
-    judged = []
-
-    class Watched(LeftOutScore):
-        def __init__(self, trials: list[TrialStatistics], relative: FloatArray) -> None:
-            judged.append(trials)
-            super().__init__(trials, relative)
-
-    monkeypatch.setattr(shrinkage, "LeftOutScore", Watched)
+    judged = watch(monkeypatch)
     drawn = made.draw_trials(np.random.default_rng(9), truth(True), [1] * 5, 15)
     drawn[2].outputs[:, 3:] = np.nan
     trials = made.statistics_of(drawn)
