@@ -125,7 +125,12 @@ def solve_spd(covariance: ArrayLike, matrix: ArrayLike, name: str = "covariance"
 def _whitened_vector(residual: ArrayLike, covariance: ArrayLike) -> tuple[FloatArray, FloatArray]:
     factor = cholesky(covariance)
     residual = check_shape(residual, (factor.shape[-1],), "residual")
-    return whiten(factor, residual[..., None])[..., 0], factor
+    # Row by row over the whole stack: a vector each needs no factor of a triangular matrix.
+    white = np.empty(np.broadcast_shapes(residual.shape, factor.shape[:-1]))
+    for row in range(factor.shape[-1]):
+        known = np.einsum("...j,...j->...", factor[..., row, :row], white[..., :row])
+        white[..., row] = (residual[..., row] - known) / factor[..., row, row]
+    return white, factor
 
 
 def mahalanobis(residual: ArrayLike, covariance: ArrayLike) -> FloatArray:

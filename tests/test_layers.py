@@ -28,6 +28,7 @@ ORDER: tuple[str, ...] = (
 KERNELS = (
     *("se3", "gaussian", "angles", "rigid"),
     *("prior/interface", "prior/linear", "prior/hierarchy", "prior/fitting"),
+    *("prior/complete", "prior/shrinkage"),
     *("solve/terms", "solve/frame", "solve/posterior"),
     *("solve/chain", "solve/chain_kernels", "solve/chain_marginals"),
 )

@@ -236,3 +236,72 @@ def test_saving_leaves_no_half_written_file(prior: Prior, tmp_path: Path) -> Non
         broken.save(path)
     assert path.read_text(encoding="utf-8") == "an earlier prior"
     assert [item.name for item in tmp_path.iterdir()] == ["prior.nc"]
+
+
+def with_less(name: str, sizes: dict[str, int]) -> Callable[[xr.Dataset], xr.Dataset]:
+    """The first rows of an array, along dimensions of other names."""
+
+    def change(data: xr.Dataset) -> xr.Dataset:
+        short = data[name].isel({dim: slice(size) for dim, size in sizes.items()})
+        return data.drop_vars(name).assign({name: short.rename({dim: f"other_{dim}" for dim in sizes})})
+
+    return change
+
+
+@pytest.mark.parametrize(
+    ("name", "sizes", "expected", "got"),
+    [
+        ("trial_features", {"feature_thigh": 7, "feature2_thigh": 7}, "(9, 9)", "(7, 7)"),
+        ("residual", {"output2_thigh": 6}, "(9, 9)", "(9, 6)"),
+        ("population_covariance", {"weight_thigh": 9}, "(81, 81)", "(9, 81)"),
+        ("layout", {"place_thigh": 2}, "(3, 3)", "(2, 3)"),
+        ("block_cross", {"feature_thigh": 3}, None, "(BLOCKS, 3, 9)"),
+    ],
+)
+def test_arrays_that_do_not_fit_each_other_are_refused(
+    prior: Prior, tmp_path: Path, name: str, sizes: dict[str, int], expected: str | None, got: str
+) -> None:
+    path = tmp_path / "prior.nc"
+    data = prior_to_dataset(prior)
+    write_dataset(path, with_less(f"thigh_{name}", sizes)(data), "prior", {})
+    blocks, features = data.sizes["block_thigh"], data.sizes["feature_thigh"]
+    with says(
+        InputError,
+        f"{path}: not a whole prior file (thigh, {name}: "
+        f"expected shape {expected or (blocks, features, 9)}, got {got.replace('BLOCKS', str(blocks))}). "
+        "Learn the prior again.",
+    ):
+        load_prior(path)
+
+
+def test_sums_of_other_numbers_of_blocks_are_refused(prior: Prior, tmp_path: Path) -> None:
+    path = tmp_path / "prior.nc"
+    data = prior_to_dataset(prior)
+    write_dataset(path, with_less("thigh_block_weight", {"block_thigh": 5})(data), "prior", {})
+    with says(
+        InputError,
+        f"{path}: not a whole prior file (thigh, block_weight: "
+        f"expected {data.sizes['block_thigh']} rows, one a block, got 5). Learn the prior again.",
+    ):
+        load_prior(path)
+
+
+def test_an_array_of_other_dimensions_is_refused(prior: Prior, tmp_path: Path) -> None:
+    path = tmp_path / "prior.nc"
+    data = prior_to_dataset(prior)
+    flat = data["thigh_magnitude"].isel(output2_thigh=0, drop=True)
+    write_dataset(path, data.assign(thigh_magnitude=flat), "prior", {})
+    with says(
+        InputError,
+        f"{path}: not a whole prior file (thigh, magnitude: expected shape (9, 9), got (9,)). "
+        "Learn the prior again.",
+    ):
+        load_prior(path)
+
+
+def test_a_file_from_before_there_was_a_choice_is_read(prior: Prior, tmp_path: Path) -> None:
+    path = tmp_path / "prior.nc"
+    older = prior_to_dataset(prior).drop_vars(["thigh_feature_shrinkage", "thigh_shrinkage_reason"])
+    write_dataset(path, older, "prior", {})
+    words = load_prior(path).segments["thigh"].describe()
+    assert "; between-subject shrinkage 40 % between features, 20 % between outputs, fixed; " in words

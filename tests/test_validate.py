@@ -14,7 +14,7 @@ from sta_prior.checks import FloatArray
 from sta_prior.prior.artifact import FeatureArtifact
 from sta_prior.prior.family import Posture, SegmentData
 from sta_prior.prior.feature_model import LINEAR, REDUCED_RANK, REFIT, FeatureFamily, FeatureModel
-from sta_prior.prior.fitting import fit_hierarchy
+from sta_prior.prior.fitting import FitSettings, fit_hierarchy
 from sta_prior.prior.hierarchy import (
     Hierarchy,
     TrialStatistics,
@@ -88,7 +88,7 @@ def model_of(frames: list[SegmentFrames], family: FeatureFamily = LINEAR) -> Fea
 def refit(model: FeatureModel, trials: list[TrialStatistics]) -> Hierarchy:
     """Fit to other trials from where the model stood."""
     relative, total = model.basis.relative_variance, model.basis.total_relative_variance
-    return fit_hierarchy(trials, relative, total, model.hierarchy, REFIT)
+    return fit_hierarchy(trials, relative, total, model.hierarchy, model.shrinkage.settings(REFIT))
 
 
 both_families = pytest.mark.parametrize("family", [LINEAR, REDUCED_RANK], ids=lambda family: family.name)
@@ -283,7 +283,12 @@ def test_a_refit_from_where_it_stood_is_a_refit_from_scratch(family: FeatureFami
     model = model_of(frames, family)
     others = [trial for trial in model.trials if trial.subject != "S00"]
     warm = refit(model, others)
-    cold = fit_hierarchy(others, model.basis.relative_variance, model.basis.total_relative_variance)
+    cold = fit_hierarchy(
+        others,
+        model.basis.relative_variance,
+        model.basis.total_relative_variance,
+        settings=model.shrinkage.settings(FitSettings()),
+    )
     for part in ("subject_covariance", "trial_covariance", "residual"):
         np.testing.assert_allclose(
             np.trace(getattr(warm, part)), np.trace(getattr(cold, part)), rtol=0.01, err_msg=part

@@ -24,6 +24,7 @@ from scipy.sparse.linalg import LinearOperator, gmres
 
 from sta_prior.checks import BoolArray, FloatArray
 from sta_prior.gaussian import symmetrise
+from sta_prior.prior.complete import CompleteTrials, TrialSpread, climb, complete_trials
 from sta_prior.prior.hierarchy import TrialStatistics
 from sta_prior.prior.ladder import (
     Ladder,
@@ -62,6 +63,15 @@ class Spread:
         """Blocks along other axes, (units, n, K, K); what is off the blocks there is left out."""
         return turned(self.covariance, self.axes, axes)
 
+    def total(self) -> FloatArray:
+        """Sum over units and outputs, (K, K)."""
+        return np.asarray(self.covariance.sum(axis=(0, 1)))
+
+    def along(self, precision: FloatArray) -> FloatArray:
+        """Σ tr(precision · covariance) over units, (n, n) in split outputs."""
+        own = np.einsum("unkl,kl->un", self.covariance, precision)
+        return np.asarray(_spanned(self.axes, own).sum(axis=0))
+
 
 def turned(blocks: FloatArray, axes: FloatArray, other: FloatArray) -> FloatArray:
     """Diagonal blocks (units, n, K, K) along one set of axes, (units, n, n), along another."""
@@ -95,7 +105,7 @@ class Moments:
 
     split: Split
     subjects: tuple[FloatArray, Spread]
-    trials: tuple[FloatArray, Spread]
+    trials: tuple[FloatArray, Spread | TrialSpread]
     residual: FloatArray
 
 
@@ -147,12 +157,15 @@ class Expectation:
     _moments: FloatArray = field(init=False)
     _counted: FloatArray = field(init=False)
     _weights: FloatArray | None = field(init=False, default=None)
+    _complete: CompleteTrials | None = field(init=False, default=None)
 
     def __post_init__(self) -> None:
         """Stack the blocks of each trial, and sum over all what depends on the pattern alone."""
         self.subjects = list(dict.fromkeys(trial.subject for trial in self.trials))
         self._owner = np.array([self.subjects.index(trial.subject) for trial in self.trials], dtype=np.intp)
         blocks = [block for trial in self.trials for block in trial.blocks]
+        if all(block.seen.all() for block in blocks):
+            self._complete = complete_trials(self.trials, self.subjects)
         self._seen, which = np.unique(np.array([block.seen for block in blocks]), axis=0, return_inverse=True)
         counts = np.cumsum([len(trial.blocks) for trial in self.trials])[:-1]
         self._which = np.split(which.reshape(-1), counts)
@@ -208,6 +221,8 @@ class Expectation:
     def __call__(self, state: State) -> Moments:
         """Moments under the current covariances."""
         split = make_split(state.outputs, state.residual)
+        if self._complete is not None:
+            return self._of_complete(self._complete, state, split)
         patterns = [_pattern(seen, state.residual) for seen in self._seen]
         told = np.stack([pattern.precision @ split.back.T for pattern in patterns])
         # Σ⁻¹ of what a pattern shows, in split outputs; diagonal where it shows all.
@@ -230,6 +245,23 @@ class Expectation:
             (means.subjects, of_subjects),
             (means.trials, of_trials),
             self._residual(split, patterns, weights, around),
+        )
+
+    def _of_complete(self, trials: CompleteTrials, state: State, split: Split) -> Moments:
+        """The same where every frame shows every output."""
+        found = climb(trials, (state.subject, state.trial), state.residual, split, self.width)
+        population, n = found.mean(), split.precision.size
+        subjects = found.subject.down(found.told, np.broadcast_to(population, found.told.shape))
+        own = found.trial.down(population + subjects)
+        above = np.zeros_like(found.population) if self.point_population else found.population
+        of_subjects, reach = found.subject.spread(above[None])
+        of_trials, uncertain = found.trial.spread(reach)
+        residual = trials.residual((population + subjects)[self._owner] + own, split)
+        return Moments(
+            split,
+            (subjects, Spread(np.broadcast_to(np.eye(n), (len(subjects), n, n)), of_subjects)),
+            (own, of_trials),
+            symmetrise(residual + split.back.T @ (uncertain[:, None] * split.back)),
         )
 
     def _spreads(self, state: State, ladder: Ladder, views: FloatArray) -> tuple[Spread, Spread, Spread]:

@@ -12,6 +12,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from sta_prior.checks import FloatArray
+from sta_prior.errors import ShapeError, message
 from sta_prior.prior.artifact import FeatureArtifact
 from sta_prior.prior.basis import Basis, Reach, Term, Wave, orthonormal
 from sta_prior.prior.family import Own, Posture, SegmentData, Values, Variable
@@ -32,10 +33,11 @@ from sta_prior.prior.lag_products import learn_time_scales
 from sta_prior.prior.linear import linear_basis, reaches_of
 from sta_prior.prior.other_models import beyond_data
 from sta_prior.prior.reduced_rank import reduced_rank_basis
+from sta_prior.prior.shrinkage import USUAL, Shrinkage, choose_shrinkage
 from sta_prior.prior.statistics import SegmentFrames, summarise
 from sta_prior.prior.time_scales import TimeScales
 
-REFIT = FitSettings(maximum_iterations=10)
+REFIT = FitSettings(maximum_iterations=20)
 
 
 _KINDS = ("angle", *INPUTS)
@@ -46,7 +48,8 @@ class FeatureModel:
     """Learned weights of features, with subject and trial levels.
 
     trials: sufficient statistics of what was learned from; time_scales: of the residual; magnitude: (n, n)
-    m², what the covariance gains far beyond the training data.
+    m², what the covariance gains far beyond the training data; shrinkage: of deviations towards
+    independence.
     """
 
     name: str
@@ -58,6 +61,7 @@ class FeatureModel:
     time_scales: TimeScales
     magnitude: FloatArray
     inflation: float = 1.0
+    shrinkage: Shrinkage = USUAL
 
     def knows(self, subject: str) -> bool:
         """Whether it learned from this subject."""
@@ -68,14 +72,14 @@ class FeatureModel:
         return replace(self, inflation=inflation)
 
     def refitted(self, frames: Sequence[SegmentFrames]) -> FeatureModel:
-        """Fit the hierarchy to other frames, from where it stood; basis and time scales are kept."""
+        """Fit the hierarchy to other frames, from where it stood; all else that was learned is kept."""
         trials = tuple(summarise(item, self.basis) for item in frames)
         hierarchy = fit_hierarchy(
             list(trials),
             self.basis.relative_variance,
             self.basis.total_relative_variance,
             self.hierarchy,
-            REFIT,
+            self.shrinkage.settings(REFIT),
         )
         return replace(self, hierarchy=hierarchy, trials=trials)
 
@@ -129,7 +133,7 @@ class FeatureModel:
         return (
             f"residual {residual:.1f} mm SD per axis, {self.time_scales.words()}; "
             + "".join(f"{gain.words(name)}; " for gain, name in zip(gains, names, strict=True))
-            + f"fit: {self.hierarchy.stop_reason}"
+            + f"{self.shrinkage.words}; fit: {self.hierarchy.stop_reason}"
         )
 
     def variables(self) -> dict[str, Variable]:
@@ -167,6 +171,9 @@ class FeatureModel:
             "time_constants": Variable(("scale",), self.time_scales.constants, "s"),
             "time_shares": Variable(("scale",), self.time_scales.shares),
             "magnitude": Variable(outputs, self.magnitude, "m2"),
+            "feature_shrinkage": Variable((), np.array(self.shrinkage.features)),
+            "output_shrinkage": Variable((), np.array(self.shrinkage.outputs)),
+            "shrinkage_reason": Variable((), np.array(self.shrinkage.reason)),
             "block_seen": Variable(("block", "output"), stack("seen").astype(np.int8)),
             "block_feature_gram": Variable(("block", *features), stack("feature_gram")),
             "block_cross": Variable(("block", "feature", "output"), stack("cross"), "m"),
@@ -194,7 +201,12 @@ class FeatureFamily:
         basis = orthonormal(self.basis(data.adjacent, angles, references, data.extra), angles, references)
         scales = learn_time_scales(data.frames, basis)
         trials = tuple(summarise(item, basis) for item in data.frames)
-        hierarchy = fit_hierarchy(list(trials), basis.relative_variance, basis.total_relative_variance)
+        given = (list(trials), basis.relative_variance, basis.total_relative_variance)
+        hierarchy = fit_hierarchy(*given)
+        shrinkage = choose_shrinkage(*given, hierarchy)
+        settings = shrinkage.settings(FitSettings())
+        if settings != FitSettings():
+            hierarchy = fit_hierarchy(*given, settings=settings)
         return FeatureModel(
             name=data.name,
             markers=data.markers,
@@ -204,6 +216,7 @@ class FeatureFamily:
             trials=trials,
             time_scales=scales,
             magnitude=beyond_data(data.name, data.layout),
+            shrinkage=shrinkage,
         )
 
     def read(self, name: str, stored: Mapping[str, Values]) -> FeatureModel:
@@ -211,7 +224,12 @@ class FeatureFamily:
         return read_feature_model(name, stored)
 
 
-def _blocks(stored: Mapping[str, Values]) -> tuple[TrialStatistics, ...]:
+def _blocks(name: str, stored: Mapping[str, Values]) -> tuple[TrialStatistics, ...]:
+    count = stored["block_subject"].shape[0]
+    for key in sorted(key for key in stored if key.startswith("block_")):
+        if len(stored[key]) != count:
+            wrong = f"expected {count} rows, one a block, got {len(stored[key])}"
+            raise ShapeError(message((name, key), wrong))
     grouped: dict[tuple[str, str], list[Block]] = {}
     owners = zip(stored["block_subject"].tolist(), stored["block_trial"].tolist(), strict=True)
     for index, owner in enumerate(owners):
@@ -232,7 +250,13 @@ def _blocks(stored: Mapping[str, Values]) -> tuple[TrialStatistics, ...]:
 
 
 def read_feature_model(name: str, stored: Mapping[str, Values]) -> FeatureModel:
-    """Make a FeatureModel from stored arrays; KeyError where one is missing."""
+    """Make a FeatureModel from stored arrays.
+
+    Raises
+    ------
+    KeyError : an array is missing.
+    ShapeError : arrays that do not fit each other.
+    """
     waves = tuple(
         Wave(
             int(joint), int(dof), centre, limit, length, int(count),
@@ -245,7 +269,7 @@ def read_feature_model(name: str, stored: Mapping[str, Values]) -> FeatureModel:
         for joint, dof, low, high, kind in stored["reaches"].tolist()
     )
     terms = tuple(Term(int(joint), int(dof), int(power)) for joint, dof, power in stored["terms"].tolist())
-    return FeatureModel(
+    model = FeatureModel(
         name=name,
         markers=tuple(str(marker) for marker in stored["markers"]),
         layout=stored["layout"],
@@ -261,11 +285,38 @@ def read_feature_model(name: str, stored: Mapping[str, Values]) -> FeatureModel:
             iterations=int(stored["iterations"]),
             stop_reason=str(stored["stop_reason"]),
         ),
-        trials=_blocks(stored),
+        trials=_blocks(name, stored),
         time_scales=TimeScales(stored["time_constants"], stored["time_shares"]),
         magnitude=stored["magnitude"],
         inflation=float(stored["inflation"]),
+        shrinkage=_shrinkage(stored),
     )
+    _refuse_misfits(model, stored)
+    return model
+
+
+def _refuse_misfits(model: FeatureModel, stored: Mapping[str, Values]) -> None:
+    """Features are counted by the basis, outputs by the markers."""
+    features, outputs, terms = model.basis.size, 3 * len(model.markers), len(model.basis.terms)
+    sizes = {"feature": features, "output": outputs, "weight": features * outputs, "term": terms}
+    sizes |= {f"{dim}2": size for dim, size in sizes.items()}
+    sizes |= {"place": len(model.markers), "axis": 3}
+    layout = Variable(("place", "axis"), model.layout)
+    for key, variable in {**model.variables(), "layout": layout}.items():
+        got = stored[key].shape if key in stored else variable.values.shape
+        free = got if len(got) == len(variable.dims) else (-1,) * len(variable.dims)
+        expected = tuple(sizes.get(dim, size) for dim, size in zip(variable.dims, free, strict=True))
+        if got != expected:
+            shape = str(expected).replace("-1", "any")
+            raise ShapeError(message((model.name, key), f"expected shape {shape}, got {got}"))
+
+
+def _shrinkage(stored: Mapping[str, Values]) -> Shrinkage:
+    """What is stored, or the usual strengths in a file that was made before there was a choice."""
+    if "feature_shrinkage" not in stored:
+        return USUAL
+    strengths = float(stored["feature_shrinkage"]), float(stored["output_shrinkage"])
+    return Shrinkage(*strengths, str(stored["shrinkage_reason"]))
 
 
 def merged(trials: Sequence[TrialStatistics]) -> list[TrialStatistics]:

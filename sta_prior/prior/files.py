@@ -104,7 +104,7 @@ def load_prior(path: str | Path) -> Prior:
         return _from_dataset(data)
     except (KeyError, ValueError, IndexError, TypeError, AttributeError) as error:
         raise InputError(
-            message(place, f"not a whole prior file ({error})", "Learn the prior again.")
+            message(place, f"not a whole prior file ({str(error).rstrip('.')})", "Learn the prior again.")
         ) from error
 
 

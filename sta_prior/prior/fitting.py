@@ -133,19 +133,37 @@ def fit_hierarchy(
     labelled so by the caller.
     """
     settings = settings or FitSettings()
+    before = None if start is None else state_of(start)
+    state, iterations, reason = fit_covariances(trials, relative, total, before, settings)
+    return _as_hierarchy(state, trials, relative, settings, (iterations, reason))
+
+
+def state_of(hierarchy: Hierarchy) -> State:
+    """Covariances of a hierarchy, to begin another fit from."""
+    return State(
+        hierarchy.subject_features,
+        hierarchy.trial_features,
+        hierarchy.subject_outputs,
+        hierarchy.observed_residual,
+    )
+
+
+def fit_covariances(
+    trials: list[TrialStatistics],
+    relative: FloatArray,
+    total: float | None,
+    start: State | None,
+    settings: FitSettings,
+) -> tuple[State, int, str]:
+    """Covariances alone, with iterations and why they stopped; the arguments are those of fit_hierarchy."""
     prior = _weak_prior(trials, relative, total or float(relative.sum()), settings)
-    state = State(prior.features, prior.features, prior.outputs, prior.residual)
-    if start is not None:
-        state = State(
-            start.subject_features, start.trial_features, start.subject_outputs, start.observed_residual
-        )
+    state = start or State(prior.features, prior.features, prior.outputs, prior.residual)
     if not settings.trial_level:
         state = replace(state, trial=np.zeros_like(state.subject))
     width = population_width(trials, relative, settings.population_width, settings.free_constant)
     expect = Expectation(trials, width, settings.point_population)
     floor = BOUNDARY * scale_of(trials).displacement * relative
-    state, iterations, reason = _iterate(state, expect, prior, settings, floor)
-    return _as_hierarchy(state, trials, relative, settings, (iterations, reason))
+    return _iterate(state, expect, prior, settings, floor)
 
 
 def _iterate(
@@ -269,14 +287,15 @@ def _maximise(state: State, prior: _Prior, moments: Moments, counted: float, set
         if at_trials and not settings.trial_level:
             found.append(np.zeros_like(state.trial))
             continue
-        moment = np.einsum("unk,unl->kl", mean, mean, optimize=True) + around.covariance.sum(axis=(0, 1))
+        flat = mean.reshape(-1, mean.shape[-1])
+        moment = flat.T @ flat + around.total()
         moment += pseudo * n * agreement * prior.features
         units = len(mean) + pseudo
         features = _shrink(symmetrise(moment / (n * units)), settings.feature_shrinkage)
         precision, rank = _inverse_on_range(features)
-        shared += np.einsum("unk,kl,uml->nm", mean, precision, mean, optimize=True)
-        own = np.einsum("unkl,kl->un", around.covariance, precision)
-        shared += ((around.axes * own[:, None]) @ np.swapaxes(around.axes, -1, -2)).sum(axis=0)
+        by_output = np.swapaxes(mean, 0, 1)
+        shared += (by_output @ precision).reshape(n, -1) @ by_output.reshape(n, -1).T
+        shared += around.along(precision)
         weak += pseudo * float(np.trace(precision @ prior.features)) * prior.outputs
         weight += rank * units
         found.append(features)

@@ -14,6 +14,7 @@ Laird & Ware (1982), Biometrics 38, 963–974 (random effects; from memory).
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -57,7 +58,7 @@ class Rung:
     precision: FloatArray
     kept: FloatArray
 
-    @property
+    @cached_property
     def above(self) -> FloatArray:
         """Precision of what is known of the parents, (units, n, K, K)."""
         return symmetrise(self.kept @ self.precision)

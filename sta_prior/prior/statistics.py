@@ -243,8 +243,10 @@ def summarise(
     weights = frame_weights(frames.window, correlation)
     seen = np.isfinite(frames.displacement)
     blocks = []
-    for pattern in patterns(seen):
-        here = (seen == pattern).all(axis=1)
+    found = patterns(seen)
+    for pattern in found:
+        # Noise is large; a trial that shows the same outputs throughout is not copied.
+        here = (seen == pattern).all(axis=1) if len(found) > 1 else slice(None)
         blocks.append(
             make_block(features[here], frames.displacement[here], frames.noise[here], weights[here], pattern)
         )
