@@ -73,12 +73,14 @@ def _fit(reference: ArrayLike, points: ArrayLike, minimum_line_ratio: float, ful
     frames = int(np.prod(leading))
     # A reference that all frames share is not repeated.
     shared = reference.size == 3 * markers
-    source = np.ascontiguousarray(
-        reference.reshape(1, markers, 3)
-        if shared
-        else np.broadcast_to(reference, shape).reshape(frames, markers, 3)
+    one = (1, markers, 3)
+    many = (frames, markers, 3)
+    source = np.require(
+        reference.reshape(one) if shared else np.broadcast_to(reference, shape).reshape(many),
+        None,
+        ["C", "A"],
     )
-    target = np.ascontiguousarray(np.broadcast_to(points, shape).reshape(frames, markers, 3))
+    target = np.require(np.broadcast_to(points, shape).reshape(many), None, ["C", "A"])
     wanted = frames if full else 0
     found = Fitted(
         pose=np.empty((frames, 4, 4)),
