@@ -14,13 +14,14 @@ above (Theobald), R follows from λ in closed form (Markley), and three things g
    a line, or near a mirror image that two rotations fit alike, are marked instead.
 
 Frames are taken by `LANES`: the algebra runs without a branch over lanes side by side. No fused or reordered
-arithmetic is allowed, so a frame gets the same bits in any company and on any machine.
+arithmetic is allowed, so a frame gets the same bits in any company.
 
 References
 ----------
 Horn (1987), J. Optical Society of America A 4, 629–642, doi 10.1364/JOSAA.4.000629.
 Theobald (2005), Acta Crystallographica A 61, 478–480, doi 10.1107/S0108767305015266.
-Markley (1993), J. Astronautical Sciences 41, 261–280 (R from λ by the adjugate, without a quaternion).
+Markley (1993), J. Astronautical Sciences 41, 261–280 (R from λ by cofactors, without a
+quaternion).
 """
 
 from __future__ import annotations
@@ -41,8 +42,8 @@ THRESHOLD_BAND = 1e-9
 """A line ratio as near as this to the one asked for is left to the singular values."""
 _SMALLEST_SQUARE, _LARGEST_SQUARE = 1e-250, 1e250
 
-# Rows of the workspace, LANES values each. H becomes R.
-_MATRIX, _BOUND, _MARGIN, _RATIO, _ROWS = 0, 9, 10, 11, 12
+# Rows of the workspace, LANES values each. The first nine are H and become R.
+_BOUND, _MARGIN, _RATIO, _ROWS = 9, 10, 11, 12
 
 _compiled = njit(error_model="numpy")
 # A call inside the loop over lanes keeps them from running side by side: the algebra is seven times slower.
@@ -204,12 +205,8 @@ def _unit_covariance(centred, mean, count, out):  # type: ignore[no-untyped-def]
     s00 = s01 = s02 = s11 = s12 = s22 = 0.0
     for j in range(centred.shape[0]):
         a0, a1, a2 = centred[j, 0], centred[j, 1], centred[j, 2]
-        s00 += a0 * a0
-        s01 += a0 * a1
-        s02 += a0 * a2
-        s11 += a1 * a1
-        s12 += a1 * a2
-        s22 += a2 * a2
+        s00, s01, s02 = s00 + a0 * a0, s01 + a0 * a1, s02 + a0 * a2
+        s11, s12, s22 = s11 + a1 * a1, s12 + a1 * a2, s22 + a2 * a2
     # Inverse of the information about the centroid by its factors L·D·Lᵀ.
     pivot0 = s11 + s22
     l10, l20 = -s01 / pivot0, -s02 / pivot0
@@ -229,9 +226,8 @@ def _unit_covariance(centred, mean, count, out):  # type: ignore[no-untyped-def]
         out[3, k] = mean[1] * out[2, k] - mean[2] * out[1, k]
         out[4, k] = mean[2] * out[0, k] - mean[0] * out[2, k]
         out[5, k] = mean[0] * out[1, k] - mean[1] * out[0, k]
-    for k in range(3):
-        for n in range(3):
-            out[n, 3 + k] = out[3 + k, n]
+        for n in range(3, 6):
+            out[k, n] = out[n, k]
     for k in range(3, 6):
         out[k, 3] = out[k, 2] * mean[1] - out[k, 1] * mean[2]
         out[k, 4] = out[k, 0] * mean[2] - out[k, 2] * mean[0]
@@ -255,15 +251,11 @@ def _gather(reference, points, source, target, hidden, means):  # type: ignore[n
         if not np.isfinite(total):
             if np.isinf(p0) or np.isinf(p1) or np.isinf(p2) or np.isinf(q0) or np.isinf(q1) or np.isinf(q2):
                 return -1
-            hidden[j] = np.isnan(total)
+            hidden[j] = p0 != p0 or p1 != p1 or p2 != p2 or q0 != q0 or q1 != q1 or q2 != q2
         if not hidden[j]:
             count += 1
-            a0 += p0
-            a1 += p1
-            a2 += p2
-            b0 += q0
-            b1 += q1
-            b2 += q2
+            a0, a1, a2 = a0 + p0, a1 + p1, a2 + p2
+            b0, b1, b2 = b0 + q0, b1 + q1, b2 + q2
     share = 1.0 / max(count, 1)
     a0, a1, a2, b0, b1, b2 = a0 * share, a1 * share, a2 * share, b0 * share, b1 * share, b2 * share
     means[0], means[1], means[2], means[3], means[4], means[5] = a0, a1, a2, b0, b1, b2
@@ -288,15 +280,9 @@ def _cross_moments(source, target, w, i):  # type: ignore[no-untyped-def]
         b0, b1, b2 = target[j, 0], target[j, 1], target[j, 2]
         size_a += a0 * a0 + a1 * a1 + a2 * a2
         size_b += b0 * b0 + b1 * b1 + b2 * b2
-        h00 += b0 * a0
-        h01 += b0 * a1
-        h02 += b0 * a2
-        h10 += b1 * a0
-        h11 += b1 * a1
-        h12 += b1 * a2
-        h20 += b2 * a0
-        h21 += b2 * a1
-        h22 += b2 * a2
+        h00, h01, h02 = h00 + b0 * a0, h01 + b0 * a1, h02 + b0 * a2
+        h10, h11, h12 = h10 + b1 * a0, h11 + b1 * a1, h12 + b1 * a2
+        h20, h21, h22 = h20 + b2 * a0, h21 + b2 * a1, h22 + b2 * a2
     w[i], w[LANES + i], w[2 * LANES + i] = h00, h01, h02
     w[3 * LANES + i], w[4 * LANES + i], w[5 * LANES + i] = h10, h11, h12
     w[6 * LANES + i], w[7 * LANES + i], w[8 * LANES + i] = h20, h21, h22
