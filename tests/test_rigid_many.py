@@ -196,6 +196,21 @@ def test_markers_on_one_spot_determine_nothing() -> None:
     assert np.isnan(fit.pose[::2]).all()
 
 
+@pytest.mark.parametrize("limit", [0.0, MINIMUM_LINE_RATIO])
+def test_few_markers_seen_in_many_frames(limit: float) -> None:
+    """From none to five in turn; below three nothing is determined, whatever the limit."""
+    case = CASES["noise of 5 mm"]
+    points = case.points[:600].copy()
+    seen = np.arange(600) % 6
+    points[np.arange(5) >= seen[:, None]] = np.nan
+    fit, exact = fit_rigid(case.reference, points, limit), fit_singular(case.reference, points, limit)
+    np.testing.assert_array_equal(fit.determined, seen >= 3)
+    np.testing.assert_array_equal(fit.line_ratio[seen < 3], exact.line_ratio[seen < 3])
+    np.testing.assert_allclose(fit.pose, exact.pose, rtol=0, atol=1e-12)
+    np.testing.assert_array_equal(np.isnan(fit.residual), np.isnan(exact.residual))
+    np.testing.assert_array_equal(np.isnan(fit.unit_covariance), np.isnan(exact.unit_covariance))
+
+
 # --- the same bits, in any company -----------------------------------------------------------------
 
 

@@ -346,13 +346,16 @@ def fit_frames(
         _rotations(w)
         for i in range(lanes):
             f, count = first + i, counts[i]
-            ratio = w[_RATIO * LANES + i]
+            # One marker, or none, is no cluster and has no line: nothing to ask the singular values.
+            alone = count < 2
+            ratio = 0.0 if alone else w[_RATIO * LANES + i]
             near = abs(ratio - minimum_line_ratio) <= THRESHOLD_BAND * minimum_line_ratio
-            doubtful[f] = count < 3 or near or not w[_MARGIN * LANES + i] > SMALLEST_MARGIN
+            unsafe = count < 3 or near or not w[_MARGIN * LANES + i] > SMALLEST_MARGIN
+            doubtful[f] = unsafe and not alone
             if doubtful[f]:
                 continue
             line_ratio[f] = ratio
-            determined[f] = ratio >= minimum_line_ratio
+            determined[f] = not alone and ratio >= minimum_line_ratio
             if not determined[f]:
                 pose[f, :, :] = np.nan
                 spread[f] = np.nan
