@@ -118,6 +118,25 @@ def draw_artifact(rng: np.random.Generator, artifact: Artifact, angles: FloatArr
     return drawn
 
 
+def draw_trial_artifact(
+    rng: np.random.Generator, artifact: Artifact, angles: FloatArray, step: float
+) -> FloatArray:
+    """Artifact (F, n) m of one trial from the prior itself: weights once, the residual decaying in time."""
+    moments = artifact.moments(angles)
+    frames, n = moments.mean.shape
+    size = moments.features.shape[1]
+    factor = np.linalg.cholesky(artifact.constant_covariance)
+    weights = (factor @ rng.standard_normal(size * n)).reshape(size, n)
+    decay = np.exp(-step / artifact.time_constant)
+    root = np.linalg.cholesky(artifact.residual)
+    residual = np.zeros((frames, n))
+    residual[0] = root @ rng.standard_normal(n)
+    for frame in range(1, frames):
+        residual[frame] = decay * residual[frame - 1] + np.sqrt(1.0 - decay**2) * root @ rng.standard_normal(n)
+    drawn: FloatArray = moments.mean + moments.features @ weights + residual
+    return drawn
+
+
 def made_problem(
     seed: int,
     count: int,

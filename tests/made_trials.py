@@ -8,7 +8,7 @@ from typing import cast
 
 import numpy as np
 import xarray as xr
-from made_problems import draw_artifact, made_artifact
+from made_problems import draw_trial_artifact, made_artifact
 from made_studies import LAB, STUDY, leg_points, leg_poses, make_study, write_points
 
 from sta_prior.angles import JointConvention, joint_angles
@@ -93,14 +93,14 @@ def moving_poses(frames: int = 40) -> FloatArray:
 
 
 def moved_points(poses: FloatArray, seed: int = 1) -> dict[str, FloatArray]:
-    """Markers (F, 3) in the lab with artifact drawn from the prior, every frame on its own."""
+    """Markers (F, 3) in the lab with artifact drawn from the prior: weights once, the rest decaying in time."""
     rng = np.random.default_rng(seed)
     frames = len(poses)
     points = leg_points(poses)
     rotation = np.swapaxes(poses[:, 0, :3, :3], -1, -2) @ poses[:, 1, :3, :3]
     angles = joint_angles(JointConvention("knee", "right"), rotation)[:, None]
     for index, (segment, artifact) in enumerate(whole_artifacts().items()):
-        drawn = draw_artifact(rng, artifact, angles).reshape(frames, -1, 3)
+        drawn = draw_trial_artifact(rng, artifact, angles, 1.0 / RATE).reshape(frames, -1, 3)
         for place, name in enumerate(MARKERS[segment]):
             points[name] = points[name] + np.einsum("fij,fj->fi", poses[:, index, :3, :3], drawn[:, place])
     return points

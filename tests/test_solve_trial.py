@@ -26,14 +26,22 @@ from sta_prior.errors import InputError
 from sta_prior.io.netcdf import read_dataset, write_dataset
 from sta_prior.pairs.belonging import DISTANCE_LIMIT
 from sta_prior.rigid import fit_rigid
-from sta_prior.solve import DEFAULT_ESTIMATOR, ESTIMATORS, solve
+from sta_prior.solve import DEFAULT_ESTIMATOR, ESTIMATORS, WITH_PRIOR, solve
 from sta_prior.study import Study, read_study
 
 FRAMES = 40
 
 
+STOPPED = {
+    "rigid": "closed form",
+    "linked": "step below 1e-08 rad and m in every frame",
+    "frame-map": "step below 1e-08 rad and m in every frame",
+    "smoother": "step below 1e-07 rad and m in every frame",
+}
+
+
 def solved(study: Study, estimator: str = "frame-map") -> xr.Dataset:
-    prior = fixed_prior() if estimator == "frame-map" else None
+    prior = fixed_prior() if estimator in WITH_PRIOR else None
     return solve(study.trial("P01", "stairs_01"), prior, estimator)
 
 
@@ -42,15 +50,16 @@ def poses_of(data: xr.Dataset, kind: str = "") -> FloatArray:
 
 
 def test_estimators_are_those_of_this_version() -> None:
-    assert ESTIMATORS == ("rigid", "linked", "frame-map")
-    assert DEFAULT_ESTIMATOR == "frame-map"
+    assert ESTIMATORS == ("rigid", "linked", "frame-map", "smoother")
+    assert DEFAULT_ESTIMATOR == "smoother"
 
 
 def test_unknown_estimator_is_refused_with_the_nearest(tmp_path: Path) -> None:
     study = write_moving_leg(tmp_path)
     with says(
         InputError,
-        "--estimator: no estimator frame-mop here, known: rigid, linked, frame-map. Did you mean frame-map?",
+        "--estimator: no estimator frame-mop here, known: rigid, linked, frame-map, smoother. "
+        "Did you mean frame-map?",
     ):
         solve(study.trial("P01", "stairs_01"), fixed_prior(), "frame-mop")
 
@@ -89,7 +98,7 @@ def test_solution_has_the_variables_of_the_contract(tmp_path: Path, estimator: s
     """CONTRACT, "Solution": all but support, support_class, which belong to a later layer."""
     data = solved(write_moving_leg(tmp_path), estimator)
     expected = {
-        name: what for name, what in VARIABLES.items() if estimator == "frame-map" or name[:4] != "conf"
+        name: what for name, what in VARIABLES.items() if estimator in WITH_PRIOR or name[:4] != "conf"
     }
     got = {str(name): (v.dims, v.attrs["units"]) for name, v in data.data_vars.items()}
     assert got == expected
@@ -123,10 +132,10 @@ def test_solution_has_the_attributes_of_the_contract(tmp_path: Path, estimator: 
     iterations = data.attrs.pop("iterations")
     assert 0.0 <= seconds < 60.0
     assert 1 <= iterations < 30
-    with_prior = estimator == "frame-map"
+    with_prior = estimator in WITH_PRIOR
     assert data.attrs == {
         "estimator": estimator,
-        "stop_reason": "closed form" if estimator == "rigid" else "step below 1e-08 rad and m in every frame",
+        "stop_reason": STOPPED[estimator],
         "prior_digest": "d" * 64 if with_prior else "",
         "input_digest": study.trial("P01", "stairs_01").digest(),
         "observability": "",
