@@ -293,11 +293,13 @@ class TrajectorySystem:
                 motion.precision,
                 1.0 / motion.density,
                 part.own.start,
-                int(at[0]),
-                int(at[6]),
+                at,
                 span.diagonal,
                 span.lower,
                 span.gradient,
+                np.array([at.size, 2 * at.size]),
+                LETTERS,
+                NUMBERS,
             )
 
     def _begin(self, span: Span, index: int, at: IntArray) -> None:
