@@ -209,6 +209,17 @@ def _derivatives(
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
+def _scatter(dense: FloatArray, places: IntArray, block: FloatArray) -> None:
+    """Add a segment's matrix to a frame's block, six columns at a time."""
+    for k in range(places.size):
+        for i in range(6):
+            row = block[places[k] + i]
+            for m in range(places.size):
+                for j in range(6):
+                    row[places[m] + j] += dense[6 * k + i, 6 * m + j]
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
 def add_motion(
     poses: FloatArray,
     rates: FloatArray,
@@ -216,7 +227,7 @@ def add_motion(
     precision: FloatArray,
     inverse_density: FloatArray,
     start: int,
-    columns: IntArray,
+    places: IntArray,
     diagonal: FloatArray,
     lower: FloatArray,
     gradient: FloatArray,
@@ -234,7 +245,7 @@ def add_motion(
     precision : shape (order, order), inverse of Q for unit density
     inverse_density : shape (6,)
     start : the span's first frame among the F
-    columns : shape (6·order,), the segment's state among a frame's unknowns
+    places : shape (order,), where the segment's pose and rates begin among a frame's unknowns
     diagonal, lower : shape (f, p, p), added to
     gradient : shape (f, p), added to
     size : 6·order and twice that, for BLAS
@@ -247,7 +258,7 @@ def add_motion(
     left, right = np.zeros((6, 6)), np.zeros((6, 6))
     residual, pull = np.empty(states), np.empty(states)
     rows, weighed = np.zeros((states, 2 * states)), np.empty((states, 2 * states))
-    whole = np.empty((2 * states, 2 * states))
+    whole, pulled = np.empty((2 * states, 2 * states)), np.empty(2 * states)
     cost = 0.0
     for frame in range(frames - 1):
         step_jacobians(poses[frame], poses[frame + 1], tangent, left, right, work)
@@ -277,18 +288,22 @@ def add_motion(
             *(number + _PLUS, weighed.ctypes.data, integer + _BYTES, rows.ctypes.data, integer + _BYTES),
             *(number + _ZERO, whole.ctypes.data, integer + _BYTES),
         )
+        for j in range(2 * states):
+            pulled[j] = 0.0
+        for i in range(states):
+            for j in range(2 * states):
+                pulled[j] += rows[i, j] * pull[i]
         if frame + 1 < stop:
             later = frame + 1 - start
             for i in range(states):
                 cost += 0.5 * residual[i] * pull[i]
-                for j in range(states):
-                    diagonal[later, columns[i], columns[j]] += whole[i, j]
-                    gradient[later, columns[j]] += rows[i, j] * pull[i]
+            _scatter(whole[:states, :states], places, diagonal[later])
+            for i in range(states):
+                gradient[later, places[i // 6] + i % 6] += pulled[i]
         if frame >= start:
             now = frame - start
+            _scatter(whole[states:, states:], places, diagonal[now])
+            _scatter(whole[:states, states:], places, lower[now])
             for i in range(states):
-                for j in range(states):
-                    diagonal[now, columns[i], columns[j]] += whole[states + i, states + j]
-                    lower[now, columns[i], columns[j]] += whole[i, states + j]
-                    gradient[now, columns[j]] += rows[i, states + j] * pull[i]
+                gradient[now, places[i // 6] + i % 6] += pulled[states + i]
     return cost

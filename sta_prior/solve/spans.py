@@ -36,15 +36,18 @@ class Rows:
     """A chain of correlated residuals over the frames of a span and one to either side.
 
     residual: (F, n) e; jacobian: (F, n, m) in the first m unknowns of the frame; through: (F, n, m), the part
-    of it that the prior's mean makes, 0 for a joint; moved: (F, n, k), derivative of the whitened innovations
-    in the constants at ``at``; decay: (F,) ρ towards the frame before, 0 where the chain begins; whiteners: L
-    with L Q Lᵀ = 1 for the innovations' covariance Q, (U, n, n); which: (F,), the frame's, −1 for no rows.
+    of it that the prior's mean makes, 0 for a joint; features, modes: (F, K) and (K, n, k), whose product is
+    −∂e/∂u for the constants at ``at``; hidden: (F, n), outputs that do not feel them; decay: (F,) ρ towards
+    the frame before, 0 where the chain begins; whiteners: (U, n, n), L with L Q Lᵀ = 1 for the innovations'
+    covariance Q; which: (F,), the frame's, −1 for no rows.
     """
 
     residual: FloatArray
     jacobian: FloatArray
     through: FloatArray | None
-    moved: FloatArray
+    features: FloatArray
+    modes: FloatArray
+    hidden: BoolArray
     at: slice
     decay: FloatArray
     whiteners: FloatArray
@@ -72,47 +75,42 @@ class Rows:
         past[1:] = self.decay[1:, None, None] * (factor[1:] @ jacobian[:-1])
         return factor @ jacobian, past
 
+    @property
+    def alike(self) -> bool:
+        """Whether all frames have one whitener and nothing is hidden."""
+        return bool((self.which == self.which[0]).all() and self.which[0] >= 0 and not self.hidden.any())
+
+    @property
+    def prewhitened(self) -> FloatArray:
+        """Features less those of the frame before, (F, K)."""
+        result = self.features.copy()
+        result[1:] -= self.decay[1:, None] * self.features[:-1]
+        return result
+
+    def turned(self, kind: int) -> FloatArray:
+        """Modes whitened, with the sign of a derivative, (K, n·k)."""
+        return np.asarray((-self.whiteners[kind] @ self.modes).reshape(self.modes.shape[0], -1))
+
+    @property
+    def moved(self) -> FloatArray:
+        """Derivative of the whitened innovations in the constants, (F, n, k)."""
+        if self.alike:
+            turned = self.turned(int(self.which[0]))
+            return (self.prewhitened @ turned).reshape(-1, *self.modes.shape[1:])
+        factor = self.whiteners[self.which] * (self.which >= 0)[:, None, None]
+        felt = (self.features @ self.modes.reshape(self.modes.shape[0], -1)).reshape(
+            -1, *self.modes.shape[1:]
+        )
+        felt[self.hidden] = 0.0
+        felt[1:] -= self.decay[1:, None, None] * felt[:-1].copy()
+        return -factor @ felt
+
 
 def whitener(covariance: FloatArray) -> FloatArray:
     """Factor L with L C Lᵀ = 1, lower triangular, shape (..., n, n)."""
     factor = np.linalg.cholesky(covariance)
     identity = np.broadcast_to(np.eye(covariance.shape[-1]), covariance.shape)
     return np.asarray(np.linalg.solve(factor, identity))
-
-
-def moved_by(
-    features: FloatArray,
-    modes: FloatArray,
-    decay: FloatArray,
-    whiteners: FloatArray,
-    which: IntArray,
-    hidden: BoolArray,
-) -> FloatArray:
-    """Derivative of the whitened innovations in the constants, (F, n, k); arguments as `Rows` has them.
-
-    Where nothing is hidden and a whitener serves many frames, the features are prewhitened instead of the
-    outputs, and the modes whitened once. Else frame by frame; a hidden output does not feel the constants.
-    """
-    (count, size), (outputs, constants) = features.shape, modes.shape[1:]
-    innovation = features.copy()
-    innovation[1:] -= decay[1:, None] * features[:-1]
-    result = np.zeros((count, outputs, constants))
-    apart = hidden.any(axis=1)
-    apart[1:] |= apart[:-1] & (decay[1:] > 0.0)
-    alone = len(whiteners) == count
-    for kind, factor in enumerate(() if alone else whiteners):
-        turned = (-factor @ modes).reshape(size, outputs * constants)
-        frames = (which == kind) & ~apart
-        if frames.all():
-            return np.asarray((innovation @ turned).reshape(result.shape))
-        result[frames] = (innovation[frames] @ turned).reshape(-1, outputs, constants)
-    frames = (which >= 0) & (apart | alone)
-    if frames.any():
-        flat = modes.reshape(size, -1)
-        felt = (features @ flat).reshape(result.shape) * ~hidden[..., None]
-        felt[1:] -= decay[1:, None, None] * felt[:-1].copy()
-        result[frames] = -whiteners[which[frames]] @ felt[frames]
-    return result
 
 
 @dataclass(frozen=True)
@@ -191,16 +189,31 @@ class TrajectorySystem:
         return rows
 
     def _add(self, span: Span, part: Part, rows: Rows) -> None:
-        white, own = rows.white, part.own
+        white, own, follow = rows.white, part.own, part.after
+        size, outputs, count = rows.modes.shape
         self.cost += 0.5 * float((white[own] ** 2).sum())
-        room = kernels.room(rows.jacobian.shape[1:], rows.moved.shape[2], span.coupling.shape[1:])
-        chain = (rows.jacobian, white, rows.moved, rows.decay, rows.whiteners, rows.which)
-        kernels.add_rows(*chain, own.start, rows.at.start, *span[:4], *room, LETTERS, NUMBERS)
+        if rows.alike:
+            # The constants' share has sums over features instead of outputs.
+            once, turned = rows.prewhitened, rows.turned(int(rows.which[0]))
+            twice = once[own].copy()
+            twice[: follow.stop - follow.start] -= rows.decay[follow, None] * once[follow]
+            moved = np.empty((kernels.BLOCK, outputs, count))
+            tall = turned.reshape(size * outputs, count)
+            information = tall.T @ ((once[own].T @ once[own]) @ turned).reshape(tall.shape)
+            gradient = tall.T @ (once[own].T @ white[own]).reshape(-1)
+        else:
+            twice, turned, moved = np.zeros((0, 0)), np.zeros((0, 0)), rows.moved
+            flat = moved[own].reshape(-1, count)
+            information, gradient = flat.T @ flat, flat.T @ white[own].reshape(-1)
+        room = kernels.room(rows.jacobian.shape[1:], count, span.coupling.shape[1:], size)
+        chain = (rows.decay, rows.whiteners, rows.which, own.start, rows.at.start)
+        kernels.add_rows(
+            rows.jacobian, white, moved, twice, turned, *chain, *span[:4], *room, LETTERS, NUMBERS
+        )
         assert span.constants_information is not None
         assert span.constants_gradient is not None
-        flat = rows.moved[own].reshape(-1, rows.moved.shape[2])
-        span.constants_information[rows.at, rows.at] += flat.T @ flat
-        span.constants_gradient[rows.at] += flat.T @ white[own].reshape(-1)
+        span.constants_information[rows.at, rows.at] += information
+        span.constants_gradient[rows.at] += gradient
 
     def _markers(self, index: int, part: Part, angles: FloatArray, angle_jacobian: FloatArray) -> Rows:
         """Markers of one segment against reference, prior mean and constants."""
@@ -237,8 +250,9 @@ class TrajectorySystem:
         decay = np.where(self.hidden.restart[index][frames], 0.0, problem.decay(index))
         whiteners, which = self._marker_whiteners(index, decay, design.growth)
         which, decay = np.where(active, which, -1), np.where(active, decay, 0.0)
-        moved = moved_by(design.features, modes, decay, whiteners, which, place >= 0)
-        return Rows(residual, jacobian, through, moved, at, decay, whiteners, which)
+        return Rows(
+            *(residual, jacobian, through, design.features, modes, place >= 0, at, decay, whiteners, which)
+        )
 
     def _marker_whiteners(
         self, index: int, decay: FloatArray, growth: FloatArray | None
@@ -265,13 +279,13 @@ class TrajectorySystem:
         decays = np.array([np.exp(-self.problem.step / JOINT_TIME), 0.0])
         offset, left = np.sqrt(OFFSET_SHARE) * sd, np.sqrt((1.0 - OFFSET_SHARE) * (1.0 - decays**2)) * sd
         which = begins.astype(np.int64)
-        # An offset that stays moves an innovation by 1 − ρ of itself.
-        share = -offset * (1.0 - decays) / left
         return Rows(
             residual=travel - offset * self.state.constants[own],
             jacobian=slope,
             through=None,
-            moved=share[which, None, None] * np.eye(3),
+            features=np.ones((which.size, 1)),
+            modes=offset * np.eye(3)[None],
+            hidden=np.zeros(travel.shape, dtype=bool),
             at=own,
             decay=decays[which],
             whiteners=np.eye(3) / left[:, None, None],
@@ -293,7 +307,7 @@ class TrajectorySystem:
                 motion.precision,
                 1.0 / motion.density,
                 part.own.start,
-                at,
+                at[::6].copy(),
                 span.diagonal,
                 span.lower,
                 span.gradient,
