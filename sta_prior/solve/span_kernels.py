@@ -239,8 +239,8 @@ def add_rows(
 
     Notes
     -----
-    A frame's unknowns are in its own rows with N = L_tJ_t, in the next frame's with −ρP, P = L_{t+1}J_t, and P
-    is N where the two frames have one whitener.
+    A frame's unknowns are in its own rows with N = L_tJ_t and in the next frame's with −ρP, P = L_{t+1}J_t;
+    P is N where the two frames have one whitener.
     """
     frames, outputs, width = jacobian.shape
     count, states = gradient.shape

@@ -6,7 +6,9 @@ of the spans: solve/chain.py.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+import math
+import weakref
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -141,6 +143,39 @@ class Part:
         return slice(self.start - self.first + 1, min(self.stop + 1, self.last) - self.first)
 
 
+class SpanMemory:
+    """Memory for spans, given again once nobody holds what was given: new memory costs as much as filling it.
+
+    Two are kept, as one span is used while the next is made.
+    """
+
+    def __init__(self) -> None:
+        self._kept: list[tuple[FloatArray, weakref.ref[FloatArray]]] = []
+
+    def __call__(self, count: int, states: int, constants: int) -> Span:
+        """Span of zeros."""
+        square = (count, states, states)
+        shapes = (square, square, (count, states, constants), (count, states))
+        ends = np.cumsum([math.prod(shape) for shape in shapes])
+        pieces = np.split(self._zeros(int(ends[-1])), ends[:-1])
+        blocks = [piece.reshape(shape) for piece, shape in zip(pieces, shapes, strict=True)]
+        nothing = np.zeros((constants, constants))
+        return Span(blocks[0], blocks[1], blocks[2], blocks[3], nothing, np.zeros(constants))
+
+    def _zeros(self, size: int) -> FloatArray:
+        for index, (memory, given) in enumerate(self._kept):
+            if given() is None and memory.size >= size:
+                break
+        else:
+            index, memory = len(self._kept), np.empty(size)
+        # Its views refer to this array, and not to the memory, which to it is a buffer.
+        array: FloatArray = np.frombuffer(memory.data, count=size)
+        array[:] = 0.0
+        self._kept[index : index + 1] = [(memory, weakref.ref(array))]
+        self._kept = self._kept[-2:]
+        return array
+
+
 @dataclass
 class TrajectorySystem:
     """A trajectory problem at a state, to be handed over in spans; adds up its cost on the way.
@@ -154,6 +189,7 @@ class TrajectorySystem:
     hidden: HiddenOutputs
     expected: bool = False
     cost: float = 0.0
+    _memory: SpanMemory = field(default_factory=SpanMemory, repr=False)
 
     def part(self, start: int, stop: int) -> Part:
         """Frames of a span and one to either side."""
@@ -163,15 +199,7 @@ class TrajectorySystem:
         """Give what the frames start … stop − 1 add to the information and its gradient."""
         problem = self.problem
         part = self.part(start, stop)
-        count, size, constants = stop - start, problem.moving + self.hidden.count, problem.constants
-        span = Span(
-            np.zeros((count, size, size)),
-            np.zeros((count, size, size)),
-            np.zeros((count, size, constants)),
-            np.zeros((count, size)),
-            np.zeros((constants, constants)),
-            np.zeros(constants),
-        )
+        span = self._memory(stop - start, problem.moving + self.hidden.count, problem.constants)
         for rows in self.rows(part):
             self._add(span, part, rows)
         self._add_motion(span, part)
