@@ -9,6 +9,7 @@ from __future__ import annotations
 import math
 import weakref
 from dataclasses import dataclass, field, replace
+from functools import cached_property
 
 import numpy as np
 
@@ -163,16 +164,13 @@ class SpanMemory:
         return Span(blocks[0], blocks[1], blocks[2], blocks[3], nothing, np.zeros(constants))
 
     def _zeros(self, size: int) -> FloatArray:
-        for index, (memory, given) in enumerate(self._kept):
-            if given() is None and memory.size >= size:
-                break
-        else:
-            index, memory = len(self._kept), np.empty(size)
+        free = [memory for memory, given in self._kept if given() is None and memory.size >= size]
+        memory = free[0] if free else np.empty(size)
         # Its views refer to this array, and not to the memory, which to it is a buffer.
         array: FloatArray = np.frombuffer(memory.data, count=size)
         array[:] = 0.0
-        self._kept[index : index + 1] = [(memory, weakref.ref(array))]
-        self._kept = self._kept[-2:]
+        others = [kept for kept in self._kept if kept[0] is not memory]
+        self._kept = [*others[-1:], (memory, weakref.ref(array))]
         return array
 
 
@@ -211,7 +209,7 @@ class TrajectorySystem:
         poses = self.state.poses[frames]
         angles, slope = angles_and_jacobians(problem.joints, poses)
         rows = [self._markers(index, part, angles, slope) for index in range(len(problem.segments))]
-        for index, own in enumerate(problem.joint_slices):
+        for index, own in enumerate(self._constants[1]):
             if own is not None:
                 rows.append(self._joint(index, own, part, poses))
         return rows
@@ -249,7 +247,7 @@ class TrajectorySystem:
         segment, modes = problem.segments[index], problem.modes[index].modes
         changes = None if segment.changes is None else segment.changes[frames]
         segment = replace(segment, points=segment.points[frames], changes=changes)
-        poses, at = state.poses[frames], problem.constant_slices[index]
+        poses, at = state.poses[frames], self._constants[0][index]
         inputs, input_jacobian = drive(segment, poses, angles, angle_jacobian)
         design = design_of(segment.artifact, inputs)
         weights = modes @ state.constants[at]
@@ -286,17 +284,26 @@ class TrajectorySystem:
         self, index: int, decay: FloatArray, growth: FloatArray | None
     ) -> tuple[FloatArray, IntArray]:
         """Of the innovations at frames with the given decay, (U, n, n), and which is whose, (F,)."""
+        if growth is None:
+            return self._usual_whiteners[index], (decay == 0.0).astype(np.int64)
+        return self._whiteners(index, decay, growth), np.arange(decay.size)
+
+    def _whiteners(self, index: int, decay: FloatArray, growth: FloatArray) -> FloatArray:
         spread = self.problem.segments[index].artifact.residual + self.problem.modes[index].rest
+        square = (decay**2)[:, None, None]
         noise = self.problem.marker_sd**2 * np.eye(spread.shape[0])
+        return whitener((1.0 - square) * (spread + growth) + (1.0 + square) * noise)
 
-        def innovation(decays: FloatArray, grown: FloatArray) -> FloatArray:
-            square = (decays**2)[:, None, None]
-            return np.asarray((1.0 - square) * grown + (1.0 + square) * noise)
+    @cached_property
+    def _usual_whiteners(self) -> list[FloatArray]:
+        """By segment, within a chain and where one begins, (2, n, n)."""
+        count = range(len(self.problem.segments))
+        return [self._whiteners(i, np.array([self.problem.decay(i), 0.0]), np.zeros((1, 1))) for i in count]
 
-        if growth is not None:
-            return whitener(innovation(decay, spread + growth)), np.arange(decay.size)
-        values, which = np.unique(decay, return_inverse=True)
-        return whitener(innovation(values, np.broadcast_to(spread, (values.size, *spread.shape)))), which
+    @cached_property
+    def _constants(self) -> tuple[list[slice], list[slice | None]]:
+        """Places of the segments' and of the joints' among the constants."""
+        return self.problem.constant_slices, self.problem.joint_slices
 
     def _joint(self, index: int, own: slice, part: Part, poses: FloatArray) -> Rows:
         """Travel of one joint centre about its constant offset."""
