@@ -165,7 +165,7 @@ class SpanMemory:
 
     def _zeros(self, size: int) -> FloatArray:
         free = [memory for memory, given in self._kept if given() is None and memory.size >= size]
-        memory = free[0] if free else np.empty(size)
+        memory = free[-1] if free else np.empty(size)
         # Its views refer to this array, and not to the memory, which to it is a buffer.
         array: FloatArray = np.frombuffer(memory.data, count=size)
         array[:] = 0.0
