@@ -132,7 +132,9 @@ def draw_trial_artifact(
     residual = np.zeros((frames, n))
     residual[0] = root @ rng.standard_normal(n)
     for frame in range(1, frames):
-        residual[frame] = decay * residual[frame - 1] + np.sqrt(1.0 - decay**2) * root @ rng.standard_normal(n)
+        residual[frame] = decay * residual[frame - 1] + np.sqrt(1.0 - decay**2) * root @ rng.standard_normal(
+            n
+        )
     drawn: FloatArray = moments.mean + moments.features @ weights + residual
     return drawn
 

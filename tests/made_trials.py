@@ -8,7 +8,7 @@ from typing import cast
 
 import numpy as np
 import xarray as xr
-from made_problems import draw_trial_artifact, made_artifact
+from made_problems import draw_artifact, draw_trial_artifact, made_artifact
 from made_studies import LAB, STUDY, leg_points, leg_poses, make_study, write_points
 
 from sta_prior.angles import JointConvention, joint_angles
@@ -92,15 +92,22 @@ def moving_poses(frames: int = 40) -> FloatArray:
     return poses
 
 
-def moved_points(poses: FloatArray, seed: int = 1) -> dict[str, FloatArray]:
-    """Markers (F, 3) in the lab with artifact drawn from the prior: weights once, the rest decaying in time."""
+def moved_points(poses: FloatArray, seed: int = 1, alone: bool = False) -> dict[str, FloatArray]:
+    """Markers (F, 3) in the lab with artifact from the prior: weights once, the rest decaying in time.
+
+    alone: every frame on its own instead.
+    """
     rng = np.random.default_rng(seed)
     frames = len(poses)
     points = leg_points(poses)
     rotation = np.swapaxes(poses[:, 0, :3, :3], -1, -2) @ poses[:, 1, :3, :3]
     angles = joint_angles(JointConvention("knee", "right"), rotation)[:, None]
     for index, (segment, artifact) in enumerate(whole_artifacts().items()):
-        drawn = draw_trial_artifact(rng, artifact, angles, 1.0 / RATE).reshape(frames, -1, 3)
+        if alone:
+            moves = draw_artifact(rng, artifact, angles)
+        else:
+            moves = draw_trial_artifact(rng, artifact, angles, 1.0 / RATE)
+        drawn = moves.reshape(frames, -1, 3)
         for place, name in enumerate(MARKERS[segment]):
             points[name] = points[name] + np.einsum("fij,fj->fi", poses[:, index, :3, :3], drawn[:, place])
     return points
@@ -115,10 +122,14 @@ def write_moving_leg(
     change: Change | None = None,
     move: FloatArray | None = None,
     side: str = "right",
+    alone: bool = False,
 ) -> Study:
-    """Write a study whose one trial has artifact; `change` edits its points, `move` (4, 4) moves its lab."""
+    """Write a study whose one trial has artifact; `change` edits its points, `move` (4, 4) moves its lab.
+
+    alone: the artifact of every frame is drawn on its own.
+    """
     path = make_study(folder, lab=lab, study=study, side=side)
-    points = moved_points(moving_poses(frames))
+    points = moved_points(moving_poses(frames), alone=alone)
     if move is not None:
         points = {name: transform_points(move, xyz) for name, xyz in points.items()}
     if change is not None:

@@ -313,7 +313,7 @@ def test_the_run_file_says_what_was_run(solved: Path) -> None:
     solution = opened(solved / "s" / "P01" / "stairs_01.solution.nc")
     assert record["prior_digest"] == solution.attrs["prior_digest"] != ""
     assert json.loads(solution.attrs["input_digests"])["prior"] == record["prior_digest"]
-    assert record["estimator"] == "frame-map"
+    assert record["estimator"] == "smoother"
     assert record["interrupted"] is False
     assert [item["trial"] for item in record["trials"]] == [*TRIALS, "table"]
     assert str(solved) not in json.dumps(record)

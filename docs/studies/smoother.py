@@ -35,6 +35,7 @@ from sta_prior.checks import FloatArray
 from sta_prior.errors import StaPriorWarning
 from sta_prior.prior import Prior, learn
 from sta_prior.prior.interface import Artifact
+from sta_prior.prior.time_scales import TimeScales
 from sta_prior.se3 import inverse, log
 from sta_prior.simulate import MECHANISMS, TASKS
 from sta_prior.simulate import motion as simulated_motion
@@ -215,7 +216,8 @@ def with_time(factor: float) -> Callable[[Artifact], Artifact]:
     """The prior with other decay times of its residual."""
 
     def change(artifact: Artifact) -> Artifact:
-        return cast(Artifact, replace(cast(Any, artifact), time_constant=factor * artifact.time_constant))
+        scales = TimeScales.single(factor * artifact.time_constant)
+        return cast(Artifact, replace(cast(Any, artifact), time_scales=scales))
 
     return change
 

@@ -11,8 +11,14 @@ import math
 import numpy as np
 from numba import njit
 
-from sta_prior.checks import FloatArray
+from sta_prior.checks import FloatArray, IntArray
 from sta_prior.se3 import jacobians
+from sta_prior.solve.chain_kernels import ByteArray, _product
+
+# Offsets in bytes into LETTERS and NUMBERS, and from one number to the next.
+_PLAIN, _TURNED = 2, 3
+_ZERO, _PLUS = 8, 16
+_BYTES = 8
 
 _SERIES_ANGLE = jacobians._SERIES_ANGLE
 _SERIES = np.array(
@@ -167,58 +173,50 @@ def step_jacobians(
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def _add_product(left: FloatArray, right: FloatArray, block: FloatArray) -> None:
-    """Add leftᵀ·right, 6×6."""
-    for i in range(6):
-        for j in range(6):
-            block[i, j] += (
-                left[0, i] * right[0, j]
-                + left[1, i] * right[1, j]
-                + left[2, i] * right[2, j]
-                + left[3, i] * right[3, j]
-                + left[4, i] * right[4, j]
-                + left[5, i] * right[5, j]
-            )
-
-
-@njit(cache=True, nogil=True, error_model="numpy")
-def _through_rates(rates: FloatArray, jacobian: FloatArray, columns: FloatArray, sign: float) -> None:
-    """Derivative of the innovations in a pose, (order, 6, 6), from that of ξ, sign · J.
+def _derivatives(
+    left: FloatArray, right: FloatArray, rates: FloatArray, transition: FloatArray, rows: FloatArray
+) -> None:
+    """Derivative of a step's innovations, (6·order, 12·order), in the state at its end, then at its start.
 
     J_r(ξ)⁻¹ ≈ 1 + ad(ξ)/2 where it acts on the rates: over one step the rest is below rounding of what moves.
     """
+    order = transition.shape[0]
+    begin = 6 * order
     for i in range(6):
         for j in range(6):
-            columns[0, i, j] = sign * jacobian[i, j]
-    for k in range(rates.shape[0]):
+            rows[i, j] = right[i, j]
+            rows[i, begin + j] = -left[i, j]
+            for k in range(1, order):
+                rows[6 * k + i, 6 * k + j] = right[i, j]
+        for k in range(order):
+            for m in range(1, order):
+                rows[6 * k + i, begin + 6 * m + i] = -transition[k, m]
+    for k in range(1, order):
+        rate = rates[k - 1]
         # −½ ad(ϖ) J, ad(ϖ) = [[ω×, 0], [v×, ω×]].
         for i in range(3):
             after, before = (i + 1) % 3, (i + 2) % 3
-            for j in range(6):
-                columns[k + 1, i, j] = (-0.5 * sign) * (
-                    rates[k, after] * jacobian[before, j] - rates[k, before] * jacobian[after, j]
-                )
-                columns[k + 1, 3 + i, j] = (-0.5 * sign) * (
-                    rates[k, after] * jacobian[3 + before, j]
-                    - rates[k, before] * jacobian[3 + after, j]
-                    + rates[k, 3 + after] * jacobian[before, j]
-                    - rates[k, 3 + before] * jacobian[after, j]
-                )
+            spin, turn, move, shift = rate[after], rate[before], rate[3 + after], rate[3 + before]
+            for first in (0, begin):
+                for j in range(first, first + 6):
+                    rows[6 * k + i, j] = -0.5 * (spin * rows[before, j] - turn * rows[after, j])
+                    rows[6 * k + 3 + i, j] = -0.5 * (
+                        spin * rows[3 + before, j]
+                        - turn * rows[3 + after, j]
+                        + move * rows[before, j]
+                        - shift * rows[after, j]
+                    )
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def _weigh(
-    columns: FloatArray, precision: FloatArray, inverse_density: FloatArray, weighed: FloatArray
-) -> None:
-    """Apply precision ⊗ diag(inverse density) to (order, 6, w)."""
-    order, _, width = columns.shape
-    for k in range(order):
+def _scatter(dense: FloatArray, places: IntArray, block: FloatArray) -> None:
+    """Add a segment's matrix to a frame's block, six columns at a time."""
+    for k in range(places.size):
         for i in range(6):
-            for j in range(width):
-                total = 0.0
-                for m in range(order):
-                    total += precision[k, m] * columns[m, i, j]
-                weighed[k, i, j] = inverse_density[i] * total
+            row = block[places[k] + i]
+            for m in range(places.size):
+                for j in range(6):
+                    row[places[m] + j] += dense[6 * k + i, 6 * m + j]
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -229,11 +227,13 @@ def add_motion(
     precision: FloatArray,
     inverse_density: FloatArray,
     start: int,
-    place: int,
-    rate_place: int,
+    places: IntArray,
     diagonal: FloatArray,
     lower: FloatArray,
     gradient: FloatArray,
+    size: IntArray,
+    letters: ByteArray,
+    numbers: FloatArray,
 ) -> float:
     """Add the motion prior of a segment to the blocks of a span; give its cost of the steps into the span.
 
@@ -245,95 +245,65 @@ def add_motion(
     precision : shape (order, order), inverse of Q for unit density
     inverse_density : shape (6,)
     start : the span's first frame among the F
-    place, rate_place : columns of the segment's pose and rates
+    places : shape (order,), where the segment's pose and rates begin among a frame's unknowns
     diagonal, lower : shape (f, p, p), added to
     gradient : shape (f, p), added to
+    size : 6·order and twice that, for BLAS
+    letters, numbers : LETTERS, NUMBERS
     """
     frames, order = poses.shape[0], transition.shape[0]
-    stop = start + gradient.shape[0]
+    stop, states = start + gradient.shape[0], 6 * order
+    letter, number, integer = letters.ctypes.data, numbers.ctypes.data, size.ctypes.data
     tangent, work = np.empty(6), np.empty((9, 3, 3))
     left, right = np.zeros((6, 6)), np.zeros((6, 6))
-    scaled, square, block = np.empty((6, 6)), np.empty((6, 6)), np.empty((6, 6))
-    residual, pull = np.empty((order, 6, 1)), np.empty((order, 6, 1))
-    after, weighed_after = np.empty((order, 6, 6)), np.empty((order, 6, 6))
-    before, weighed_before = np.empty((order, 6, 6)), np.empty((order, 6, 6))
-    carried = precision @ transition
-    steady = transition.T @ carried
+    residual, pull = np.empty(states), np.empty(states)
+    rows, weighed = np.zeros((states, 2 * states)), np.empty((states, 2 * states))
+    whole, pulled = np.empty((2 * states, 2 * states)), np.empty(2 * states)
     cost = 0.0
     for frame in range(frames - 1):
-        now, later = frame - start, frame + 1 - start
         step_jacobians(poses[frame], poses[frame + 1], tangent, left, right, work)
-        for k in range(order):
-            for i in range(6):
-                total = 0.0
-                if k == 0:
-                    total = tangent[i]
-                else:
-                    for j in range(6):
-                        total += right[i, j] * rates[frame + 1, k - 1, j]
-                for m in range(1, order):
-                    total -= transition[k, m] * rates[frame, m - 1, i]
-                residual[k, i, 0] = total
-        _weigh(residual, precision, inverse_density, pull)
-        _through_rates(rates[frame + 1], right, after, 1.0)
-        _weigh(after, precision, inverse_density, weighed_after)
+        _derivatives(left, right, rates[frame + 1], transition, rows)
         for i in range(6):
-            for j in range(6):
-                scaled[i, j] = inverse_density[i] * right[i, j]
-        if frame + 1 < stop:
-            for k in range(order):
-                for i in range(6):
-                    cost += 0.5 * residual[k, i, 0] * pull[k, i, 0]
-            into = diagonal[later]
-            square[:] = 0.0
-            _add_product(right, scaled, square)
-            for k in range(order):
-                _add_product(after[k], weighed_after[k], into[place : place + 6, place : place + 6])
-                if k == 0:
-                    continue
-                row = rate_place + 6 * (k - 1)
-                block[:] = 0.0
-                _add_product(weighed_after[k], right, block)
-                for i in range(6):
-                    for j in range(6):
-                        into[place + i, row + j] += block[i, j]
-                        into[row + j, place + i] += block[i, j]
-                for m in range(1, order):
-                    column = rate_place + 6 * (m - 1)
-                    for i in range(6):
-                        for j in range(6):
-                            into[row + i, column + j] += precision[k, m] * square[i, j]
-            for k in range(order):
-                for i in range(6):
-                    for j in range(6):
-                        gradient[later, place + j] += after[k, i, j] * pull[k, i, 0]
-                        if k > 0:
-                            gradient[later, rate_place + 6 * (k - 1) + j] += right[i, j] * pull[k, i, 0]
-        if frame < start:
-            continue
-        _through_rates(rates[frame + 1], left, before, -1.0)
-        _weigh(before, precision, inverse_density, weighed_before)
-        own, link = diagonal[now], lower[now]
-        for k in range(order):
-            _add_product(before[k], weighed_before[k], own[place : place + 6, place : place + 6])
-            _add_product(after[k], weighed_before[k], link[place : place + 6, place : place + 6])
-            for i in range(6):
+            residual[i] = tangent[i]
+            for k in range(1, order):
+                residual[6 * k + i] = 0.0
                 for j in range(6):
-                    gradient[now, place + j] += before[k, i, j] * pull[k, i, 0]
-            if k == 0:
-                continue
-            row = rate_place + 6 * (k - 1)
-            _add_product(right, weighed_before[k], link[row : row + 6, place : place + 6])
-            for i in range(6):
-                for m in range(order):
-                    gradient[now, row + i] -= transition[m, k] * pull[m, i, 0]
-                    for j in range(6):
-                        own[place + j, row + i] -= transition[m, k] * weighed_before[m, i, j]
-                        own[row + i, place + j] -= transition[m, k] * weighed_before[m, i, j]
-                        link[place + j, row + i] -= transition[m, k] * weighed_after[m, i, j]
+                    residual[6 * k + i] += right[i, j] * rates[frame + 1, k - 1, j]
+            for k in range(order):
                 for m in range(1, order):
-                    column = rate_place + 6 * (m - 1)
-                    own[row + i, column + i] += steady[k, m] * inverse_density[i]
-                    for j in range(6):
-                        link[row + j, column + i] -= carried[k, m] * scaled[i, j]
+                    residual[6 * k + i] -= transition[k, m] * rates[frame, m - 1, i]
+        for k in range(order):
+            for i in range(6):
+                row = 6 * k + i
+                pull[row] = 0.0
+                for j in range(2 * states):
+                    weighed[row, j] = 0.0
+                for m in range(order):
+                    factor = precision[k, m] * inverse_density[i]
+                    pull[row] += factor * residual[6 * m + i]
+                    for j in range(2 * states):
+                        weighed[row, j] += factor * rows[6 * m + i, j]
+        _product(
+            *(letter + _PLAIN, letter + _TURNED, integer + _BYTES, integer + _BYTES, integer),
+            *(number + _PLUS, weighed.ctypes.data, integer + _BYTES, rows.ctypes.data, integer + _BYTES),
+            *(number + _ZERO, whole.ctypes.data, integer + _BYTES),
+        )
+        for j in range(2 * states):
+            pulled[j] = 0.0
+        for i in range(states):
+            for j in range(2 * states):
+                pulled[j] += rows[i, j] * pull[i]
+        if frame + 1 < stop:
+            later = frame + 1 - start
+            for i in range(states):
+                cost += 0.5 * residual[i] * pull[i]
+            _scatter(whole[:states, :states], places, diagonal[later])
+            for i in range(states):
+                gradient[later, places[i // 6] + i % 6] += pulled[i]
+        if frame >= start:
+            now = frame - start
+            _scatter(whole[states:, states:], places, diagonal[now])
+            _scatter(whole[:states, states:], places, lower[now])
+            for i in range(states):
+                gradient[now, places[i // 6] + i % 6] += pulled[states + i]
     return cost

@@ -32,7 +32,8 @@ class Smoothed:
     """Optimum of a trajectory problem.
 
     problem, hidden, state; factor, constants: of the information at the optimum, constants by bounded
-    information; iterations, stop_reason.
+    information; misfit: mean square of what the markers' innovations are in their predicted SDs, 1 where the
+    prior's residual moves as the markers do; iterations, stop_reason.
     """
 
     problem: TrajectoryProblem
@@ -40,6 +41,7 @@ class Smoothed:
     state: Trajectory
     factor: ChainFactor
     constants: ConstantsPosterior
+    misfit: float
     iterations: int
     stop_reason: str
 
@@ -108,5 +110,9 @@ def smooth(problem: TrajectoryProblem, start: FloatArray, constant_time: float =
             reason = f"step below {TOLERANCE:g} rad and m in every frame"
             break
     # Steps see the markers where they are, the information where the prior expects them.
-    informed = factor(TrajectorySystem(problem, state, hidden, expected=True), problem.frames)
-    return Smoothed(problem, hidden, state, informed, bounded_constants(informed, bound), iterations, reason)
+    final = TrajectorySystem(problem, state, hidden, expected=True)
+    informed = factor(final, problem.frames)
+    counted = sum(float(np.isfinite(segment.points).sum()) for segment in problem.segments)
+    misfit = 2.0 * final.marker_cost / max(counted, 1.0)
+    constants = bounded_constants(informed, bound)
+    return Smoothed(problem, hidden, state, informed, constants, misfit, iterations, reason)

@@ -16,7 +16,10 @@ from sta_prior.solve.chain_kernels import ByteArray, _product
 _PLAIN, _TURNED = 2, 3
 _ZERO, _PLUS = 8, 16
 _BYTES = 8
-_OUTPUTS, _WIDTH, _SIZE, _CONSTANTS, _STRIDE, _ROWS = 0, 8, 16, 24, 32, 40
+_OUTPUTS, _WIDTH, _STATES, _CONSTANTS, _STRIDE, _FELT, _BLOCK, _FEATURES = 0, 8, 16, 24, 32, 40, 48, 56
+
+Room = tuple[IntArray, FloatArray, FloatArray]
+"""Integers for BLAS, three factors for it, three matrices."""
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -135,38 +138,62 @@ def innovations(
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
+def _transposed_product(
+    letter: int,
+    rows: int,
+    columns: int,
+    others: int,
+    left: int,
+    right: int,
+    right_stride: int,
+    factor: int,
+    kept: int,
+    result: int,
+    stride: int,
+) -> None:
+    """Add factor · leftᵀright to kept · result: (rows, columns) and (rows, others), all by address."""
+    _product(
+        *(letter + _PLAIN, letter + _TURNED, others, columns, rows, factor, right, right_stride),
+        *(left, columns, kept, result, stride),
+    )
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
 def _whiten(
     jacobian: FloatArray,
     frame: int,
     whiteners: FloatArray,
     which: int,
-    stacked: FloatArray,
-    row: int,
+    result: FloatArray,
     integer: int,
     letter: int,
     number: int,
 ) -> None:
-    """Write LJ into the rows from ``row`` on; zeros where there is no whitener."""
+    """Write LJ; zeros where there is no whitener."""
     outputs, width = jacobian.shape[1:]
     if which < 0:
-        stacked[row : row + outputs] = 0.0
+        result[:] = 0.0
         return
     _product(
         *(letter + _PLAIN, letter + _PLAIN, integer + _WIDTH, integer + _OUTPUTS, integer + _OUTPUTS),
         *(number + _PLUS, jacobian.ctypes.data + _BYTES * frame * outputs * width, integer + _WIDTH),
         *(whiteners.ctypes.data + _BYTES * which * outputs * outputs, integer + _OUTPUTS, number + _ZERO),
-        *(stacked.ctypes.data + _BYTES * row * width, integer + _WIDTH),
+        *(result.ctypes.data, integer + _WIDTH),
     )
 
 
-def room(rows: tuple[int, ...], moved: int, coupling: tuple[int, ...]) -> tuple[IntArray, FloatArray]:
+BLOCK = 16
+"""Frames whose derivatives in the constants are made together: they then lie in the nearest cache."""
+
+
+def room(rows: tuple[int, ...], moved: int, coupling: tuple[int, ...], features: int) -> Room:
     """Integers that BLAS reads by address, and scratch, for `add_rows`.
 
-    rows: (n, m); moved: k; coupling: (p, c).
+    rows: (n, m); moved: k; coupling: (p, c); features: K.
     """
     outputs, width = rows
-    size = np.array([outputs, width, coupling[0], moved, coupling[1], 2 * outputs], dtype=np.int64)
-    return size, np.zeros((2, 2 * outputs, width))
+    numbers = [outputs, width, coupling[0], moved, coupling[1], outputs * moved, BLOCK, features]
+    return np.array(numbers, dtype=np.int64), np.zeros(3), np.zeros((3, outputs, width))
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -174,6 +201,8 @@ def add_rows(
     jacobian: FloatArray,
     white: FloatArray,
     moved: FloatArray,
+    features: FloatArray,
+    turned: FloatArray,
     decay: FloatArray,
     whiteners: FloatArray,
     which: IntArray,
@@ -184,7 +213,8 @@ def add_rows(
     coupling: FloatArray,
     gradient: FloatArray,
     size: IntArray,
-    stacked: FloatArray,
+    factors: FloatArray,
+    work: FloatArray,
     letters: ByteArray,
     numbers: FloatArray,
 ) -> None:
@@ -194,76 +224,138 @@ def add_rows(
     ----------
     jacobian : shape (F, n, m), of the residuals in the first m unknowns of their frame
     white : shape (F, n), from `innovations`
-    moved : shape (F, n, k), whitened derivative of the innovations in the constants
+    moved : shape (F, n, k), whitened derivative M of the innovations in the constants; where all frames are
+        alike scratch of shape (BLOCK, n, k)
+    features, turned : shapes (f, K) and (K, n·k), whose product is M_t − ρM_{t+1} where all frames are alike;
+        else K = 0
     decay, whiteners, which : as `innovations` has them
     start : the span's first frame among the F, of which one more may follow the span
     column : where the k constants begin; no other rows have them
     diagonal, lower : shape (f, p, p), added to
     coupling : shape (f, p, c), written
     gradient : shape (f, p), added to
-    size, stacked : from `room`
+    size, factors, work : from `room`
     letters, numbers : LETTERS, NUMBERS
 
     Notes
     -----
-    With N = L_tJ_t and M = ρL_{t+1}J_t the frame's own rows and the next frame's are, stacked, [N; −M]: one
-    product for the diagonal block, and one for the coupling.
+    A frame's unknowns are in its own rows with N = L_tJ_t and in the next frame's with −ρP, P = L_{t+1}J_t;
+    P is N where the two frames have one whitener.
     """
     frames, outputs, width = jacobian.shape
     count, states = gradient.shape
     constants = moved.shape[2]
-    letter = letters.ctypes.data
-    number = numbers.ctypes.data
-    integer = size.ctypes.data
-    # Two in turn: a frame's rows, and the upper half of the next one's.
-    block = _BYTES * 2 * outputs * width
-    half = _BYTES * outputs * width
-    _whiten(jacobian, start, whiteners, which[start], stacked[0], 0, integer, letter, number)
+    alike = turned.shape[0] > 0
+    integer, letter, number = size.ctypes.data, letters.ctypes.data, numbers.ctypes.data
+    factor, matrix = factors.ctypes.data, _BYTES * outputs * width
+    past = work.ctypes.data + 2 * matrix
+    _whiten(jacobian, start, whiteners, which[start], work[0], integer, letter, number)
     for index in range(count):
         frame = start + index
-        own = stacked[index % 2]
-        now = stacked.ctypes.data + (index % 2) * block
-        ahead = stacked.ctypes.data + ((index + 1) % 2) * block
-        follows = frame + 1 < frames
-        factor = -decay[frame + 1] if follows else 0.0
-        if follows:
-            later, kind = stacked[(index + 1) % 2], which[frame + 1]
-            _whiten(jacobian, frame + 1, whiteners, kind, later, 0, integer, letter, number)
-        if factor == 0.0:
-            own[outputs:] = 0.0
-            rows = _OUTPUTS
-        else:
-            rows = _ROWS
-            if which[frame + 1] == which[frame]:
-                for i in range(outputs):
-                    for j in range(width):
-                        own[outputs + i, j] = factor * own[i, j]
-            else:
-                _whiten(jacobian, frame, whiteners, which[frame + 1], own, outputs, integer, letter, number)
-                for i in range(outputs, 2 * outputs):
-                    for j in range(width):
-                        own[i, j] *= factor
-            # Blocks (t + 1, t): NᵀM of the next frame's rows.
-            _product(
-                *(letter + _PLAIN, letter + _TURNED, integer + _WIDTH, integer + _WIDTH, integer + _OUTPUTS),
-                *(number + _PLUS, now + half, integer + _WIDTH, ahead, integer + _WIDTH),
-                *(number + _PLUS, lower.ctypes.data + _BYTES * index * states * states, integer + _SIZE),
+        now = work.ctypes.data + (index % 2) * matrix
+        ahead = work.ctypes.data + ((index + 1) % 2) * matrix
+        share = 0.0
+        if frame + 1 < frames:
+            _whiten(
+                jacobian,
+                frame + 1,
+                whiteners,
+                which[frame + 1],
+                work[(index + 1) % 2],
+                integer,
+                letter,
+                number,
             )
-        _product(
-            *(letter + _PLAIN, letter + _TURNED, integer + _WIDTH, integer + _WIDTH, integer + rows),
-            *(number + _PLUS, now, integer + _WIDTH, now, integer + _WIDTH),
-            *(number + _PLUS, diagonal.ctypes.data + _BYTES * index * states * states, integer + _SIZE),
+            share = -decay[frame + 1]
+        same = share == 0.0 or which[frame + 1] == which[frame]
+        again = now if same else past
+        kept = work[index % 2] if same else work[2]
+        factors[0] = 1.0 + share**2 if same else 1.0
+        factors[1] = share
+        factors[2] = share**2
+        block = _BYTES * index * states * states
+        _transposed_product(
+            *(letter, integer + _OUTPUTS, integer + _WIDTH, integer + _WIDTH, now, now, integer + _WIDTH),
+            *(factor, number + _PLUS, diagonal.ctypes.data + block, integer + _STATES),
         )
-        if constants > 0:
-            at = coupling.ctypes.data + _BYTES * (index * states * coupling.shape[2] + column)
-            _product(
-                *(letter + _PLAIN, letter + _TURNED, integer + _CONSTANTS, integer + _WIDTH, integer + rows),
-                *(number + _PLUS, moved.ctypes.data + _BYTES * frame * outputs * constants),
-                *(integer + _CONSTANTS, now, integer + _WIDTH, number + _ZERO, at, integer + _STRIDE),
+        if not same:
+            _whiten(jacobian, frame, whiteners, which[frame + 1], work[2], integer, letter, number)
+            _transposed_product(
+                *(
+                    letter,
+                    integer + _OUTPUTS,
+                    integer + _WIDTH,
+                    integer + _WIDTH,
+                    past,
+                    past,
+                    integer + _WIDTH,
+                ),
+                *(factor + 2 * _BYTES, number + _PLUS, diagonal.ctypes.data + block, integer + _STATES),
+            )
+        if share != 0.0:
+            _transposed_product(
+                *(
+                    letter,
+                    integer + _OUTPUTS,
+                    integer + _WIDTH,
+                    integer + _WIDTH,
+                    ahead,
+                    again,
+                    integer + _WIDTH,
+                ),
+                *(factor + _BYTES, number + _PLUS, lower.ctypes.data + block, integer + _STATES),
             )
         for i in range(outputs):
             for j in range(width):
-                gradient[index, j] += own[i, j] * white[frame, i]
-            if follows:
+                gradient[index, j] += work[index % 2, i, j] * white[frame, i]
+            if share != 0.0:
                 for j in range(width):
-                    gradient[index, j] += own[outputs + i, j] * white[frame + 1, i]
+                    gradient[index, j] += share * kept[i, j] * white[frame + 1, i]
+        if constants == 0:
+            continue
+        own = moved.ctypes.data
+        if alike:
+            if index % BLOCK == 0:
+                size[6] = min(BLOCK, count - index)
+                _product(
+                    *(
+                        letter + _PLAIN,
+                        letter + _PLAIN,
+                        integer + _FELT,
+                        integer + _BLOCK,
+                        integer + _FEATURES,
+                    ),
+                    *(number + _PLUS, turned.ctypes.data, integer + _FELT),
+                    *(features.ctypes.data + _BYTES * index * features.shape[1], integer + _FEATURES),
+                    *(number + _ZERO, own, integer + _FELT),
+                )
+            own += _BYTES * (index % BLOCK) * outputs * constants
+        else:
+            own += _BYTES * frame * outputs * constants
+        place = coupling.ctypes.data + _BYTES * (index * states * coupling.shape[2] + column)
+        _transposed_product(
+            *(
+                letter,
+                integer + _OUTPUTS,
+                integer + _WIDTH,
+                integer + _CONSTANTS,
+                now,
+                own,
+                integer + _CONSTANTS,
+            ),
+            *(number + _PLUS, number + _ZERO, place, integer + _STRIDE),
+        )
+        if not alike and share != 0.0:
+            own += _BYTES * outputs * constants
+            _transposed_product(
+                *(letter, integer + _OUTPUTS, integer + _WIDTH, integer + _CONSTANTS),
+                *(
+                    again,
+                    own,
+                    integer + _CONSTANTS,
+                    factor + _BYTES,
+                    number + _PLUS,
+                    place,
+                    integer + _STRIDE,
+                ),
+            )

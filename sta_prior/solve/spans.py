@@ -6,12 +6,16 @@ of the spans: solve/chain.py.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+import math
+import weakref
+from dataclasses import dataclass, field, replace
+from functools import cached_property
 
 import numpy as np
 
 from sta_prior.checks import BoolArray, FloatArray, IntArray
-from sta_prior.prior.interface import design_of
+from sta_prior.prior.interface import design_of, time_scales_of
+from sta_prior.prior.time_scales import TimeScales
 from sta_prior.solve import span_kernels as kernels
 from sta_prior.solve.chain import Span
 from sta_prior.solve.chain_kernels import LETTERS, NUMBERS
@@ -36,15 +40,18 @@ class Rows:
     """A chain of correlated residuals over the frames of a span and one to either side.
 
     residual: (F, n) e; jacobian: (F, n, m) in the first m unknowns of the frame; through: (F, n, m), the part
-    of it that the prior's mean makes, 0 for a joint; moved: (F, n, k), derivative of the whitened innovations
-    in the constants at ``at``; decay: (F,) ρ towards the frame before, 0 where the chain begins; whiteners: L
-    with L Q Lᵀ = 1 for the innovations' covariance Q, (U, n, n); which: (F,), the frame's, −1 for no rows.
+    of it that the prior's mean makes, 0 for a joint; features, modes: (F, K) and (K, n, k), whose product is
+    −∂e/∂u for the constants at ``at``; hidden: (F, n), outputs that do not feel them; decay: (F,) ρ towards
+    the frame before, 0 where the chain begins; whiteners: (U, n, n), L with L Q Lᵀ = 1 for the innovations'
+    covariance Q; which: (F,), the frame's, −1 for no rows.
     """
 
     residual: FloatArray
     jacobian: FloatArray
     through: FloatArray | None
-    moved: FloatArray
+    features: FloatArray
+    modes: FloatArray
+    hidden: BoolArray
     at: slice
     decay: FloatArray
     whiteners: FloatArray
@@ -72,47 +79,61 @@ class Rows:
         past[1:] = self.decay[1:, None, None] * (factor[1:] @ jacobian[:-1])
         return factor @ jacobian, past
 
+    @property
+    def alike(self) -> bool:
+        """Whether all frames have one whitener and nothing is hidden."""
+        return bool((self.which == self.which[0]).all() and self.which[0] >= 0 and not self.hidden.any())
+
+    @property
+    def flat_shape(self) -> tuple[int, int]:
+        """Modes as a matrix: features by outputs and constants."""
+        features, outputs, constants = self.modes.shape
+        return features, outputs * constants
+
+    @property
+    def prewhitened(self) -> FloatArray:
+        """Features less those of the frame before, (F, K)."""
+        result = self.features.copy()
+        result[1:] -= self.decay[1:, None] * self.features[:-1]
+        return result
+
+    def turned(self, kind: int) -> FloatArray:
+        """Modes whitened, with the sign of a derivative, (K, n·k)."""
+        turned: FloatArray = (-self.whiteners[kind] @ self.modes).reshape(self.flat_shape)
+        return turned
+
+    @property
+    def moved(self) -> FloatArray:
+        """Derivative of the whitened innovations in the constants, (F, n, k)."""
+        if self.alike:
+            turned = self.turned(int(self.which[0]))
+            return (self.prewhitened @ turned).reshape(-1, *self.modes.shape[1:])
+        factor = self.whiteners[self.which] * (self.which >= 0)[:, None, None]
+        felt = self.features @ self.modes.reshape(self.flat_shape)
+        felt = felt.reshape(-1, *self.modes.shape[1:])
+        felt[self.hidden] = 0.0
+        felt[1:] -= self.decay[1:, None, None] * felt[:-1].copy()
+        return -factor @ felt
+
+
+def fast_part(scales: TimeScales, step: float) -> tuple[float, float]:
+    """Share of a residual's variance that decays fast, and the white variance that stands for it.
+
+    Only the slowest part is prewhitened. A fast one is taken as white noise with the same sum over all lags,
+    s(1 + ρ)/(1 − ρ): to a motion that is slow beside it that is all it is.
+    """
+    if scales.constants.size < 2:
+        return 0.0, 0.0
+    decay = np.exp(-step / scales.constants[1:])
+    share = scales.shares[1:]
+    return float(share.sum()), float((share * (1.0 + decay) / (1.0 - decay)).sum())
+
 
 def whitener(covariance: FloatArray) -> FloatArray:
     """Factor L with L C Lᵀ = 1, lower triangular, shape (..., n, n)."""
     factor = np.linalg.cholesky(covariance)
     identity = np.broadcast_to(np.eye(covariance.shape[-1]), covariance.shape)
     return np.asarray(np.linalg.solve(factor, identity))
-
-
-def moved_by(
-    features: FloatArray,
-    modes: FloatArray,
-    decay: FloatArray,
-    whiteners: FloatArray,
-    which: IntArray,
-    hidden: BoolArray,
-) -> FloatArray:
-    """Derivative of the whitened innovations in the constants, (F, n, k); arguments as `Rows` has them.
-
-    Where nothing is hidden and a whitener serves many frames, the features are prewhitened instead of the
-    outputs, and the modes whitened once. Else frame by frame; a hidden output does not feel the constants.
-    """
-    (count, size), (outputs, constants) = features.shape, modes.shape[1:]
-    innovation = features.copy()
-    innovation[1:] -= decay[1:, None] * features[:-1]
-    result = np.zeros((count, outputs, constants))
-    apart: BoolArray = np.asarray(hidden.any(axis=1))
-    apart[1:] |= apart[:-1] & (decay[1:] > 0.0)
-    alone = len(whiteners) == count
-    for kind, factor in enumerate(() if alone else whiteners):
-        turned = (-factor @ modes).reshape(size, outputs * constants)
-        frames = (which == kind) & ~apart
-        if frames.all():
-            return np.asarray((innovation @ turned).reshape(result.shape))
-        result[frames] = (innovation[frames] @ turned).reshape(-1, outputs, constants)
-    frames = (which >= 0) & (apart | alone)
-    if frames.any():
-        flat = modes.reshape(size, outputs * constants)
-        felt = (features @ flat).reshape(result.shape) * ~hidden[..., None]
-        felt[1:] -= decay[1:, None, None] * felt[:-1].copy()
-        result[frames] = -whiteners[which[frames]] @ felt[frames]
-    return result
 
 
 @dataclass(frozen=True)
@@ -143,12 +164,43 @@ class Part:
         return slice(self.start - self.first + 1, min(self.stop + 1, self.last) - self.first)
 
 
+class SpanMemory:
+    """Memory for spans, given again once nobody holds what was given: new memory costs as much as filling it.
+
+    Two are kept, as one span is used while the next is made.
+    """
+
+    def __init__(self) -> None:
+        self._kept: list[tuple[FloatArray, weakref.ref[FloatArray]]] = []
+
+    def __call__(self, count: int, states: int, constants: int) -> Span:
+        """Span of zeros."""
+        square = (count, states, states)
+        shapes = (square, square, (count, states, constants), (count, states))
+        ends = np.cumsum([math.prod(shape) for shape in shapes])
+        pieces = np.split(self._zeros(int(ends[-1])), ends[:-1])
+        blocks = [piece.reshape(shape) for piece, shape in zip(pieces, shapes, strict=True)]
+        nothing = np.zeros((constants, constants))
+        return Span(blocks[0], blocks[1], blocks[2], blocks[3], nothing, np.zeros(constants))
+
+    def _zeros(self, size: int) -> FloatArray:
+        free = [memory for memory, given in self._kept if given() is None and memory.size >= size]
+        memory = free[-1] if free else np.empty(size)
+        # Its views refer to this array, and not to the memory, which to it is a buffer.
+        array: FloatArray = np.frombuffer(memory.data, count=size)
+        array[:] = 0.0
+        others = [kept for kept in self._kept if kept[0] is not memory]
+        self._kept = [*others[-1:], (memory, weakref.ref(array))]
+        return array
+
+
 @dataclass
 class TrajectorySystem:
     """A trajectory problem at a state, to be handed over in spans; adds up its cost on the way.
 
     cost: half the squared residuals of the spans asked for since it was set to zero, without the prior of the
-    constants; expected: take the markers where the prior expects them, for the information (see marker_term).
+    constants; marker_cost: the markers' part of it; expected: take the markers where the prior expects them,
+    for the information (see marker_term).
     """
 
     problem: TrajectoryProblem
@@ -156,6 +208,8 @@ class TrajectorySystem:
     hidden: HiddenOutputs
     expected: bool = False
     cost: float = 0.0
+    marker_cost: float = 0.0
+    _memory: SpanMemory = field(default_factory=SpanMemory, repr=False)
 
     def part(self, start: int, stop: int) -> Part:
         """Frames of a span and one to either side."""
@@ -165,15 +219,7 @@ class TrajectorySystem:
         """Give what the frames start … stop − 1 add to the information and its gradient."""
         problem = self.problem
         part = self.part(start, stop)
-        count, size, constants = stop - start, problem.moving + self.hidden.count, problem.constants
-        span = Span(
-            np.zeros((count, size, size)),
-            np.zeros((count, size, size)),
-            np.zeros((count, size, constants)),
-            np.zeros((count, size)),
-            np.zeros((constants, constants)),
-            np.zeros(constants),
-        )
+        span = self._memory(stop - start, problem.moving + self.hidden.count, problem.constants)
         for rows in self.rows(part):
             self._add(span, part, rows)
         self._add_motion(span, part)
@@ -185,24 +231,39 @@ class TrajectorySystem:
         poses = self.state.poses[frames]
         angles, slope = angles_and_jacobians(problem.joints, poses)
         rows = [self._markers(index, part, angles, slope) for index in range(len(problem.segments))]
-        for index, own in enumerate(problem.joint_slices):
+        for index, own in enumerate(self._constants[1]):
             if own is not None:
                 rows.append(self._joint(index, own, part, poses))
         return rows
 
     def _add(self, span: Span, part: Part, rows: Rows) -> None:
-        white, own = rows.white, part.own
-        self.cost += 0.5 * float((white[own] ** 2).sum())
-        room = kernels.room(rows.jacobian.shape[1:], rows.moved.shape[2], span.coupling.shape[1:])
-        chain = (rows.jacobian, white, rows.moved, rows.decay, rows.whiteners, rows.which)
-        kernels.add_rows(*chain, own.start, rows.at.start, *span[:4], *room, LETTERS, NUMBERS)
+        white, own, follow = rows.white, part.own, part.after
+        size, outputs, count = rows.modes.shape
+        cost = 0.5 * float((white[own] ** 2).sum())
+        self.cost += cost
+        self.marker_cost += cost if rows.through is not None else 0.0
+        if rows.alike:
+            # The constants' share has sums over features instead of outputs.
+            once, turned = rows.prewhitened, rows.turned(int(rows.which[0]))
+            twice = once[own].copy()
+            twice[: follow.stop - follow.start] -= rows.decay[follow, None] * once[follow]
+            moved = np.empty((kernels.BLOCK, outputs, count))
+            tall = turned.reshape(size * outputs, count)
+            information = tall.T @ ((once[own].T @ once[own]) @ turned).reshape(tall.shape)
+            gradient = tall.T @ (once[own].T @ white[own]).reshape(-1)
+        else:
+            twice, turned, moved = np.zeros((0, 0)), np.zeros((0, 0)), rows.moved
+            flat = moved[own].reshape(-1, count)
+            information, gradient = flat.T @ flat, flat.T @ white[own].reshape(-1)
+        room = kernels.room(rows.jacobian.shape[1:], count, span.coupling.shape[1:], size)
+        chain = (rows.decay, rows.whiteners, rows.which, own.start, rows.at.start)
+        kernels.add_rows(
+            rows.jacobian, white, moved, twice, turned, *chain, *span[:4], *room, LETTERS, NUMBERS
+        )
         assert span.constants_information is not None
         assert span.constants_gradient is not None
-        if not rows.moved.shape[2]:
-            return
-        flat = rows.moved[own].reshape(-1, rows.moved.shape[2])
-        span.constants_information[rows.at, rows.at] += flat.T @ flat
-        span.constants_gradient[rows.at] += flat.T @ white[own].reshape(-1)
+        span.constants_information[rows.at, rows.at] += information
+        span.constants_gradient[rows.at] += gradient
 
     def _markers(self, index: int, part: Part, angles: FloatArray, angle_jacobian: FloatArray) -> Rows:
         """Markers of one segment against reference, prior mean and constants."""
@@ -210,7 +271,7 @@ class TrajectorySystem:
         segment, modes = problem.segments[index], problem.modes[index].modes
         changes = None if segment.changes is None else segment.changes[frames]
         segment = replace(segment, points=segment.points[frames], changes=changes)
-        poses, at = state.poses[frames], problem.constant_slices[index]
+        poses, at = state.poses[frames], self._constants[0][index]
         inputs, input_jacobian = drive(segment, poses, angles, angle_jacobian)
         design = design_of(segment.artifact, inputs)
         weights = modes @ state.constants[at]
@@ -241,24 +302,35 @@ class TrajectorySystem:
         decay = np.where(self.hidden.restart[index][frames], 0.0, problem.decay(index))
         whiteners, which = self._marker_whiteners(index, decay, design.growth)
         which, decay = np.where(active, which, -1), np.where(active, decay, 0.0)
-        moved = moved_by(design.features, modes, decay, whiteners, which, place >= 0)
-        return Rows(residual, jacobian, through, moved, at, decay, whiteners, which)
+        return Rows(
+            *(residual, jacobian, through, design.features, modes, place >= 0, at, decay, whiteners, which)
+        )
 
     def _marker_whiteners(
         self, index: int, decay: FloatArray, growth: FloatArray | None
     ) -> tuple[FloatArray, IntArray]:
         """Of the innovations at frames with the given decay, (U, n, n), and which is whose, (F,)."""
+        if growth is None:
+            return self._usual_whiteners[index], (decay == 0.0).astype(np.int64)
+        return self._whiteners(index, decay, growth), np.arange(decay.size)
+
+    def _whiteners(self, index: int, decay: FloatArray, growth: FloatArray) -> FloatArray:
         spread = self.problem.segments[index].artifact.residual + self.problem.modes[index].rest
-        noise = self.problem.marker_sd**2 * np.eye(spread.shape[0])
+        square = (decay**2)[:, None, None]
+        fast, white = fast_part(time_scales_of(self.problem.segments[index].artifact), self.problem.step)
+        noise = self.problem.marker_sd**2 * np.eye(spread.shape[0]) + white * spread
+        return whitener((1.0 - square) * ((1.0 - fast) * spread + growth) + (1.0 + square) * noise)
 
-        def innovation(decays: FloatArray, grown: FloatArray) -> FloatArray:
-            square = (decays**2)[:, None, None]
-            return np.asarray((1.0 - square) * grown + (1.0 + square) * noise)
+    @cached_property
+    def _usual_whiteners(self) -> list[FloatArray]:
+        """By segment, within a chain and where one begins, (2, n, n)."""
+        count = range(len(self.problem.segments))
+        return [self._whiteners(i, np.array([self.problem.decay(i), 0.0]), np.zeros((1, 1))) for i in count]
 
-        if growth is not None:
-            return whitener(innovation(decay, spread + growth)), np.arange(decay.size)
-        values, which = np.unique(decay, return_inverse=True)
-        return whitener(innovation(values, np.broadcast_to(spread, (values.size, *spread.shape)))), which
+    @cached_property
+    def _constants(self) -> tuple[list[slice], list[slice | None]]:
+        """Places of the segments' and of the joints' among the constants."""
+        return self.problem.constant_slices, self.problem.joint_slices
 
     def _joint(self, index: int, own: slice, part: Part, poses: FloatArray) -> Rows:
         """Travel of one joint centre about its constant offset."""
@@ -269,13 +341,13 @@ class TrajectorySystem:
         decays = np.array([np.exp(-self.problem.step / JOINT_TIME), 0.0])
         offset, left = np.sqrt(OFFSET_SHARE) * sd, np.sqrt((1.0 - OFFSET_SHARE) * (1.0 - decays**2)) * sd
         which = begins.astype(np.int64)
-        # An offset that stays moves an innovation by 1 − ρ of itself.
-        share = -offset * (1.0 - decays) / left
         return Rows(
             residual=travel - offset * self.state.constants[own],
             jacobian=slope,
             through=None,
-            moved=share[which, None, None] * np.eye(3),
+            features=np.ones((which.size, 1)),
+            modes=offset * np.eye(3)[None],
+            hidden=np.zeros(travel.shape, dtype=bool),
             at=own,
             decay=decays[which],
             whiteners=np.eye(3) / left[:, None, None],
@@ -297,11 +369,13 @@ class TrajectorySystem:
                 motion.precision,
                 1.0 / motion.density,
                 part.own.start,
-                int(at[0]),
-                int(at[6]),
+                at[::6].copy(),
                 span.diagonal,
                 span.lower,
                 span.gradient,
+                np.array([at.size, 2 * at.size]),
+                LETTERS,
+                NUMBERS,
             )
 
     def _begin(self, span: Span, index: int, at: IntArray) -> None:
