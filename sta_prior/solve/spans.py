@@ -154,14 +154,13 @@ class SpanMemory:
         self._kept: list[tuple[FloatArray, weakref.ref[FloatArray]]] = []
 
     def __call__(self, count: int, states: int, constants: int) -> Span:
-        """Span of zeros."""
+        """Span of zeros, without the constants' own part."""
         square = (count, states, states)
         shapes = (square, square, (count, states, constants), (count, states))
         ends = np.cumsum([math.prod(shape) for shape in shapes])
         pieces = np.split(self._zeros(int(ends[-1])), ends[:-1])
         blocks = [piece.reshape(shape) for piece, shape in zip(pieces, shapes, strict=True)]
-        nothing = np.zeros((constants, constants))
-        return Span(blocks[0], blocks[1], blocks[2], blocks[3], nothing, np.zeros(constants))
+        return Span(blocks[0], blocks[1], blocks[2], blocks[3])
 
     def _zeros(self, size: int) -> FloatArray:
         free = [memory for memory, given in self._kept if given() is None and memory.size >= size]
@@ -198,10 +197,13 @@ class TrajectorySystem:
         problem = self.problem
         part = self.part(start, stop)
         span = self._memory(stop - start, problem.moving + self.hidden.count, problem.constants)
+        information, gradient = np.zeros((problem.constants, problem.constants)), np.zeros(problem.constants)
         for rows in self.rows(part):
-            self._add(span, part, rows)
+            own, pull = self._add(span, part, rows)
+            information[rows.at, rows.at] += own
+            gradient[rows.at] += pull
         self._add_motion(span, part)
-        return span
+        return span._replace(constants_information=information, constants_gradient=gradient)
 
     def rows(self, part: Part) -> list[Rows]:
         """Chains of residuals of all segments and joints that constrain, in this order."""
@@ -214,7 +216,8 @@ class TrajectorySystem:
                 rows.append(self._joint(index, own, part, poses))
         return rows
 
-    def _add(self, span: Span, part: Part, rows: Rows) -> None:
+    def _add(self, span: Span, part: Part, rows: Rows) -> tuple[FloatArray, FloatArray]:
+        """Add rows to the frames' blocks; give the information and gradient of their own constants."""
         white, own, follow = rows.white, part.own, part.after
         size, outputs, count = rows.modes.shape
         self.cost += 0.5 * float((white[own] ** 2).sum())
@@ -236,10 +239,7 @@ class TrajectorySystem:
         kernels.add_rows(
             rows.jacobian, white, moved, twice, turned, *chain, *span[:4], *room, LETTERS, NUMBERS
         )
-        assert span.constants_information is not None
-        assert span.constants_gradient is not None
-        span.constants_information[rows.at, rows.at] += information
-        span.constants_gradient[rows.at] += gradient
+        return information, gradient
 
     def _markers(self, index: int, part: Part, angles: FloatArray, angle_jacobian: FloatArray) -> Rows:
         """Markers of one segment against reference, prior mean and constants."""
