@@ -255,7 +255,8 @@ NAME_CASES: dict[str, tuple[tuple[str, ...], str]] = {
     "trial": ((*SOLVE, "--trials", "stairs_1"), "study.toml: no trial stairs_1. Did you mean stairs_01?"),
     "estimator": (
         (*SOLVE[:-1], "rigit"),
-        "--estimator: no estimator rigit here, known: rigid, linked, frame-map, smoother. Did you mean rigid?",
+        "--estimator: no estimator rigit here, known: rigid, linked, frame-map, smoother. "
+        "Did you mean rigid?",
     ),
     "estimator without prior": (
         (*SOLVE[:-1], "frame-map"),

@@ -31,6 +31,8 @@ KERNELS = (
     *("prior/complete", "prior/shrinkage"),
     *("solve/terms", "solve/frame", "solve/posterior"),
     *("solve/chain", "solve/chain_kernels", "solve/chain_marginals"),
+    *("solve/motion", "solve/motion_kernels", "solve/constants", "solve/rows", "solve/spans"),
+    *("solve/span_kernels", "solve/trajectory", "solve/smoother", "solve/trajectory_posterior"),
 )
 NOT_IN_A_KERNEL = {"xarray", "pathlib", "matplotlib", "h5netcdf", "ezc3d", "typer", "rich"}
 

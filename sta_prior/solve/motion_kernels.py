@@ -49,7 +49,7 @@ def _coefficients(square: float, result: FloatArray) -> None:
 
 @njit(cache=True, nogil=True, error_model="numpy")
 def _rotation_vector(rotation: FloatArray, vector: FloatArray) -> None:
-    """Rotation vector of a rotation, by the quaternion's largest component (Shepperd 1978, from memory)."""
+    """Rotation vector of a rotation, by way of the quaternion: right at any angle."""
     trace = rotation[0, 0] + rotation[1, 1] + rotation[2, 2]
     largest = 0
     for i in range(1, 3):

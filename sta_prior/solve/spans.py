@@ -13,13 +13,13 @@ from functools import cached_property
 
 import numpy as np
 
-from sta_prior.checks import BoolArray, FloatArray, IntArray
+from sta_prior.checks import FloatArray, IntArray
 from sta_prior.prior.interface import design_of, time_scales_of
-from sta_prior.prior.time_scales import TimeScales
 from sta_prior.solve import span_kernels as kernels
 from sta_prior.solve.chain import Span
 from sta_prior.solve.chain_kernels import LETTERS, NUMBERS
 from sta_prior.solve.motion_kernels import add_motion
+from sta_prior.solve.rows import Rows, fast_part, whitener
 from sta_prior.solve.terms import BALL_JOINT_SD, angles_and_jacobians, drive, joint_travel
 from sta_prior.solve.trajectory import (
     JOINT_TIME,
@@ -33,107 +33,6 @@ from sta_prior.solve.trajectory import (
 ANCHOR, WHOLE_ANCHOR = 1e-4, 5e-2
 """Precision that anchors a pose in every frame, and at most over the whole trial, 1/rad² and 1/m²: a spread
 of metres and radians, far from what counts as determined."""
-
-
-@dataclass(frozen=True)
-class Rows:
-    """A chain of correlated residuals over the frames of a span and one to either side.
-
-    residual: (F, n) e; jacobian: (F, n, m) in the first m unknowns of the frame; through: (F, n, m), the part
-    of it that the prior's mean makes, 0 for a joint; features, modes: (F, K) and (K, n, k), whose product is
-    −∂e/∂u for the constants at ``at``; hidden: (F, n), outputs that do not feel them; decay: (F,) ρ towards
-    the frame before, 0 where the chain begins; whiteners: (U, n, n), L with L Q Lᵀ = 1 for the innovations'
-    covariance Q; which: (F,), the frame's, −1 for no rows.
-    """
-
-    residual: FloatArray
-    jacobian: FloatArray
-    through: FloatArray | None
-    features: FloatArray
-    modes: FloatArray
-    hidden: BoolArray
-    at: slice
-    decay: FloatArray
-    whiteners: FloatArray
-    which: IntArray
-
-    @property
-    def white(self) -> FloatArray:
-        """Whitened innovations, (F, n)."""
-        result = np.empty_like(self.residual)
-        kernels.innovations(self.residual, self.decay, self.whiteners, self.which, result)
-        return result
-
-    def whitened(self) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
-        """Innovations (F, n), their derivatives in the frame's unknowns, in those before, in the constants.
-
-        The first frame of the rows has nothing before it here and counts as the beginning of a chain.
-        """
-        now, past = self.derivatives(self.jacobian)
-        return self.white, now, past, self.moved
-
-    def derivatives(self, jacobian: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Whitened derivatives (F, n, m) in the frame's unknowns and, sign turned, in those before."""
-        factor = self.whiteners[self.which] * (self.which >= 0)[:, None, None]
-        past = np.zeros_like(jacobian)
-        past[1:] = self.decay[1:, None, None] * (factor[1:] @ jacobian[:-1])
-        return factor @ jacobian, past
-
-    @property
-    def alike(self) -> bool:
-        """Whether all frames have one whitener and nothing is hidden."""
-        return bool((self.which == self.which[0]).all() and self.which[0] >= 0 and not self.hidden.any())
-
-    @property
-    def flat_shape(self) -> tuple[int, int]:
-        """Modes as a matrix: features by outputs and constants."""
-        features, outputs, constants = self.modes.shape
-        return features, outputs * constants
-
-    @property
-    def prewhitened(self) -> FloatArray:
-        """Features less those of the frame before, (F, K)."""
-        result = self.features.copy()
-        result[1:] -= self.decay[1:, None] * self.features[:-1]
-        return result
-
-    def turned(self, kind: int) -> FloatArray:
-        """Modes whitened, with the sign of a derivative, (K, n·k)."""
-        turned: FloatArray = (-self.whiteners[kind] @ self.modes).reshape(self.flat_shape)
-        return turned
-
-    @property
-    def moved(self) -> FloatArray:
-        """Derivative of the whitened innovations in the constants, (F, n, k)."""
-        if self.alike:
-            turned = self.turned(int(self.which[0]))
-            return (self.prewhitened @ turned).reshape(-1, *self.modes.shape[1:])
-        factor = self.whiteners[self.which] * (self.which >= 0)[:, None, None]
-        felt = self.features @ self.modes.reshape(self.flat_shape)
-        felt = felt.reshape(-1, *self.modes.shape[1:])
-        felt[self.hidden] = 0.0
-        felt[1:] -= self.decay[1:, None, None] * felt[:-1].copy()
-        return -factor @ felt
-
-
-def fast_part(scales: TimeScales, step: float) -> tuple[float, float]:
-    """Share of a residual's variance that decays fast, and the white variance that stands for it.
-
-    Only the slowest part is prewhitened. A fast one is taken as white noise with the same sum over all lags,
-    s(1 + ρ)/(1 − ρ): to a motion that is slow beside it that is all it is.
-    """
-    if scales.constants.size < 2:
-        return 0.0, 0.0
-    decay = np.exp(-step / scales.constants[1:])
-    share = scales.shares[1:]
-    return float(share.sum()), float((share * (1.0 + decay) / (1.0 - decay)).sum())
-
-
-def whitener(covariance: FloatArray) -> FloatArray:
-    """Factor L with L C Lᵀ = 1, lower triangular, shape (..., n, n)."""
-    factor = np.linalg.cholesky(covariance)
-    identity = np.broadcast_to(np.eye(covariance.shape[-1]), covariance.shape)
-    return np.asarray(np.linalg.solve(factor, identity))
 
 
 @dataclass(frozen=True)
@@ -174,14 +73,13 @@ class SpanMemory:
         self._kept: list[tuple[FloatArray, weakref.ref[FloatArray]]] = []
 
     def __call__(self, count: int, states: int, constants: int) -> Span:
-        """Span of zeros."""
+        """Span of zeros, without the constants' own part."""
         square = (count, states, states)
         shapes = (square, square, (count, states, constants), (count, states))
         ends = np.cumsum([math.prod(shape) for shape in shapes])
         pieces = np.split(self._zeros(int(ends[-1])), ends[:-1])
         blocks = [piece.reshape(shape) for piece, shape in zip(pieces, shapes, strict=True)]
-        nothing = np.zeros((constants, constants))
-        return Span(blocks[0], blocks[1], blocks[2], blocks[3], nothing, np.zeros(constants))
+        return Span(blocks[0], blocks[1], blocks[2], blocks[3])
 
     def _zeros(self, size: int) -> FloatArray:
         free = [memory for memory, given in self._kept if given() is None and memory.size >= size]
@@ -220,10 +118,13 @@ class TrajectorySystem:
         problem = self.problem
         part = self.part(start, stop)
         span = self._memory(stop - start, problem.moving + self.hidden.count, problem.constants)
+        information, gradient = np.zeros((problem.constants, problem.constants)), np.zeros(problem.constants)
         for rows in self.rows(part):
-            self._add(span, part, rows)
+            own, pull = self._add(span, part, rows)
+            information[rows.at, rows.at] += own
+            gradient[rows.at] += pull
         self._add_motion(span, part)
-        return span
+        return span._replace(constants_information=information, constants_gradient=gradient)
 
     def rows(self, part: Part) -> list[Rows]:
         """Chains of residuals of all segments and joints that constrain, in this order."""
@@ -236,7 +137,8 @@ class TrajectorySystem:
                 rows.append(self._joint(index, own, part, poses))
         return rows
 
-    def _add(self, span: Span, part: Part, rows: Rows) -> None:
+    def _add(self, span: Span, part: Part, rows: Rows) -> tuple[FloatArray, FloatArray]:
+        """Add rows to the frames' blocks; give the information and gradient of their own constants."""
         white, own, follow = rows.white, part.own, part.after
         size, outputs, count = rows.modes.shape
         cost = 0.5 * float((white[own] ** 2).sum())
@@ -260,10 +162,7 @@ class TrajectorySystem:
         kernels.add_rows(
             rows.jacobian, white, moved, twice, turned, *chain, *span[:4], *room, LETTERS, NUMBERS
         )
-        assert span.constants_information is not None
-        assert span.constants_gradient is not None
-        span.constants_information[rows.at, rows.at] += information
-        span.constants_gradient[rows.at] += gradient
+        return information, gradient
 
     def _markers(self, index: int, part: Part, angles: FloatArray, angle_jacobian: FloatArray) -> Rows:
         """Markers of one segment against reference, prior mean and constants."""

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import replace
-from typing import Literal
+from typing import Literal, cast
 
 import numpy as np
 
@@ -24,8 +24,9 @@ from sta_prior.solve.posterior import (
     join,
     variance_along,
 )
+from sta_prior.solve.rows import Rows
 from sta_prior.solve.smoother import CONSTANT_TIME, Smoothed, make_problem, smooth
-from sta_prior.solve.spans import Rows, TrajectorySystem
+from sta_prior.solve.spans import TrajectorySystem
 from sta_prior.solve.terms import (
     JointProblem,
     SegmentProblem,
@@ -169,7 +170,6 @@ def _artifact(
     """
     problem, state, frames = smoothed.problem, smoothed.state, slice(part.start, part.stop)
     poses, modes, at = state.poses[frames], problem.modes[index].modes, problem.constant_slices[index]
-    assert part.with_constants is not None
     inputs, slope = drive(segment, poses, *angles)
     design = design_of(segment.artifact, inputs)
     weights = modes @ state.constants[at]
@@ -191,7 +191,7 @@ def _artifact(
     flat = modes.reshape(modes.shape[0], n * modes.shape[2])
     fan = (design.features @ flat).reshape(count, n, modes.shape[2])
     fan = np.where(seen[..., None], 0.0, fan)
-    cross = part.with_constants[:, :, at]
+    cross = cast(FloatArray, part.with_constants)[:, :, at]
     own = smoothed.constants.covariance[at, at]
     variance = variance_along(along, part.covariance)
     variance += 2.0 * np.einsum("fnl,flc,fnc->fn", along, cross, fan, optimize=True)
@@ -243,17 +243,16 @@ def _pulls(
 
     A row is G = (now at its frame, −past at the frame before, moved in the constants).
     """
-    assert part.lagged is not None
-    assert part.with_constants is not None
+    lagged = cast(FloatArray, part.lagged)
     width = now.shape[-1]
     covariance = part.covariance[:, :, :width]
     # cov(x_t, x_{t+1}), and cov(x_t, x_{t−1}).
-    ahead = part.lagged[: follow.stop - follow.start, :, :width]
+    ahead = lagged[: follow.stop - follow.start, :, :width]
     behind = np.zeros((*part.covariance.shape[:2], width))
-    behind[1:] = np.swapaxes(part.lagged[: behind.shape[0] - 1], 1, 2)[..., :width]
+    behind[1:] = np.swapaxes(lagged[: behind.shape[0] - 1], 1, 2)[..., :width]
     if before is not None and before.lagged is not None:
         behind[0] = before.lagged[-1].T[:, :width]
-    cross = part.with_constants[:, :, rows.at]
+    cross = cast(FloatArray, part.with_constants)[:, :, rows.at]
     pull_now = covariance @ np.swapaxes(now[own], 1, 2) - behind @ np.swapaxes(past[own], 1, 2)
     pull_now += cross @ np.swapaxes(moved[own], 1, 2)
     reach = follow.stop - follow.start
