@@ -101,10 +101,11 @@ def made_trial(
     travel_sd: float = 0.004,
     marker_sd: float = MARKER_SD,
     step: float = STEP,
+    cycle: float = 1.0,
 ) -> MadeTrial:
-    """A chain of count segments that moves smoothly; hidden: (F, markers of all segments)."""
+    """A chain of count segments that moves smoothly, once around in a cycle, s; hidden: (F, all markers)."""
     rng = np.random.default_rng(seed)
-    angles = made_angles_in_time(frames, count - 1, step)
+    angles = made_angles_in_time(frames, count - 1, step, cycle)
     covariance = 0.5 * travel_sd**2 * np.eye(3)
     travel = np.stack(
         [
@@ -114,7 +115,7 @@ def made_trial(
         ],
         axis=1,
     ).reshape(frames, count - 1, 3)
-    poses = made_motion(angles, travel, step)
+    poses = made_motion(angles, travel, step, cycle)
     segments, first = [], 0
     for index in range(count):
         cluster = CLUSTERS[index]
