@@ -212,6 +212,15 @@ def dense_from(span: Span, frames: int) -> tuple[FloatArray, FloatArray]:
     return information, gradient
 
 
+def motion_only(problem: TrajectoryProblem, state: Trajectory) -> tuple[TrajectoryProblem, Trajectory]:
+    """The same without a marker in view and without joints: what is left is the motion priors."""
+    segments = [replace(segment, points=np.full_like(segment.points, np.nan)) for segment in problem.segments]
+    joints = [replace(joint, travel_sd=np.inf) for joint in problem.joints]
+    bare = replace(problem, segments=segments, joints=joints)
+    nothing = np.zeros((problem.frames, 0))
+    return bare, replace(state, hidden=nothing, constants=np.zeros(bare.constants))
+
+
 def angles_of(joints: list[JointProblem], poses: FloatArray) -> FloatArray:
     """Joint angles (F, J, 3) rad."""
     return angles_and_jacobians(joints, poses)[0]

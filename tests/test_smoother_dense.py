@@ -9,19 +9,18 @@ from dataclasses import dataclass, replace
 import numpy as np
 import pytest
 from differences import central_difference
-from made_trajectories import MadeTrial, angles_of, dense_system, made_trial
+from made_trajectories import MadeTrial, angles_of, dense_system, made_trial, motion_only
 
 from sta_prior import se3
 from sta_prior.checks import FloatArray
 from sta_prior.prior.interface import design_of
 from sta_prior.solve.chain import bounded_constants, factor
 from sta_prior.solve.chain_marginals import marginals
-from sta_prior.solve.motion import motion_term
 from sta_prior.solve.posterior import SOURCES, FrameSolution
 from sta_prior.solve.smoother import Smoothed, smooth
 from sta_prior.solve.spans import TrajectorySystem
 from sta_prior.solve.terms import drive, joint_travel
-from sta_prior.solve.trajectory import JOINT_TIME, OFFSET_SHARE
+from sta_prior.solve.trajectory import JOINT_TIME, OFFSET_SHARE, place_hidden
 from sta_prior.solve.trajectory_posterior import describe_trajectory
 
 FRAMES = 8
@@ -235,16 +234,16 @@ def test_shares_sum_to_one(case: Case) -> None:
 
 def motion_information(case: Case) -> FloatArray:
     """Of the motion priors alone, with the anchor: (states, states)."""
-    problem, state = case.smoothed.problem, case.smoothed.state
-    size, result = case.width, np.zeros((case.states, case.states))
-    for index, motion in enumerate(problem.motions):
-        at = problem.state(index, case.smoothed.hidden.count)
-        term = motion_term(motion, state.poses[:, index], state.rates[:, index])
-        precision = np.linalg.inv(np.kron(motion.noise, np.diag(motion.density)))
-        for frame in range(FRAMES - 1):
-            both = np.concatenate([term.before[frame], term.after[frame]], axis=1)
-            places = np.concatenate([frame * size + at, (frame + 1) * size + at])
-            result[np.ix_(places, places)] += both.T @ precision @ both
+    problem, state = motion_only(case.smoothed.problem, case.smoothed.state)
+    information, _ = dense_system(TrajectorySystem(problem, state, place_hidden(problem), expected=True))
+    columns = np.concatenate(
+        [problem.state(index, case.smoothed.hidden.count) for index in range(len(problem.segments))]
+    )
+    own = np.concatenate([problem.state(index, 0) for index in range(len(problem.segments))])
+    from_place = (problem.moving * np.arange(FRAMES)[:, None] + own).ravel()
+    to_place = (case.width * np.arange(FRAMES)[:, None] + columns).ravel()
+    result = np.zeros((case.states, case.states))
+    result[np.ix_(to_place, to_place)] = information[np.ix_(from_place, from_place)]
     return result
 
 
@@ -278,12 +277,7 @@ def share_of(case: Case, own: FloatArray, mixed: FloatArray | None = None) -> Fl
 
 
 def test_share_of_motion_is_that_of_its_information(case: Case) -> None:
-    own = motion_information(case)
-    anchor = min(1e-4, 5e-2 / FRAMES)
-    for frame in range(FRAMES):
-        at = np.arange(case.states)[case.of_frame(frame)]
-        own[at, at] += anchor
-    wanted = share_of(case, own)
+    wanted = share_of(case, motion_information(case))
     assert 0.05 < wanted.mean() < 0.95
     # With noise on jerk it is this product that loses digits, of terms of 10¹⁰: not what is reported.
     tolerance = 1e-8 if case.smoothed.problem.order == 2 else 2e-5

@@ -146,7 +146,7 @@ def _artifact(
     slots = place[at_frame, at_output]
     along[at_frame, at_output, problem.poses + slots] = 1.0
     rest[at_frame, at_output] = state.hidden[frames][at_frame, slots]
-    fan = (design.features @ modes.reshape(modes.shape[0], -1)).reshape(count, n, -1)
+    fan = np.tensordot(design.features, modes, axes=1)
     fan = np.where(seen[..., None], 0.0, fan)
     cross = part.with_constants[:, :, at]
     own = smoothed.constants.covariance[at, at]
