@@ -1,4 +1,4 @@
-"""Motion prior: innovations, their derivatives, discretisation, and the density from a first look."""
+"""Motion prior: its cost, derivatives and discretisation, and the density from a first look."""
 
 from __future__ import annotations
 
@@ -6,21 +6,24 @@ import numpy as np
 import pytest
 import scipy.linalg
 from differences import central_difference
-from made_trajectories import made_angles_in_time, made_motion
+from made_problems import CLUSTERS, made_artifact
+from made_trajectories import dense_from, made_angles_in_time, made_motion
 
 from sta_prior import se3
 from sta_prior.checks import FloatArray
+from sta_prior.solve.constants import reduce_constants
 from sta_prior.solve.motion import (
     HORIZONS,
     JERK_TIME,
     SMALLEST_DENSITY,
     MotionPrior,
-    bracket,
     estimate_density,
     first_rates,
     make_motion,
-    motion_term,
 )
+from sta_prior.solve.spans import ANCHOR, WHOLE_ANCHOR, TrajectorySystem
+from sta_prior.solve.terms import SegmentProblem
+from sta_prior.solve.trajectory import RATE_SD, Trajectory, TrajectoryProblem, place_hidden
 
 DENSITY = np.array([3.0, 5.0, 9.0, 2.0, 1.0, 4.0])
 RATE = np.array([0.8, -1.5, 4.0, 1.2, 0.3, -0.7])
@@ -41,49 +44,127 @@ def some_motion(frames: int, step: float) -> FloatArray:
     return shank
 
 
-# --- derivatives ------------------------------------------------------------------------------------
+# --- the definition, written once more --------------------------------------------------------------
+
+
+def discretised(order: int, step: float) -> tuple[FloatArray, FloatArray]:
+    """Φ and Q of a chain of integrators, by the matrix exponential: Van Loan (1978), IEEE Trans Autom
+    Control 23, 395–404 (from memory).
+    """
+    drift, noise = np.eye(order, k=1), np.zeros((order, order))
+    noise[-1, -1] = 1.0
+    doubled = scipy.linalg.expm(step * np.block([[-drift, noise], [np.zeros((order, order)), drift.T]]))
+    transition = doubled[order:, order:].T
+    return transition, transition @ doubled[:order, order:]
+
+
+def innovations(order: int, step: float, poses: FloatArray, rates: FloatArray) -> FloatArray:
+    """(ξ, J_r(ξ)⁻¹ϖ′, …) − Φ(0, ϖ, …) of every step, (F − 1, 6·order)."""
+    move = se3.log(se3.inverse(poses[:-1]) @ poses[1:])
+    turned = np.linalg.solve(se3.right_jacobian(move)[:, None], rates[1:, ..., None])[..., 0]
+    start = np.concatenate([np.zeros((len(move), 1, 6)), rates[:-1]], axis=1)
+    local = np.concatenate([move[:, None], turned], axis=1)
+    transition, _ = discretised(order, step)
+    return np.asarray((local - np.einsum("ij,fja->fia", transition, start)).reshape(len(move), -1))
+
+
+def begin(rates: FloatArray) -> FloatArray:
+    """Rates of the first frame over their SD, which says next to nothing."""
+    scale = np.array([1.0, 50.0])[: len(rates), None] * RATE_SD
+    return np.asarray((rates / scale).ravel())
+
+
+def system_of(order: int, step: float, poses: FloatArray, rates: FloatArray) -> TrajectorySystem:
+    """A trial of one segment without a marker in view: its motion prior, and nothing else."""
+    artifact = made_artifact(np.random.default_rng(1), 4, [])
+    points = np.full((len(poses), 4, 3), np.nan)
+    segment = SegmentProblem(0, points, CLUSTERS[0], artifact)
+    modes = reduce_constants(artifact.constant_covariance, np.ones((len(poses), 1)), 12)
+    problem = TrajectoryProblem([segment], [], [MotionPrior(order, step, DENSITY)], [modes], step, 5e-4)
+    constants = np.zeros(problem.constants)
+    state = Trajectory(poses[:, None], rates[:, None], np.zeros((len(poses), 0)), constants)
+    return TrajectorySystem(problem, state, place_hidden(problem))
+
+
+def cost_of(order: int, step: float, poses: FloatArray, rates: FloatArray) -> float:
+    system = system_of(order, step, poses, rates)
+    system(0, len(poses))
+    return system.cost
+
+
+def some_state(order: int, step: float) -> tuple[FloatArray, FloatArray]:
+    """Poses and rates of gait, the rates off by a tenth."""
+    poses = some_motion(6, step)
+    rates = first_rates(poses, step, order)
+    return poses, rates * (1.0 + 0.1 * np.random.default_rng(1).standard_normal(rates.shape))
+
+
+@pytest.mark.parametrize("step", [0.005, 0.02])
+@pytest.mark.parametrize("order", [2, 3])
+def test_cost_is_that_of_the_definition(order: int, step: float) -> None:
+    poses, rates = some_state(order, step)
+    left = innovations(order, step, poses, rates).reshape(-1, order, 6)
+    _, noise = discretised(order, step)
+    weighed = np.linalg.solve(noise, left) / DENSITY
+    wanted = 0.5 * float((weighed * left).sum() + (begin(rates[0]) ** 2).sum())
+    assert cost_of(order, step, poses, rates) == pytest.approx(wanted, rel=1e-9)
 
 
 @pytest.mark.parametrize("step", [0.005, 0.01, 0.02])
 @pytest.mark.parametrize("order", [2, 3])
-def test_derivatives_are_those_of_central_differences(order: int, step: float) -> None:
-    """All but the derivative of J_r(ξ)⁻¹ϖ′ in ξ are exact. Of that, 1 + ad(ξ)/2 is the least that is kept:
-    then ‖ad(ξ)‖ ‖ad(ϖ′)‖/6 is what may be left out.
+def test_gradient_and_information_are_those_of_central_differences(order: int, step: float) -> None:
+    """All but the derivative of J_r(ξ)⁻¹ϖ′ in ξ is exact. Of that, 1 + ad(ξ)/2 is the least that is kept:
+    then ‖ad(ξ)‖ ‖ad(ϖ′)‖/6 is what may be left out of the derivatives of the innovations.
     """
-    prior = MotionPrior(order, step, DENSITY)
-    poses = some_motion(6, step)
-    rates = first_rates(poses, step, order)
-    rates = rates * (1.0 + 0.1 * np.random.default_rng(1).standard_normal(rates.shape))
-    term = motion_term(prior, poses, rates)
-
-    def innovation(index: int, change: FloatArray) -> FloatArray:
-        change = change.reshape(2, order, 6)
-        here = slice(index, index + 2)
-        return motion_term(prior, poses[here] @ se3.exp(change[:, 0]), rates[here] + change[:, 1:]).residual[
-            0
-        ]
-
-    def slope(index: int) -> FloatArray:
-        return central_difference(lambda change: innovation(index, change), 12 * order)
-
+    poses, rates = some_state(order, step)
+    frames, size = len(poses), 6 * order
+    _, noise = discretised(order, step)
+    whitener = np.kron(np.linalg.inv(np.linalg.cholesky(noise)), np.diag(DENSITY**-0.5))
     move = se3.log(se3.inverse(poses[:-1]) @ poses[1:])
-    for index in range(5):
-        wanted = slope(index)
-        got = np.concatenate([term.before[index], term.after[index]], axis=1)
-        error = np.abs(got - wanted).reshape(order, 6, 2, order, 6)
-        left_out = np.zeros((order, order))
-        for row in range(1, order):
-            spins = [np.linalg.norm(bracket(v), 2) for v in (move[index], rates[index + 1, row - 1])]
-            left_out[row, 0] = np.prod(spins) / 6.0
-        assert (error.max(axis=(1, 2, 4)) <= 1e-7 + 1.1 * left_out).all()
+    information, gradient = np.zeros((frames * size, frames * size)), np.zeros(frames * size)
+    slack = 0.0
+    for frame in range(frames - 1):
+        here = slice(frame, frame + 2)
+
+        def whitened(change: FloatArray, here: slice = here) -> FloatArray:
+            change = change.reshape(2, order, 6)
+            moved = poses[here] @ se3.exp(change[:, 0])
+            return np.asarray(whitener @ innovations(order, step, moved, rates[here] + change[:, 1:])[0])
+
+        slope = central_difference(whitened, 2 * size)
+        at = slice(frame * size, (frame + 2) * size)
+        information[at, at] += slope.T @ slope
+        gradient[at] += slope.T @ whitened(np.zeros(2 * size))
+        spins = [np.linalg.norm(ad(v), 2) for v in (move[frame], *rates[frame + 1])]
+        left_out = np.repeat([0.0, *(spins[0] * spin / 6.0 for spin in spins[1:])], 6)
+        slack = max(slack, float(np.linalg.norm(np.abs(whitener) @ left_out)))
+    first = np.repeat([1.0, 50.0], 6)[: size - 6] * np.tile(RATE_SD, order - 1)
+    at_rates = np.arange(6, size)
+    information[at_rates, at_rates] += first**-2.0
+    gradient[6:size] += rates[0].ravel() / first**2
+    poses_at = (size * np.arange(frames)[:, None] + np.arange(6)).ravel()
+    information[poses_at, poses_at] += min(ANCHOR, WHOLE_ANCHOR / frames)
+    span = system_of(order, step, poses, rates)(0, frames)
+    got, got_gradient = dense_from(span, frames)
+    n = frames * size
+    # Of the same size as their own diagonal: J J-like products, off by twice what is left out of a row.
+    scale = np.sqrt(np.diag(information))
+    off = np.abs(got[:n, :n] - information) / (scale[:, None] * scale)
+    within = np.ones(n, dtype=bool)
+    within[poses_at] = False
+    assert off[np.ix_(within, within)].max() < 1e-6
+    assert off.max() < 1e-6 + 5.0 * slack / scale[poses_at].min()
+    both = (got_gradient[:n] - gradient) / scale
+    largest = np.abs(gradient / scale).max()
+    assert np.abs(both[within]).max() < 1e-6 * largest
+    assert np.abs(both).max() < (1e-6 + 5.0 * slack / scale[poses_at].min()) * largest
+    assert slack / scale[poses_at].min() < 0.02
 
 
-def test_bracket_is_the_derivative_of_the_adjoint() -> None:
-    rng = np.random.default_rng(2)
-    first, second = rng.standard_normal((2, 6))
-    turned = central_difference(lambda t: se3.adjoint(se3.exp(t * first)) @ second, 1)[:, 0]
-    np.testing.assert_allclose(bracket(first) @ second, turned, atol=1e-8)
-    np.testing.assert_allclose(bracket(first) @ second, -bracket(second) @ first, atol=1e-14)
+def ad(tangent: FloatArray) -> FloatArray:
+    """Matrix of the Lie bracket with a tangent, (6, 6)."""
+    turn, move = se3.skew(tangent[:3]), se3.skew(tangent[3:])
+    return np.block([[turn, np.zeros((3, 3))], [move, turn]])
 
 
 # --- residuals --------------------------------------------------------------------------------------
@@ -91,31 +172,30 @@ def test_bracket_is_the_derivative_of_the_adjoint() -> None:
 
 @pytest.mark.parametrize("order", [2, 3])
 def test_a_constant_rate_has_no_innovation(order: int) -> None:
-    step = 0.02
     rates = np.zeros((40, order - 1, 6))
     rates[:, 0] = RATE
-    term = motion_term(MotionPrior(order, step, DENSITY), helical(40, step), rates)
-    assert np.abs(term.residual).max() < 1e-12
+    cost = cost_of(order, 0.02, helical(40, 0.02), rates) - 0.5 * float((begin(rates[0]) ** 2).sum())
+    # Nothing but rounding, weighed by 12/Δ³ for noise on acceleration and 720/Δ⁵ for noise on jerk.
+    assert abs(cost) < 1e-13 * (12.0 / 0.02**3 if order == 2 else 720.0 / 0.02**5)
 
 
 def test_a_constant_angular_acceleration_has_none_for_noise_on_jerk() -> None:
-    step, times = 0.02, 0.02 * np.arange(30)[:, None]
+    times = 0.02 * np.arange(30)[:, None]
     poses = se3.exp((0.5 * times**2 + times) * RATE)
     rates = np.stack([(1.0 + times) * RATE, np.broadcast_to(RATE, (30, 6))], axis=1)
-    assert np.abs(motion_term(MotionPrior(3, step, DENSITY), poses, rates).residual).max() < 1e-12
-    with_acceleration_noise = motion_term(MotionPrior(2, step, DENSITY), poses, rates[:, :1]).residual
-    np.testing.assert_allclose(
-        with_acceleration_noise[:, 6:], np.broadcast_to(step * RATE, (29, 6)), atol=1e-12
-    )
+    left = cost_of(3, 0.02, poses, rates) - 0.5 * float((begin(rates[0]) ** 2).sum())
+    assert abs(left) < 1e-13 * 720.0 / 0.02**5
+    # Noise on acceleration pays for it at every step: its covariance grows as the step, the change squared.
+    cost = cost_of(2, 0.02, poses, rates[:, :1]) - 0.5 * float((begin(rates[0, :1]) ** 2).sum())
+    assert cost == pytest.approx(0.5 * 29 * 0.02 * float((RATE**2 / DENSITY).sum()), rel=1e-6)
 
 
 @pytest.mark.parametrize("order", [2, 3])
-def test_innovations_do_not_depend_on_the_laboratory(order: int) -> None:
-    prior, poses = MotionPrior(order, 0.01, DENSITY), some_motion(20, 0.01)
-    rates = first_rates(poses, 0.01, order)
+def test_cost_does_not_depend_on_the_laboratory(order: int) -> None:
+    poses, rates = some_state(order, 0.01)
     elsewhere = se3.exp(np.array([1.0, -2.0, 0.5, 3.0, 4.0, -1.0])) @ poses
-    before, after = motion_term(prior, poses, rates), motion_term(prior, elsewhere, rates)
-    np.testing.assert_allclose(after.residual, before.residual, atol=1e-11)
+    here, there = (cost_of(order, 0.01, at, rates) for at in (poses, elsewhere))
+    assert there == pytest.approx(here, rel=1e-8)
 
 
 # --- discretisation ---------------------------------------------------------------------------------
@@ -123,48 +203,26 @@ def test_innovations_do_not_depend_on_the_laboratory(order: int) -> None:
 
 def test_noise_on_acceleration_is_the_published_one() -> None:
     """Constant velocity, step 0.01 s, unit density: row 43 of the table of outside checks, 1e-10."""
-    prior = MotionPrior(2, 0.01, np.ones(6))
-    np.testing.assert_allclose(prior.noise, [[1e-6 / 3.0, 5e-5], [5e-5, 1e-2]], rtol=0, atol=1e-10)
-    np.testing.assert_array_equal(prior.transition, [[1.0, 0.01], [0.0, 1.0]])
+    transition, noise = discretised(2, 0.01)
+    np.testing.assert_allclose(noise, [[1e-6 / 3.0, 5e-5], [5e-5, 1e-2]], rtol=0, atol=1e-10)
+    np.testing.assert_allclose(transition, [[1.0, 0.01], [0.0, 1.0]], atol=1e-15)
 
 
 @pytest.mark.parametrize("order", [2, 3])
-def test_discretisation_is_that_of_the_matrix_exponential(order: int) -> None:
-    """Van Loan (1978), IEEE Trans Autom Control 23, 395–404 (from memory)."""
-    step, drift = 0.03, np.eye(order, k=1)
-    noise = np.zeros((order, order))
-    noise[-1, -1] = 1.0
-    doubled = scipy.linalg.expm(step * np.block([[-drift, noise], [np.zeros((order, order)), drift.T]]))
-    transition = doubled[order:, order:].T
-    prior = MotionPrior(order, step, DENSITY)
-    np.testing.assert_allclose(prior.transition, transition, atol=1e-15)
-    np.testing.assert_allclose(prior.noise, transition @ doubled[:order, order:], rtol=1e-11)
-
-
-@pytest.mark.parametrize("order", [2, 3])
-def test_two_steps_are_one_of_twice_the_length(order: int) -> None:
-    single, double = MotionPrior(order, 0.01, DENSITY), MotionPrior(order, 0.02, DENSITY)
-    np.testing.assert_allclose(single.transition @ single.transition, double.transition, atol=1e-15)
-    both = single.transition @ single.noise @ single.transition.T + single.noise
-    np.testing.assert_allclose(both, double.noise, rtol=1e-12)
-
-
-@pytest.mark.parametrize("order", [2, 3])
-def test_precision_is_the_inverse_of_noise_times_density(order: int) -> None:
-    prior = MotionPrior(order, 0.01, DENSITY)
-    covariance = np.kron(prior.noise, np.diag(DENSITY))
-    size = np.sqrt(np.diag(covariance))
-    whole = prior.precision @ covariance * (size[:, None] / size)
-    np.testing.assert_allclose(whole, np.eye(6 * order), atol=1e-8)
+def test_transition_is_the_matrix_exponential(order: int) -> None:
+    transition = MotionPrior(order, 0.03, DENSITY).transition
+    np.testing.assert_allclose(transition, discretised(order, 0.03)[0], atol=1e-15)
+    double = MotionPrior(order, 0.06, DENSITY).transition
+    np.testing.assert_allclose(transition @ transition, double, atol=1e-15)
 
 
 # --- density from a first look ----------------------------------------------------------------------
 
 
 def drawn_pieces(density: FloatArray, step: float, frames: int, pieces: int, seed: int) -> FloatArray:
-    """Motion drawn from the prior in pieces (2 · pieces · frames, 4, 4), as many frames missing after each."""
+    """Motion drawn from the prior in pieces, (2 · pieces · frames, 4, 4), as many frames missing between."""
     rng = np.random.default_rng(seed)
-    factor = np.linalg.cholesky(MotionPrior(2, step, density).noise)
+    factor = np.linalg.cholesky(discretised(2, step)[1])
     pose = se3.exp(rng.standard_normal((pieces, 6)))
     rate = rng.standard_normal((pieces, 6))
     drawn = np.full((pieces, 2 * frames, 4, 4), np.nan)
