@@ -12,6 +12,8 @@ from scipy.spatial.transform import Rotation
 from sta_prior import se3
 from sta_prior.angles import rotation_from_angles
 from sta_prior.checks import BoolArray, FloatArray
+from sta_prior.prior.artifact import FeatureArtifact
+from sta_prior.prior.hierarchy import Weights
 from sta_prior.prior.interface import Artifact, Design, Moments, design_of
 from sta_prior.solve.chain import Span
 from sta_prior.solve.constants import ConstantModes
@@ -224,3 +226,74 @@ def motion_only(problem: TrajectoryProblem, state: Trajectory) -> tuple[Trajecto
 def angles_of(joints: list[JointProblem], poses: FloatArray) -> FloatArray:
     """Joint angles (F, J, 3) rad."""
     return angles_and_jacobians(joints, poses)[0]
+
+
+def chosen(artifact: FeatureArtifact, markers: Sequence[int]) -> FeatureArtifact:
+    """The artifact of some markers, in the order given."""
+    features, n = artifact.weights.mean.shape
+    outputs = (3 * np.array(markers)[:, None] + np.arange(3)).ravel()
+    both = (n * np.arange(features)[:, None] + outputs).ravel()
+    square = np.ix_(outputs, outputs)
+    weights = Weights(artifact.weights.mean[:, outputs], artifact.weights.covariance[np.ix_(both, both)])
+    return replace(
+        artifact, weights=weights, residual=artifact.residual[square], magnitude=artifact.magnitude[square]
+    )
+
+
+def permuted(segment: SegmentProblem, markers: Sequence[int]) -> SegmentProblem:
+    """A segment with some of its markers, in the order given."""
+    at = list(markers)
+    assert isinstance(segment.artifact, FeatureArtifact)
+    artifact = chosen(segment.artifact, markers)
+    return replace(segment, points=segment.points[:, at], reference=segment.reference[at], artifact=artifact)
+
+
+def only_markers(trial: MadeTrial, index: int, markers: Sequence[int]) -> MadeTrial:
+    """The trial with some of one segment's markers."""
+    segments = list(trial.segments)
+    segments[index] = permuted(segments[index], markers)
+    return replace(trial, segments=segments)
+
+
+def scaled(
+    problem: TrajectoryProblem, state: Trajectory, factor: float
+) -> tuple[TrajectoryProblem, Trajectory]:
+    """Every length times a factor, in problem and state."""
+    lengths = np.repeat([1.0, factor], 3)
+    segments = []
+    for segment in problem.segments:
+        artifact = segment.artifact
+        assert isinstance(artifact, FeatureArtifact)
+        weights = Weights(factor * artifact.weights.mean, factor**2 * artifact.weights.covariance)
+        larger = replace(
+            artifact,
+            weights=weights,
+            residual=factor**2 * artifact.residual,
+            magnitude=factor**2 * artifact.magnitude,
+        )
+        points, reference = factor * segment.points, factor * segment.reference
+        segments.append(replace(segment, points=points, reference=reference, artifact=larger))
+    joints = [
+        replace(
+            joint,
+            centre_proximal=factor * joint.centre_proximal,
+            centre_distal=factor * joint.centre_distal,
+            travel_sd=factor * joint.travel_sd,
+        )
+        for joint in problem.joints
+    ]
+    motions = [replace(motion, density=motion.density * lengths**2) for motion in problem.motions]
+    modes = [ConstantModes(factor * own.modes, factor**2 * own.rest) for own in problem.modes]
+    larger_problem = replace(
+        problem,
+        segments=segments,
+        joints=joints,
+        motions=motions,
+        modes=modes,
+        marker_sd=factor * problem.marker_sd,
+    )
+    poses = state.poses.copy()
+    poses[..., :3, 3] *= factor
+    return larger_problem, replace(
+        state, poses=poses, rates=state.rates * lengths, hidden=factor * state.hidden
+    )
