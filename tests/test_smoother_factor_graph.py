@@ -20,6 +20,7 @@ from sta_prior.checks import FloatArray
 from sta_prior.prior.artifact import FeatureArtifact
 from sta_prior.prior.basis import Basis, Term
 from sta_prior.prior.hierarchy import Weights
+from sta_prior.prior.time_scales import TimeScales
 from sta_prior.solve.chain import bounded_constants, factor
 from sta_prior.solve.chain_marginals import marginals
 from sta_prior.solve.motion import MotionPrior
@@ -50,7 +51,7 @@ def made() -> tuple[MadeTrial, TrajectoryProblem]:
                 basis=Basis((Term(0, 0, 1),), np.eye(1)),
                 weights=Weights(mean, np.asarray(covariance)),
                 residual=random_covariance(rng, 12, 0.003),
-                time_constant=time,
+                time_scales=TimeScales.single(time),
                 reference=np.radians([[8.0, 0.0, 0.0]]),
                 magnitude=np.zeros((12, 12)),
             )

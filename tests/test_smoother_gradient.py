@@ -12,6 +12,7 @@ from made_trajectories import MadeTrial, Widened, dense_from, made_trial, wobble
 
 from sta_prior.checks import FloatArray, IntArray
 from sta_prior.prior.interface import Artifact
+from sta_prior.prior.time_scales import TimeScales
 from sta_prior.solve.chain import Span
 from sta_prior.solve.smoother import smooth
 from sta_prior.solve.spans import TrajectorySystem
@@ -33,7 +34,7 @@ def three_segments(frames: int = FRAMES) -> MadeTrial:
     artifacts.append(made_artifact(rng, 3, [1]))
     artifacts[0] = Widened(artifacts[0], 0.6, np.diag(np.linspace(1e-6, 3e-5, 12)))
     # Forgotten after 2.3 frames: the second time out of view begins a new chain, the first one does not.
-    artifacts[1] = replace(artifacts[1], time_constant=0.005)
+    artifacts[1] = replace(artifacts[1], time_scales=TimeScales.single(0.005))
     return made_trial(12, 3, frames, hidden=hidden, artifacts=artifacts)
 
 

@@ -17,6 +17,7 @@ from sta_prior.checks import FloatArray
 from sta_prior.prior.artifact import FeatureArtifact
 from sta_prior.prior.basis import Basis
 from sta_prior.prior.hierarchy import Weights
+from sta_prior.prior.time_scales import TimeScales
 from sta_prior.solve.chain import ChainFactor, bounded_constants, factor, from_arrays, step
 from sta_prior.solve.chain_marginals import marginals
 from sta_prior.solve.constants import reduce_constants
@@ -233,7 +234,7 @@ def test_a_shifted_cluster_is_smoothed_as_by_rauch_tung_and_striebel(order: int)
         basis=Basis((), np.zeros((0, 0))),
         weights=Weights(np.zeros((1, 12)), np.zeros((12, 12))),
         residual=sd**2 * np.eye(12),
-        time_constant=0.0,
+        time_scales=TimeScales.single(0.0),
         reference=np.zeros((0, 3)),
         magnitude=np.zeros((12, 12)),
     )

@@ -19,6 +19,7 @@ from sta_prior.checks import BoolArray, FloatArray
 from sta_prior.prior.artifact import FeatureArtifact
 from sta_prior.prior.basis import Basis, Term
 from sta_prior.prior.hierarchy import Weights
+from sta_prior.prior.time_scales import TimeScales
 from sta_prior.solve.motion import MotionPrior
 from sta_prior.solve.smoother import smooth
 from sta_prior.solve.terms import JointProblem, SegmentProblem
@@ -60,7 +61,7 @@ def made_case(seed: int, hidden: BoolArray, marker_sd: float, times: tuple[float
                 basis=Basis((Term(0, 0, 1), Term(0, 1, 1)), np.eye(2)),
                 weights=Weights(mean, np.asarray(np.kron(features, random_covariance(rng, 12, 0.006)))),
                 residual=random_covariance(rng, 12, 0.003),
-                time_constant=time,
+                time_scales=TimeScales.single(time),
                 reference=REFERENCE_ANGLES,
                 magnitude=np.zeros((12, 12)),
             )

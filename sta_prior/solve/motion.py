@@ -60,6 +60,12 @@ class MotionPrior:
                 result[row, column] = self.step ** (column - row) / math.factorial(column - row)
         return result
 
+    def ahead(self, poses: FloatArray, rates: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """States one step later without noise: poses (F, 4, 4) and rates (F, order − 1, 6)."""
+        step = np.einsum("j,fja->fa", self.transition[0, 1:], rates)
+        later: FloatArray = np.einsum("ij,fja->fia", self.transition[1:, 1:], rates)
+        return poses @ se3.exp(step), later
+
     @cached_property
     def precision(self) -> FloatArray:
         """Inverse of Q of one component for unit density, (order, order)."""

@@ -223,6 +223,8 @@ def _scatter(dense: FloatArray, places: IntArray, block: FloatArray) -> None:
 def add_motion(
     poses: FloatArray,
     rates: FloatArray,
+    ends: FloatArray,
+    end_rates: FloatArray,
     transition: FloatArray,
     precision: FloatArray,
     inverse_density: FloatArray,
@@ -241,6 +243,7 @@ def add_motion(
     ----------
     poses : shape (F, 4, 4), lab ← bone, of the segment, from one frame before the span to one after
     rates : shape (F, order − 1, 6)
+    ends, end_rates : shapes (F − 1, 4, 4) and (F − 1, order − 1, 6), where each step leads
     transition : shape (order, order), Φ
     precision : shape (order, order), inverse of Q for unit density
     inverse_density : shape (6,)
@@ -261,14 +264,14 @@ def add_motion(
     whole, pulled = np.empty((2 * states, 2 * states)), np.empty(2 * states)
     cost = 0.0
     for frame in range(frames - 1):
-        step_jacobians(poses[frame], poses[frame + 1], tangent, left, right, work)
-        _derivatives(left, right, rates[frame + 1], transition, rows)
+        step_jacobians(poses[frame], ends[frame], tangent, left, right, work)
+        _derivatives(left, right, end_rates[frame], transition, rows)
         for i in range(6):
             residual[i] = tangent[i]
             for k in range(1, order):
                 residual[6 * k + i] = 0.0
                 for j in range(6):
-                    residual[6 * k + i] += right[i, j] * rates[frame + 1, k - 1, j]
+                    residual[6 * k + i] += right[i, j] * end_rates[frame, k - 1, j]
             for k in range(order):
                 for m in range(1, order):
                     residual[6 * k + i] -= transition[k, m] * rates[frame, m - 1, i]

@@ -28,6 +28,7 @@ def marker_rows(
     points: FloatArray,
     reference: FloatArray,
     mean: FloatArray,
+    usual: FloatArray,
     mean_derivative: FloatArray,
     feature_derivative: FloatArray,
     weights: FloatArray,
@@ -49,6 +50,7 @@ def marker_rows(
     points : shape (F, m, 3), m, lab; NaN hidden
     reference : shape (m, 3), m, bone
     mean : shape (F, n), m, of the artifact, constants included
+    usual : shape (F, n), m, without the constants
     mean_derivative : shape (F, n, d), m/rad, of what the constants do not make
     feature_derivative : shape (F, K, d), 1/rad
     weights : shape (K, n), m, of the constants
@@ -97,7 +99,7 @@ def marker_rows(
             residual[frame, output] = point[axis] - reference[marker, axis] - mean[frame, output]
             if expected:
                 for i in range(3):
-                    point[i] = reference[marker, i] + mean[frame, 3 * marker + i]
+                    point[i] = reference[marker, i] + usual[frame, 3 * marker + i]
             # [p]× and −1.
             after, before = (axis + 1) % 3, (axis + 2) % 3
             jacobian[frame, output, first + after] -= point[before]

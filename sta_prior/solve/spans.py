@@ -183,6 +183,7 @@ class TrajectorySystem:
             np.ascontiguousarray(segment.points),
             segment.reference,
             design.mean + design.features @ weights,
+            design.mean,
             np.ascontiguousarray(design.mean_derivative.reshape(count, n, -1)),
             np.ascontiguousarray(
                 design.feature_derivative.reshape(count, modes.shape[0], 3 * inputs.shape[1])
@@ -254,16 +255,27 @@ class TrajectorySystem:
         )
 
     def _add_motion(self, span: Span, part: Part) -> None:
-        """Motion priors of all segments, and what holds the first rates and the unknowns without rows."""
+        """Motion priors of all segments, and what holds the first rates and the unknowns without rows.
+
+        The expected information has each step end where the motion prior expects it. Innovations taken as
+        they are turn with the bone's axes, and would count as knowledge of how these lie in the markers.
+        """
         problem, state = self.problem, self.state
         self._hold(span, part)
         for index, motion in enumerate(problem.motions):
             at = problem.state(index, self.hidden.count)
             if part.start == 0:
                 self._begin(span, index, at)
+            poses = np.ascontiguousarray(state.poses[part.frames, index])
+            rates = np.ascontiguousarray(state.rates[part.frames, index])
+            ends, end_rates = poses[1:], rates[1:]
+            if self.expected:
+                ends, end_rates = motion.ahead(poses[:-1], rates[:-1])
             self.cost += add_motion(
-                np.ascontiguousarray(state.poses[part.frames, index]),
-                np.ascontiguousarray(state.rates[part.frames, index]),
+                poses,
+                rates,
+                ends,
+                end_rates,
                 motion.transition,
                 motion.precision,
                 1.0 / motion.density,

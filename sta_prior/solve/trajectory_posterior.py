@@ -188,12 +188,8 @@ def _artifact(
     slots = place[at_frame, at_output]
     along[at_frame, at_output, problem.poses + slots] = 1.0
     rest[at_frame, at_output] = state.hidden[frames][at_frame, slots]
-<<<<<<< HEAD
     flat = modes.reshape(modes.shape[0], n * modes.shape[2])
     fan = (design.features @ flat).reshape(count, n, modes.shape[2])
-=======
-    fan = np.tensordot(design.features, modes, axes=1)
->>>>>>> stests
     fan = np.where(seen[..., None], 0.0, fan)
     cross = cast(FloatArray, part.with_constants)[:, :, at]
     own = smoothed.constants.covariance[at, at]
