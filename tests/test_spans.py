@@ -153,7 +153,12 @@ def bracket(tangent: FloatArray) -> FloatArray:
 
 
 def add_motion(
-    dense: Dense, prior: MotionPrior, problem: TrajectoryProblem, state: Trajectory, index: int
+    dense: Dense,
+    prior: MotionPrior,
+    problem: TrajectoryProblem,
+    state: Trajectory,
+    index: int,
+    expected: bool,
 ) -> None:
     order, frames = prior.order, problem.frames
     noise = np.kron(np.linalg.inv(prior.precision), np.diag(prior.density))
@@ -161,9 +166,14 @@ def add_motion(
     transition = np.kron(prior.transition, np.eye(6))
     columns = problem.state(index, state.hidden.shape[1])
     for frame in range(frames - 1):
-        tangent = se3.log(se3.inverse(state.poses[frame, index]) @ state.poses[frame + 1, index])
+        end = state.poses[frame + 1, index]
+        if expected:
+            ahead, onward = prior.ahead(state.poses[None, frame, index], state.rates[None, frame, index])
+            end = ahead[0]
+        tangent = se3.log(se3.inverse(state.poses[frame, index]) @ end)
         right, left = se3.right_jacobian_inverse(tangent), se3.left_jacobian_inverse(tangent)
-        rates, later = state.rates[frame, index], state.rates[frame + 1, index]
+        rates = state.rates[frame, index]
+        later = onward[0] if expected else state.rates[frame + 1, index]
         arrived = np.concatenate([tangent, *(right @ rate for rate in later)])
         residual = arrived - transition @ np.concatenate([np.zeros(6), *rates])
         after = np.kron(np.eye(order), right)
@@ -189,7 +199,7 @@ def whole(
     for index in range(len(problem.joints)):
         add_joint(dense, problem, state, index)
     for index, motion in enumerate(problem.motions):
-        add_motion(dense, motion, problem, state, index)
+        add_motion(dense, motion, problem, state, index, expected)
         sd = np.concatenate([RATE_SD, 50.0 * RATE_SD])[: 6 * (problem.order - 1)]
         rates = problem.state(index, hidden.count)[6:]
         row = np.zeros((sd.size, size))

@@ -86,10 +86,10 @@ class Rows:
         """Derivative of the whitened innovations in the constants, (F, n, k)."""
         if self.alike:
             turned = self.turned(int(self.which[0]))
-            return (self.prewhitened @ turned).reshape(-1, *self.modes.shape[1:])
+            return (self.prewhitened @ turned).reshape(self.features.shape[0], *self.modes.shape[1:])
         factor = self.whiteners[self.which] * (self.which >= 0)[:, None, None]
         felt = self.features @ self.modes.reshape(self.flat_shape)
-        felt = felt.reshape(-1, *self.modes.shape[1:])
+        felt = felt.reshape(self.features.shape[0], *self.modes.shape[1:])
         felt[self.hidden] = 0.0
         felt[1:] -= self.decay[1:, None, None] * felt[:-1].copy()
         return -factor @ felt

@@ -155,7 +155,7 @@ class TrajectorySystem:
             gradient = tall.T @ (once[own].T @ white[own]).reshape(-1)
         else:
             twice, turned, moved = np.zeros((0, 0)), np.zeros((0, 0)), rows.moved
-            flat = moved[own].reshape(-1, count)
+            flat = moved[own].reshape(white[own].size, count)
             information, gradient = flat.T @ flat, flat.T @ white[own].reshape(-1)
         room = kernels.room(rows.jacobian.shape[1:], count, span.coupling.shape[1:], size)
         chain = (rows.decay, rows.whiteners, rows.which, own.start, rows.at.start)

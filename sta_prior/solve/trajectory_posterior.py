@@ -11,7 +11,7 @@ from typing import Literal, cast
 
 import numpy as np
 
-from sta_prior.checks import BoolArray, FloatArray
+from sta_prior.checks import BoolArray, FloatArray, IntArray
 from sta_prior.prior.interface import design_of
 from sta_prior.solve.chain_marginals import Marginals, marginal_spans
 from sta_prior.solve.constants import Lumped
@@ -28,9 +28,14 @@ from sta_prior.solve.rows import Rows
 from sta_prior.solve.smoother import CONSTANT_TIME, Smoothed, make_problem, smooth
 from sta_prior.solve.spans import TrajectorySystem
 from sta_prior.solve.terms import (
+    ANCHOR as FRAME_ANCHOR,
+)
+from sta_prior.solve.terms import (
     JointProblem,
+    Linearised,
     SegmentProblem,
     angles_and_jacobians,
+    assemble,
     drive,
     joint_travel,
     marker_term,
@@ -38,6 +43,9 @@ from sta_prior.solve.terms import (
 
 Constants = Literal["bounded", "full", "none"]
 CONSTANTS: tuple[str, ...] = ("bounded", "full", "none")
+
+LOOKED_AT = 200
+"""Frames of a trial, evenly spread, that tell whether its markers fix a pose at all."""
 
 MARKERS, PRIOR, JOINT, MOTION = range(len(SOURCES))
 
@@ -86,6 +94,7 @@ def describe_trajectory(smoothed: Smoothed) -> FrameSolution:
     problem, hidden = smoothed.problem, smoothed.hidden
     system = TrajectorySystem(problem, smoothed.state, hidden, expected=True)
     leading = problem.poses + hidden.count
+    fixed = fixed_by_markers(smoothed)
     pieces: list[FrameSolution] = []
     part: Marginals | None = None
     # Spans come last first; what leads into one is known with the span before it.
@@ -93,24 +102,44 @@ def describe_trajectory(smoothed: Smoothed) -> FrameSolution:
         smoothed.factor, smoothed.constants, leading, lagged=True, with_constants=True
     ):
         if part is not None:
-            pieces.append(_describe(smoothed, system, part, before))
+            pieces.append(_describe(smoothed, system, part, before, fixed))
         part = before
     if part is not None:
-        pieces.append(_describe(smoothed, system, part, None))
+        pieces.append(_describe(smoothed, system, part, None, fixed))
     return join(pieces[::-1])
 
 
+def fixed_by_markers(smoothed: Smoothed) -> BoolArray:
+    """Segments whose pose the markers and joints fix in the trial's average frame, shape (S,).
+
+    The motion prior carries a pose over frames that lack markers. It must not fix a direction that no marker
+    fixes in any frame: the innovations of a turning bone depend on how its axes lie, and would seem to.
+    """
+    problem = smoothed.problem
+    frames = np.unique(np.linspace(0, problem.frames - 1, LOOKED_AT).round().astype(np.int64))
+    poses = smoothed.state.poses[frames]
+    here = [segment_at(segment, frames) for segment in problem.segments]
+    information = assemble(here, problem.joints, poses, problem.marker_sd).information.mean(axis=0)
+    covariance = np.linalg.inv(information + FRAME_ANCHOR * np.eye(problem.poses))
+    sd = np.sqrt(np.diag(covariance)).reshape(-1, 6)
+    return np.asarray((sd < UNDETERMINED).all(axis=1))
+
+
 def _describe(
-    smoothed: Smoothed, system: TrajectorySystem, part: Marginals, before: Marginals | None
+    smoothed: Smoothed,
+    system: TrajectorySystem,
+    part: Marginals,
+    before: Marginals | None,
+    fixed: BoolArray,
 ) -> FrameSolution:
     problem, state = smoothed.problem, smoothed.state
     frames, count = slice(part.start, part.stop), len(problem.segments)
     poses = state.poses[frames]
     covariance = part.covariance[:, : problem.poses, : problem.poses]
     sd = np.sqrt(np.einsum("fxx->fx", covariance)).reshape(-1, count, 6)
-    determined: BoolArray = np.asarray((sd < UNDETERMINED).all(axis=2))
+    determined: BoolArray = np.asarray((sd < UNDETERMINED).all(axis=2) & fixed)
     angles, slope = angles_and_jacobians(problem.joints, poses)
-    angle_sd = np.sqrt(variance_along(slope, covariance))
+    shown, angle_sd = angles.copy(), np.sqrt(variance_along(slope, covariance))
     travel = np.full((poses.shape[0], len(problem.joints), 3), np.nan)
     travel_sd = np.full_like(travel, np.nan)
     for index, joint in enumerate(problem.joints):
@@ -118,7 +147,7 @@ def _describe(
         if joint.has_centre:
             travel[:, index], along = joint_travel(joint, poses)
             travel_sd[:, index] = np.sqrt(variance_along(along, covariance))
-        for array in (angles, angle_sd, travel, travel_sd):
+        for array in (shown, angle_sd, travel, travel_sd):
             array[unknown, index] = np.nan
     artifact, artifact_sd = [], []
     conflict = np.full((poses.shape[0], count), np.nan)
@@ -126,16 +155,16 @@ def _describe(
     for index, segment in enumerate(problem.segments):
         here = segment_at(segment, frames)
         seen = determined[:, segment.index]
-        mean, spread = _artifact(smoothed, index, here, part, angles_and_jacobians(problem.joints, poses))
+        term = marker_term(here, poses, angles, slope, problem.marker_sd)
+        mean, spread = _artifact(smoothed, index, here, part, term, (angles, slope))
         artifact.append(np.where(seen[:, None], mean, np.nan))
         artifact_sd.append(np.where(seen[:, None], spread, np.nan))
-        term = marker_term(here, poses, *angles_and_jacobians(problem.joints, poses), problem.marker_sd)
         conflict[:, segment.index], freedom[:, segment.index] = conflict_of(term, segment.index, seen)
     share = _shares(problem.poses, system, part, before).reshape(-1, count, 6, len(SOURCES))
     return FrameSolution(
         poses=np.where(determined[..., None, None], poses, np.nan),
         covariance=covariance,
-        angles=angles,
+        angles=shown,
         angle_sd=angle_sd,
         travel=travel,
         travel_sd=travel_sd,
@@ -150,7 +179,7 @@ def _describe(
     )
 
 
-def segment_at(segment: SegmentProblem, frames: slice) -> SegmentProblem:
+def segment_at(segment: SegmentProblem, frames: slice | IntArray) -> SegmentProblem:
     """The segment at some of its frames."""
     changes = None if segment.changes is None else segment.changes[frames]
     return replace(segment, points=segment.points[frames], changes=changes)
@@ -161,6 +190,7 @@ def _artifact(
     index: int,
     segment: SegmentProblem,
     part: Marginals,
+    term: Linearised,
     angles: tuple[FloatArray, FloatArray],
 ) -> tuple[FloatArray, FloatArray]:
     """Posterior mean and SD of a segment's artifact, hidden markers included, (F, n) m.
@@ -177,7 +207,6 @@ def _artifact(
     expected = design.mean + design.features @ weights
     bend = design.mean_derivative + np.einsum("fkjd,kn->fnjd", design.feature_derivative, weights)
     pose_slope = bend.reshape(count, n, -1) @ slope.reshape(count, -1, problem.poses)
-    term = marker_term(segment, poses, *angles, problem.marker_sd)
     seen, place = term.seen, smoothed.hidden.column[index][frames]
     # Hidden: derivative of d in poses, hidden unknowns and constants.
     leading = part.states.shape[-1]
