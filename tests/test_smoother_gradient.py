@@ -204,11 +204,11 @@ def test_the_cost_is_counted_once_however_often_it_is_asked_for() -> None:
 
 def test_the_optimum_has_no_gradient() -> None:
     """At the end of the iteration, in units of the posterior: a hundredth of an SD at most."""
-    trial = three_segments(40)
+    trial = three_segments(20)
     problem = soft(trial.problem(), 50.0)
     smoothed = smooth(problem, trial.poses)
     assert smoothed.stop_reason.startswith("step below")
-    information, gradient = dense_from(TrajectorySystem(problem, smoothed.state, smoothed.hidden)(0, 40), 40)
+    information, gradient = dense_from(TrajectorySystem(problem, smoothed.state, smoothed.hidden)(0, 20), 20)
     constants = problem.constants
     information[-constants:, -constants:] += np.eye(constants)
     gradient[-constants:] += smoothed.state.constants

@@ -53,7 +53,10 @@ def solve(times: int, constant_time: float = CONSTANT_TIME) -> Solved:
     trial = repeated(times)
     # One motion prior for all lengths.
     problem = replace(trial.problem(), motions=repeated(3).problem().motions)
-    smoothed = smooth(problem, trial.poses, constant_time)
+    with pytest.MonkeyPatch.context() as patch:
+        # Near enough for the length of intervals.
+        patch.setattr(SMOOTHER_MODULE, "MAXIMUM_ITERATIONS", 10)
+        smoothed = smooth(problem, trial.poses, constant_time)
     return Solved(smoothed, describe_trajectory(smoothed))
 
 
