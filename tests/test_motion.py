@@ -205,10 +205,6 @@ def test_cost_does_not_depend_on_the_laboratory(order: int) -> None:
     assert there == pytest.approx(here, rel=1e-8)
 
 
-@pytest.mark.xfail(
-    strict=False,
-    reason="innovations of the motion prior count as information about a turn of the bone's axes",
-)
 @pytest.mark.parametrize("order", [2, 3])
 def test_a_turn_of_the_bones_axes_is_not_told_by_its_motion(order: int) -> None:
     """T·Exp(δ), with one and the same δ in every frame and rates told in the new axes, moves as before: with

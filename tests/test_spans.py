@@ -109,7 +109,7 @@ def add_markers(
             "kjd,kn->njd", design.feature_derivative[frame], weights
         )
         seen = (segment.points[frame] - own[:3, 3]) @ own[:3, :3]
-        place = segment.reference + mean.reshape(-1, 3) if expected else seen
+        place = segment.reference + design.mean[frame].reshape(-1, 3) if expected else seen
         residual[frame] = (seen - segment.reference).reshape(-1) - mean
         jacobian[frame, :, : problem.poses] = -np.einsum("njd,jdx->nx", bend, slope[frame])
         pose = slice(6 * segment.index, 6 * segment.index + 6)
@@ -166,14 +166,9 @@ def add_motion(
     transition = np.kron(prior.transition, np.eye(6))
     columns = problem.state(index, state.hidden.shape[1])
     for frame in range(frames - 1):
-        end = state.poses[frame + 1, index]
-        if expected:
-            ahead, onward = prior.ahead(state.poses[None, frame, index], state.rates[None, frame, index])
-            end = ahead[0]
-        tangent = se3.log(se3.inverse(state.poses[frame, index]) @ end)
+        tangent = se3.log(se3.inverse(state.poses[frame, index]) @ state.poses[frame + 1, index])
         right, left = se3.right_jacobian_inverse(tangent), se3.left_jacobian_inverse(tangent)
-        rates = state.rates[frame, index]
-        later = onward[0] if expected else state.rates[frame + 1, index]
+        rates, later = state.rates[frame, index], state.rates[frame + 1, index]
         arrived = np.concatenate([tangent, *(right @ rate for rate in later)])
         residual = arrived - transition @ np.concatenate([np.zeros(6), *rates])
         after = np.kron(np.eye(order), right)
@@ -181,8 +176,15 @@ def add_motion(
         before[:6, :6] = -left
         for k, rate in enumerate(later):
             block = slice(6 * k + 6, 6 * k + 12)
-            after[block, :6] = -0.5 * bracket(rate) @ right
-            before[block, :6] = 0.5 * bracket(rate) @ left
+            # Of J_r(ξ)⁻¹w in ξ, from its series 1 + ad(ξ)/2 + ad(ξ)²/12.
+            bend = -0.5 * bracket(rate)
+            bend -= (bracket(bracket(tangent) @ rate) + bracket(tangent) @ bracket(rate)) / 12.0
+            after[block, :6] = bend @ right
+            before[block, :6] = -bend @ left
+        if expected:
+            for k in range(order):
+                block = slice(6 * k, 6 * k + 6)
+                before[block, :6] -= bracket(residual[block])
         row = np.zeros((6 * order, 2 * dense.size))
         row[:, columns], row[:, dense.size + columns] = white @ before, white @ after
         dense.add(white @ residual, (frame * dense.size, row))

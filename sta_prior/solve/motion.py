@@ -32,6 +32,13 @@ HORIZONS = (0.1, 0.15, 0.2, 0.25, 0.3)
 """Stretches of time over which the density is matched, s. Matched on single steps it comes out some twenty
 times too small, and intervals with it."""
 
+FEWEST_CHANGES = 10
+"""Pairs of moves that a horizon must show."""
+
+UNKNOWN_DENSITY = np.repeat([100.0, 30.0], 3)
+"""Density where the motion is not seen for long enough to tell, rad²/s³ and m²/s³: that of brisk walking
+(from the invented couriers; no source)."""
+
 SMALLEST_DENSITY = np.repeat([1e-2, 1e-3], 3)
 """Least density for noise on acceleration, rad²/s³ and m²/s³: a subject who stands still."""
 
@@ -60,12 +67,6 @@ class MotionPrior:
                 result[row, column] = self.step ** (column - row) / math.factorial(column - row)
         return result
 
-    def ahead(self, poses: FloatArray, rates: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """States one step later without noise: poses (F, 4, 4) and rates (F, order − 1, 6)."""
-        step = np.einsum("j,fja->fa", self.transition[0, 1:], rates)
-        later: FloatArray = np.einsum("ij,fja->fia", self.transition[1:, 1:], rates)
-        return poses @ se3.exp(step), later
-
     @cached_property
     def precision(self) -> FloatArray:
         """Inverse of Q of one component for unit density, (order, order)."""
@@ -87,7 +88,7 @@ def estimate_density(poses: FloatArray, step: float) -> FloatArray:
     up to 0.3 s the largest answer is taken: smooth motion is no white noise, and a density matched to
     short steps would claim that it is known beforehand.
     """
-    found = np.array(SMALLEST_DENSITY)
+    found, told = np.array(SMALLEST_DENSITY), False
     for horizon in HORIZONS:
         lag = round(horizon / step)
         if lag < 1 or 2 * lag >= poses.shape[0]:
@@ -95,9 +96,10 @@ def estimate_density(poses: FloatArray, step: float) -> FloatArray:
         move = se3.log(se3.inverse(poses[:-lag]) @ poses[lag:])
         change = move[lag:] - move[:-lag]
         change = change[np.isfinite(change).all(axis=1)]
-        if change.shape[0]:
+        if change.shape[0] >= FEWEST_CHANGES:
+            told = True
             found = np.maximum(found, (change**2).mean(axis=0) / (2.0 / 3.0 * (lag * step) ** 3))
-    return found
+    return found if told else np.maximum(found, UNKNOWN_DENSITY)
 
 
 def make_motion(poses: FloatArray, step: float, order: int = 2) -> MotionPrior:

@@ -173,13 +173,58 @@ def step_jacobians(
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
-def _derivatives(
-    left: FloatArray, right: FloatArray, rates: FloatArray, transition: FloatArray, rows: FloatArray
-) -> None:
-    """Derivative of a step's innovations, (6·order, 12·order), in the state at its end, then at its start.
+def _bracket(first: FloatArray, second: FloatArray, result: FloatArray) -> None:
+    """Lie bracket ad(ξ)η of two tangents, (6,)."""
+    for i in range(3):
+        j, k = (i + 1) % 3, (i + 2) % 3
+        result[i] = first[j] * second[k] - first[k] * second[j]
+        result[3 + i] = (
+            first[3 + j] * second[k]
+            - first[3 + k] * second[j]
+            + first[j] * second[3 + k]
+            - first[k] * second[3 + j]
+        )
 
-    J_r(ξ)⁻¹ ≈ 1 + ad(ξ)/2 where it acts on the rates: over one step the rest is below rounding of what moves.
-    """
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _turn(tangent: FloatArray, factor: float, rows: FloatArray, first: int) -> None:
+    """Add factor·ad(ξ) to six columns of rows, (6, …), from the first on."""
+    unit, column = np.zeros(6), np.empty(6)
+    for j in range(6):
+        unit[:] = 0.0
+        unit[j] = 1.0
+        _bracket(tangent, unit, column)
+        for i in range(6):
+            rows[i, first + j] += factor * column[i]
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _bend(tangent: FloatArray, rate: FloatArray, result: FloatArray) -> None:
+    """Derivative of J_r(ξ)⁻¹w in ξ, (6, 6): −ad(w)/2 − (ad(ad(ξ)w) + ad(ξ)ad(w))/12, and less than 1e-5."""
+    inner, unit, column, twice = np.empty(6), np.zeros(6), np.empty(6), np.empty(6)
+    _bracket(tangent, rate, inner)
+    for j in range(6):
+        unit[:] = 0.0
+        unit[j] = 1.0
+        _bracket(rate, unit, column)
+        _bracket(tangent, column, twice)
+        for i in range(6):
+            result[i, j] = -0.5 * column[i] - twice[i] / 12.0
+        _bracket(inner, unit, column)
+        for i in range(6):
+            result[i, j] -= column[i] / 12.0
+
+
+@njit(cache=True, nogil=True, error_model="numpy")
+def _derivatives(
+    tangent: FloatArray,
+    left: FloatArray,
+    right: FloatArray,
+    rates: FloatArray,
+    transition: FloatArray,
+    rows: FloatArray,
+) -> None:
+    """Derivative of a step's innovations, (6·order, 12·order), in the state at its end, then at its start."""
     order = transition.shape[0]
     begin = 6 * order
     for i in range(6):
@@ -191,21 +236,17 @@ def _derivatives(
         for k in range(order):
             for m in range(1, order):
                 rows[6 * k + i, begin + 6 * m + i] = -transition[k, m]
+    bend = np.empty((6, 6))
     for k in range(1, order):
-        rate = rates[k - 1]
-        # −½ ad(ϖ) J, ad(ϖ) = [[ω×, 0], [v×, ω×]].
-        for i in range(3):
-            after, before = (i + 1) % 3, (i + 2) % 3
-            spin, turn, move, shift = rate[after], rate[before], rate[3 + after], rate[3 + before]
-            for first in (0, begin):
-                for j in range(first, first + 6):
-                    rows[6 * k + i, j] = -0.5 * (spin * rows[before, j] - turn * rows[after, j])
-                    rows[6 * k + 3 + i, j] = -0.5 * (
-                        spin * rows[3 + before, j]
-                        - turn * rows[3 + after, j]
-                        + move * rows[before, j]
-                        - shift * rows[after, j]
-                    )
+        _bend(tangent, rates[k - 1], bend)
+        for i in range(6):
+            for j in range(6):
+                end, start = 0.0, 0.0
+                for m in range(6):
+                    end += bend[i, m] * right[m, j]
+                    start -= bend[i, m] * left[m, j]
+                rows[6 * k + i, j] = end
+                rows[6 * k + i, begin + j] = start
 
 
 @njit(cache=True, nogil=True, error_model="numpy")
@@ -223,12 +264,11 @@ def _scatter(dense: FloatArray, places: IntArray, block: FloatArray) -> None:
 def add_motion(
     poses: FloatArray,
     rates: FloatArray,
-    ends: FloatArray,
-    end_rates: FloatArray,
     transition: FloatArray,
     precision: FloatArray,
     inverse_density: FloatArray,
     start: int,
+    expected: bool,
     places: IntArray,
     diagonal: FloatArray,
     lower: FloatArray,
@@ -243,11 +283,12 @@ def add_motion(
     ----------
     poses : shape (F, 4, 4), lab ← bone, of the segment, from one frame before the span to one after
     rates : shape (F, order − 1, 6)
-    ends, end_rates : shapes (F − 1, 4, 4) and (F − 1, order − 1, 6), where each step leads
     transition : shape (order, order), Φ
     precision : shape (order, order), inverse of Q for unit density
     inverse_density : shape (6,)
     start : the span's first frame among the F
+    expected : for the expected information: innovations turn with the bone's axes, and taken as they are
+        would count as knowledge of how these lie in the markers
     places : shape (order,), where the segment's pose and rates begin among a frame's unknowns
     diagonal, lower : shape (f, p, p), added to
     gradient : shape (f, p), added to
@@ -264,17 +305,20 @@ def add_motion(
     whole, pulled = np.empty((2 * states, 2 * states)), np.empty(2 * states)
     cost = 0.0
     for frame in range(frames - 1):
-        step_jacobians(poses[frame], ends[frame], tangent, left, right, work)
-        _derivatives(left, right, end_rates[frame], transition, rows)
+        step_jacobians(poses[frame], poses[frame + 1], tangent, left, right, work)
+        _derivatives(tangent, left, right, rates[frame + 1], transition, rows)
         for i in range(6):
             residual[i] = tangent[i]
             for k in range(1, order):
                 residual[6 * k + i] = 0.0
                 for j in range(6):
-                    residual[6 * k + i] += right[i, j] * end_rates[frame, k - 1, j]
+                    residual[6 * k + i] += right[i, j] * rates[frame + 1, k - 1, j]
             for k in range(order):
                 for m in range(1, order):
                     residual[6 * k + i] -= transition[k, m] * rates[frame, m - 1, i]
+        if expected:
+            for k in range(order):
+                _turn(residual[6 * k : 6 * k + 6], -1.0, rows[6 * k : 6 * k + 6], states)
         for k in range(order):
             for i in range(6):
                 row = 6 * k + i

@@ -38,6 +38,7 @@ class FrameSolution:
     conflict_freedom : shape (F, S), its degrees of freedom
     determined : shape (F, S)
     iterations, stop_reason : of the optimiser
+    misfit : mean square of the markers' moves from frame to frame in their predicted SDs; NaN frame by frame
     """
 
     poses: FloatArray
@@ -54,6 +55,7 @@ class FrameSolution:
     determined: BoolArray
     iterations: int
     stop_reason: str
+    misfit: float = np.nan
 
     def at(self, frames: IntArray) -> FrameSolution:
         """The solution at some frames."""
@@ -217,6 +219,8 @@ def join(pieces: list[FrameSolution]) -> FrameSolution:
         values = [getattr(piece, field.name) for piece in pieces]
         if field.name in ("artifact", "artifact_sd"):
             joined[field.name] = [np.concatenate(parts) for parts in zip(*values, strict=True)]
+        elif field.name == "misfit":
+            joined[field.name] = values[0]
         elif field.name == "iterations":
             joined[field.name] = max(values)
         elif field.name == "stop_reason":

@@ -81,12 +81,12 @@ def smooth(problem: TrajectoryProblem, start: FloatArray, constant_time: float =
     bound = max(1.0, problem.frames * problem.step / constant_time)
     state = begin(problem, hidden, start)
 
-    def solved(at: Trajectory) -> tuple[float, ChainFactor]:
-        system = TrajectorySystem(problem, at, hidden)
+    def solved(at: Trajectory, held: Trajectory | None = None) -> tuple[float, ChainFactor, bool]:
+        system = TrajectorySystem(problem, at, hidden, held=held)
         found = factor(system, problem.frames)
-        return system.cost / bound + 0.5 * float(at.constants @ at.constants), found
+        return system.cost / bound + 0.5 * float(at.constants @ at.constants), found, system.grows
 
-    merit, system = solved(state)
+    merit, system, grows = solved(state)
     posterior = bounded_constants(system, bound)
     made = before = np.full((1, problem.frames * 6 * len(problem.segments)), np.nan)
     reason, iterations = f"not converged in {MAXIMUM_ITERATIONS} iterations", 0
@@ -98,13 +98,16 @@ def smooth(problem: TrajectoryProblem, start: FloatArray, constant_time: float =
         length = float(np.clip(relaxation(made, before - full)[0], 1.0, _LONGEST))
         while True:
             ahead = moved(problem, state, length * change.states, length * change.constants)
-            value, there = solved(ahead)
+            # A covariance that follows the angles is held while steps are compared.
+            value, there, now = solved(ahead, state if grows else None)
             if value <= merit * (1.0 + 1e-10) or length < _SHORTEST:
                 break
             length *= 0.5
         before, made = full, length * full
         size = float(np.abs(full).max())
-        state, merit, system = ahead, value, there
+        state, merit, system, grows = ahead, value, there, grows or now
+        if grows:
+            merit, system, _ = solved(state)
         posterior = bounded_constants(system, bound)
         if length >= 1.0 and size < TOLERANCE:
             reason = f"step below {TOLERANCE:g} rad and m in every frame"

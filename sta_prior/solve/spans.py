@@ -14,13 +14,13 @@ from functools import cached_property
 import numpy as np
 
 from sta_prior.checks import FloatArray, IntArray
-from sta_prior.prior.interface import design_of, time_scales_of
+from sta_prior.prior.interface import Design, design_of, time_scales_of
 from sta_prior.solve import span_kernels as kernels
 from sta_prior.solve.chain import Span
 from sta_prior.solve.chain_kernels import LETTERS, NUMBERS
 from sta_prior.solve.motion_kernels import add_motion
 from sta_prior.solve.rows import Rows, fast_part, whitener
-from sta_prior.solve.terms import BALL_JOINT_SD, angles_and_jacobians, drive, joint_travel
+from sta_prior.solve.terms import BALL_JOINT_SD, SegmentProblem, angles_and_jacobians, drive, joint_travel
 from sta_prior.solve.trajectory import (
     JOINT_TIME,
     OFFSET_SHARE,
@@ -98,13 +98,16 @@ class TrajectorySystem:
 
     cost: half the squared residuals of the spans asked for since it was set to zero, without the prior of the
     constants; marker_cost: the markers' part of it; expected: take the markers where the prior expects them,
-    for the information (see marker_term).
+    for the information (see marker_term); held: the state at which the covariance is taken where it follows
+    the angles, by default the same; grows: whether it does in a span asked for so far.
     """
 
     problem: TrajectoryProblem
     state: Trajectory
     hidden: HiddenOutputs
     expected: bool = False
+    held: Trajectory | None = None
+    grows: bool = False
     cost: float = 0.0
     marker_cost: float = 0.0
     _memory: SpanMemory = field(default_factory=SpanMemory, repr=False)
@@ -200,11 +203,21 @@ class TrajectorySystem:
             through,
         )
         decay = np.where(self.hidden.restart[index][frames], 0.0, problem.decay(index))
-        whiteners, which = self._marker_whiteners(index, decay, design.growth)
+        growth = self._growth(segment, design, frames)
+        whiteners, which = self._marker_whiteners(index, decay, growth)
         which, decay = np.where(active, which, -1), np.where(active, decay, 0.0)
         return Rows(
             *(residual, jacobian, through, design.features, modes, place >= 0, at, decay, whiteners, which)
         )
+
+    def _growth(self, segment: SegmentProblem, design: Design, frames: slice) -> FloatArray | None:
+        """Growth of the covariance at the state held, (F, n, n); None where nothing grows."""
+        self.grows |= design.growth is not None
+        if self.held is None:
+            return design.growth
+        poses = self.held.poses[frames]
+        inputs, _ = drive(segment, poses, *angles_and_jacobians(self.problem.joints, poses))
+        return design_of(segment.artifact, inputs).growth
 
     def _marker_whiteners(
         self, index: int, decay: FloatArray, growth: FloatArray | None
@@ -255,11 +268,7 @@ class TrajectorySystem:
         )
 
     def _add_motion(self, span: Span, part: Part) -> None:
-        """Motion priors of all segments, and what holds the first rates and the unknowns without rows.
-
-        The expected information has each step end where the motion prior expects it. Innovations taken as
-        they are turn with the bone's axes, and would count as knowledge of how these lie in the markers.
-        """
+        """Motion priors of all segments, and what holds the first rates and the unknowns without rows."""
         problem, state = self.problem, self.state
         self._hold(span, part)
         for index, motion in enumerate(problem.motions):
@@ -268,18 +277,14 @@ class TrajectorySystem:
                 self._begin(span, index, at)
             poses = np.ascontiguousarray(state.poses[part.frames, index])
             rates = np.ascontiguousarray(state.rates[part.frames, index])
-            ends, end_rates = poses[1:], rates[1:]
-            if self.expected:
-                ends, end_rates = motion.ahead(poses[:-1], rates[:-1])
             self.cost += add_motion(
                 poses,
                 rates,
-                ends,
-                end_rates,
                 motion.transition,
                 motion.precision,
                 1.0 / motion.density,
                 part.own.start,
+                self.expected,
                 at[::6].copy(),
                 span.diagonal,
                 span.lower,

@@ -176,6 +176,7 @@ def _describe(
         determined=determined,
         iterations=smoothed.iterations,
         stop_reason=smoothed.stop_reason,
+        misfit=smoothed.misfit,
     )
 
 

@@ -6,7 +6,6 @@ Shell: holds the labels. Conventions: docs/conventions.md.
 from __future__ import annotations
 
 import time
-import warnings
 from dataclasses import replace
 from typing import Literal, cast
 
@@ -14,16 +13,15 @@ import numpy as np
 import xarray as xr
 from scipy.stats import chi2
 
-from sta_prior.angles import GIMBAL_WARNING, gimbal_margin
 from sta_prior.checks import FloatArray, nearest
-from sta_prior.errors import InputError, StaPriorWarning, message
-from sta_prior.pairs.belonging import DISTANCE_LIMIT, distance_misfit
+from sta_prior.errors import InputError, message
 from sta_prior.pairs.pairing import AXES, angles_of_poses, dof_names, segment_side, spread_over_dof
 from sta_prior.prior.base import Binding, Prior
 from sta_prior.prior.inputs import TILT, VELOCITY, angle_changes
 from sta_prior.prior.interface import IsotropicArtifact
 from sta_prior.rigid import RigidFit
 from sta_prior.solve.frame import MARKER_SD, bridge, first_look, solve_frames
+from sta_prior.solve.notes import reference_notes, warn_of_gimbal, warn_of_misfit, warn_of_suspects
 from sta_prior.solve.observability import describe_observability
 from sta_prior.solve.posterior import SOURCES, FrameSolution
 from sta_prior.solve.suspects import Suspect, find_suspects, hide, name_suspects
@@ -97,11 +95,11 @@ def solve(
     joints = _joints(trial, reference)
     count = len(segments)
     rigid_poses, fits = first_look(segments, count)
-    notes = _reference_notes(trial, points, reference)
+    notes = reference_notes(trial, points, reference)
     suspects: list[Suspect] = []
     if binding is not None:
         suspects = find_suspects(segments, joints, bridge(rigid_poses, joints), MARKER_SD)
-        _warn_of_suspects(trial, suspects, exclude_suspects)
+        warn_of_suspects(trial, suspects, exclude_suspects)
     if suspects and exclude_suspects:
         segments = hide(segments, suspects)
         rigid_poses, fits = first_look(segments, count)
@@ -115,6 +113,7 @@ def solve(
             segments = _with_inputs(segments, trial, binding, start, skin["time"].values)
         if estimator == "smoother":
             result = _smooth(segments, joints, start, skin["time"].values, constants)
+            warn_of_misfit(trial, result.misfit, result.stop_reason)
         else:
             result = solve_frames(segments, joints, start)
     data = _dataset(trial, skin, result, rigid_poses, estimator)
@@ -131,6 +130,7 @@ def solve(
             "suspects": name_suspects(suspects, lab, exclude_suspects),
             "reference_notes": "; ".join([*reference.notes, *notes]),
             "belief": binding.basis_of_belief if binding is not None else "no prior",
+            "misfit": result.misfit,
             "covariance": "posterior" if estimator in WITH_PRIOR else SCATTER,
             "subject": trial.subject.id,
             "trial": trial.id,
@@ -250,61 +250,6 @@ def _rigid_solution(
     return replace(result, poses=poses, stop_reason="closed form")
 
 
-def _reference_notes(trial: Trial, points: FloatArray, reference: Reference) -> list[str]:
-    """Words where a segment's marker distances do not fit its reference in any frame."""
-    lab = trial.subject.lab
-    notes = []
-    for index, segment in enumerate(lab.segments):
-        own = lab.marker_segment == index
-        misfit = distance_misfit(points[:, own], reference.markers[own])
-        if misfit > DISTANCE_LIMIT:
-            words = (
-                f"{segment.name} marker distances differ from the reference by {1000 * misfit:.1f} mm RMS "
-                f"even in the best tenth of the frames, expected at most {1000 * DISTANCE_LIMIT:.0f} mm: "
-                "the reference does not belong to this trial"
-            )
-            notes.append(words)
-            warnings.warn(
-                message(
-                    (trial.subject.id, trial.id), words, "Its poses are solved but should not be trusted."
-                ),
-                StaPriorWarning,
-                stacklevel=4,
-            )
-    return notes
-
-
-def _warn_of_suspects(trial: Trial, suspects: list[Suspect], excluded: bool) -> None:
-    if suspects:
-        words = name_suspects(suspects, trial.subject.lab, excluded)
-        advice = "Solved without." if excluded else "Look at them; --exclude-suspects solves without."
-        warnings.warn(
-            message((trial.subject.id, trial.id), f"markers do not fit the prior: {words}", advice),
-            StaPriorWarning,
-            stacklevel=4,
-        )
-
-
-def _warn_of_gimbal(trial: Trial, poses: FloatArray) -> None:
-    lab = trial.subject.lab
-    for joint in lab.joints:
-        proximal = poses[:, lab.segment_index(joint.proximal), :3, :3]
-        distal = poses[:, lab.segment_index(joint.distal), :3, :3]
-        margin = gimbal_margin(joint.convention, np.swapaxes(proximal, -1, -2) @ distal)
-        near = int((margin < GIMBAL_WARNING).sum())
-        if near:
-            warnings.warn(
-                message(
-                    (trial.subject.id, trial.id, f"joint {joint.name}"),
-                    f"{near} of {margin.size} frames lie within {np.degrees(GIMBAL_WARNING):.0f}° of the "
-                    "posture where its first and third angle cannot be told apart",
-                    "Trust the poses there, not the angles.",
-                ),
-                StaPriorWarning,
-                stacklevel=4,
-            )
-
-
 def _mark_informed(data: xr.Dataset, binding: Binding | None) -> None:
     times = data["time"].values
     informed = np.zeros(times.size, dtype=np.int8)
@@ -326,7 +271,7 @@ def _dataset(
 ) -> xr.Dataset:
     lab = trial.subject.lab
     frames, count = result.poses.shape[:2]
-    _warn_of_gimbal(trial, result.poses)
+    warn_of_gimbal(trial, result.poses)
     blocks = np.stack(
         [result.covariance[:, 6 * i : 6 * i + 6, 6 * i : 6 * i + 6] for i in range(count)], axis=1
     )
