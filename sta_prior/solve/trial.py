@@ -130,13 +130,14 @@ def solve(
             "suspects": name_suspects(suspects, lab, exclude_suspects),
             "reference_notes": "; ".join([*reference.notes, *notes]),
             "belief": binding.basis_of_belief if binding is not None else "no prior",
-            "misfit": result.misfit,
             "covariance": "posterior" if estimator in WITH_PRIOR else SCATTER,
             "subject": trial.subject.id,
             "trial": trial.id,
             "activity": trial.activity,
         }
     )
+    if np.isfinite(result.misfit):
+        data.attrs["misfit"] = result.misfit
     if trial.subject.invented or (prior is not None and prior.invented):
         data.attrs["invented_data"] = 1
     return data
