@@ -75,6 +75,12 @@ def begin(problem: TrajectoryProblem, hidden: HiddenOutputs, start: FloatArray) 
     return Trajectory(start.copy(), rates, nothing, np.zeros(problem.constants))
 
 
+def _left_over(problem: TrajectoryProblem) -> float:
+    """Measured values less those that the poses themselves can follow, six a segment and frame."""
+    seen = [np.isfinite(segment.points).sum(axis=(1, 2)) for segment in problem.segments]
+    return float(sum(np.maximum(values - 6, 0).sum() for values in seen))
+
+
 def smooth(problem: TrajectoryProblem, start: FloatArray, constant_time: float = CONSTANT_TIME) -> Smoothed:
     """Maximum a posteriori trajectory by Gauss-Newton with step control."""
     hidden = place_hidden(problem)
@@ -115,7 +121,6 @@ def smooth(problem: TrajectoryProblem, start: FloatArray, constant_time: float =
     # Steps see the markers where they are, the information where the prior expects them.
     final = TrajectorySystem(problem, state, hidden, expected=True)
     informed = factor(final, problem.frames)
-    counted = sum(float(np.isfinite(segment.points).sum()) for segment in problem.segments)
-    misfit = 2.0 * final.marker_cost / max(counted, 1.0)
+    misfit = 2.0 * final.marker_cost / max(_left_over(problem), 1.0)
     constants = bounded_constants(informed, bound)
     return Smoothed(problem, hidden, state, informed, constants, misfit, iterations, reason)
