@@ -1,6 +1,8 @@
 """Error and coverage of the smoother on subjects never imaged, over simulated populations.
 
     python docs/studies/smoother.py populations --populations 6
+    python docs/studies/smoother.py variants --populations 2
+    python docs/studies/smoother.py personal --populations 3
     python docs/studies/smoother.py durations --populations 3
     python docs/studies/smoother.py mismatch --populations 2
 
@@ -23,6 +25,7 @@ from study_in_memory import (
     KNEE,
     SPLIT,
     TRAVEL_SD,
+    Couriers,
     artifacts_for,
     knee_angles,
     make_couriers,
@@ -34,10 +37,12 @@ from study_in_memory import (
 from sta_prior.checks import FloatArray
 from sta_prior.errors import StaPriorWarning
 from sta_prior.prior import Prior, learn
+from sta_prior.prior.family import Own, Posture
 from sta_prior.prior.interface import Artifact
+from sta_prior.prior.statistics import segment_frames
 from sta_prior.prior.time_scales import TimeScales
-from sta_prior.se3 import inverse, log
-from sta_prior.simulate import MECHANISMS, TASKS
+from sta_prior.se3 import exp, inverse, log
+from sta_prior.simulate import MECHANISMS, SEGMENTS, TASKS
 from sta_prior.simulate import motion as simulated_motion
 from sta_prior.simulate.subject import SimulatedSubject, SimulatedTrial
 from sta_prior.solve.frame import bridge, first_look, solve_frames
@@ -104,11 +109,16 @@ def solve_all(
     scores: dict[str, Score],
     change: Callable[[Artifact], Artifact] = lambda artifact: artifact,
     scale: float = 1.0,
+    own: Callable[[Prior, SimulatedSubject], Sequence[Artifact]] | None = None,
 ) -> None:
-    """Solve every trial of the subjects and add up; scale: of the true artifact, change: of the prior's."""
+    """Solve every trial of the subjects and add up.
+
+    scale: of the true artifact; change: of the prior's; own: artifacts of a subject with frames of its own.
+    """
     for subject in subjects:
         reference = reference_markers(subject)
-        artifacts = [change(artifact) for artifact in artifacts_for(prior.segments, subject)]
+        usual = own(prior, subject) if own is not None else artifacts_for(prior.segments, subject)
+        artifacts = [change(artifact) for artifact in usual]
         proximal, distal = subject.body.centres
         joints = [JointProblem(0, 1, KNEE, proximal, distal, TRAVEL_SD)]
         for trial in subject.trials:
@@ -184,16 +194,73 @@ def show(label: str, scores: dict[str, Score]) -> None:
         print(row(label, name, score, scores["rigid"]), flush=True)
 
 
-def populations(first: int, count: int, mechanisms: Sequence[str]) -> None:
-    """Trials of usual length, all populations together and the worst of them."""
+def populations(
+    first: int, count: int, mechanisms: Sequence[str], solvers: Sequence[str] = ("frame-map", "smoother")
+) -> None:
+    """Trials of usual length: every population, and all together."""
     print(HEAD.format("mechanism") + "\n" + RULE)
     for mechanism in mechanisms:
         scores: dict[str, Score] = {}
         for seed in range(first, first + count):
             couriers = make_couriers(seed, mechanism, SUBJECTS, FRESH)
             prior = learn(pairs_of(couriers.learned, couriers.population))
-            solve_all(prior, one_of_each(couriers.fresh), list(SOLVERS), scores)
-        show(mechanism, scores)
+            alone: dict[str, Score] = {}
+            solve_all(prior, one_of_each(couriers.fresh), solvers, alone)
+            show(f"{mechanism}, {seed}", alone)
+            for name, score in alone.items():
+                whole = scores.setdefault(name, Score())
+                for part in ("angle", "angle_z", "pose", "pose_z", "flagged"):
+                    getattr(whole, part).extend(getattr(score, part))
+        show(f"{mechanism}, all", scores)
+
+
+def variants(first: int, count: int, mechanisms: Sequence[str]) -> None:
+    """The smoother's options."""
+    populations(first, count, mechanisms, list(SOLVERS))
+
+
+WINDOW = 80
+"""Frames of a subject's own window: 0.8 s."""
+
+
+def with_windows(subject: SimulatedSubject) -> SimulatedSubject:
+    """Two windows of bone truth, in the second trials of climbing and of walking."""
+    generator = np.random.default_rng(int(subject.id[1:]))
+    later = [t for t in subject.trials[len(TASKS) :] if t.activity in (TASKS[0], "level-walk")]
+    trials = []
+    for trial in later:
+        noise = np.repeat([0.001, 0.0005], 3) * generator.standard_normal((trial.time.size, 2, 6))
+        imaged = trial.lab_from_bone @ exp(noise)
+        start = (trial.time.size - WINDOW) // 2
+        imaged[:start] = imaged[start + WINDOW :] = np.nan
+        trials.append(replace(trial, imaged_pose=imaged))
+    return replace(subject, trials=tuple(trials))
+
+
+def personal(first: int, count: int, mechanisms: Sequence[str]) -> None:
+    """Archived subjects with two windows of 0.8 s of their own."""
+    print(HEAD.format("mechanism") + "\n" + RULE)
+    for mechanism in mechanisms:
+        scores: dict[str, Score] = {}
+        for seed in range(first, first + count):
+            couriers = make_couriers(seed, mechanism, SUBJECTS, FRESH)
+            prior = learn(pairs_of(couriers.learned, couriers.population))
+
+            def own(prior: Prior, subject: SimulatedSubject, couriers: Couriers = couriers) -> list[Artifact]:
+                whole = next(item for item in couriers.fresh if item.id == subject.id)
+                pairs = pairs_of([with_windows(whole)], couriers.population)
+                reference = reference_markers(subject)
+                artifacts: list[Artifact] = []
+                for name, markers in zip(SEGMENTS, (reference[:SPLIT], reference[SPLIT:]), strict=True):
+                    model = prior.segments[name]
+                    frames = segment_frames(pairs, name, model.markers, {"knee": KNEE.dof})
+                    posture = Posture(subject.style.reference_angles[None], markers)
+                    artifacts.append(model.for_subject(posture, Own(subject.id, frames, "")))
+                return artifacts
+
+            people = one_of_each(couriers.fresh)
+            solve_all(prior, people, ["frame-map", "smoother"], scores, own=own)
+        show(f"{mechanism}, two own windows", scores)
 
 
 def durations(first: int, count: int, mechanisms: Sequence[str]) -> None:
@@ -254,13 +321,19 @@ def mismatch(first: int, count: int, mechanisms: Sequence[str]) -> None:
 def main() -> None:
     """Read the arguments and run one study."""
     parser = argparse.ArgumentParser(description=__doc__)
-    parser.add_argument("study", choices=["populations", "durations", "mismatch"])
+    parser.add_argument("study", choices=["populations", "variants", "personal", "durations", "mismatch"])
     parser.add_argument("--populations", type=int, default=6)
     parser.add_argument("--first-seed", type=int, default=7000)
     parser.add_argument("--mechanisms", nargs="+", default=list(MECHANISMS))
     chosen = parser.parse_args()
     warnings.simplefilter("ignore", StaPriorWarning)
-    studies = {"populations": populations, "durations": durations, "mismatch": mismatch}
+    studies: dict[str, Callable[[int, int, Sequence[str]], None]] = {
+        "populations": populations,
+        "variants": variants,
+        "personal": personal,
+        "durations": durations,
+        "mismatch": mismatch,
+    }
     studies[chosen.study](chosen.first_seed, chosen.populations, chosen.mechanisms)
 
 
