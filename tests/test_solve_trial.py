@@ -75,6 +75,7 @@ def test_a_prior_is_needed(tmp_path: Path, estimator: str) -> None:
 
 
 VARIABLES = {
+    "pose_rank": (("time", "segment"), "1"),
     "rotation": (("time", "segment", "row", "col"), "1"),
     "position": (("time", "segment", "axis"), "m"),
     "pose_covariance": (("time", "segment", "pose", "pose2"), "rad2, rad m, m2"),
@@ -142,6 +143,7 @@ def test_solution_has_the_attributes_of_the_contract(tmp_path: Path, estimator: 
         "prior_digest": "d" * 64 if with_prior else "",
         "input_digest": study.trial("P01", "stairs_01").digest(),
         "observability": "",
+        "bridged": "",
         "suspects": "",
         "reference_notes": "",
         "belief": "made up" if with_prior else "no prior",

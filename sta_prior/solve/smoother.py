@@ -11,6 +11,7 @@ import numpy as np
 
 from sta_prior.checks import FloatArray
 from sta_prior.prior.interface import design_of
+from sta_prior.rigid import fit_poses
 from sta_prior.solve.chain import ChainFactor, ConstantsPosterior, bounded_constants, factor, step
 from sta_prior.solve.constants import reduce_constants
 from sta_prior.solve.motion import first_rates, make_motion
@@ -62,7 +63,9 @@ def make_problem(
         features = design_of(segment.artifact, inputs).features
         covariance = segment.artifact.constant_covariance
         modes.append(reduce_constants(covariance, features, segment.reference.size))
-    motions = [make_motion(start[:, segment.index], time_step, order) for segment in segments]
+    # From what a segment's own markers show: a bridged pose stands still where nothing was seen.
+    looks = [fit_poses(segment.reference, segment.points).pose for segment in segments]
+    motions = [make_motion(look, time_step, order) for look in looks]
     return TrajectoryProblem(segments, joints, motions, modes, time_step, marker_sd)
 
 

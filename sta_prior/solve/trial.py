@@ -22,7 +22,7 @@ from sta_prior.prior.interface import IsotropicArtifact
 from sta_prior.rigid import RigidFit
 from sta_prior.solve.frame import MARKER_SD, bridge, first_look, solve_frames
 from sta_prior.solve.notes import reference_notes, warn_of_gimbal, warn_of_misfit, warn_of_suspects
-from sta_prior.solve.observability import describe_observability
+from sta_prior.solve.observability import describe_bridged, describe_observability, observe
 from sta_prior.solve.posterior import SOURCES, FrameSolution
 from sta_prior.solve.suspects import Suspect, find_suspects, hide, name_suspects
 from sta_prior.solve.terms import Gravity, JointProblem, SegmentProblem
@@ -117,6 +117,13 @@ def solve(
         else:
             result = solve_frames(segments, joints, start)
     data = _dataset(trial, skin, result, rigid_poses, estimator)
+    held = [replace(joint, travel_sd=np.inf) for joint in joints] if estimator == "rigid" else joints
+    seen = observe(segments, held, bridge(rigid_poses, joints), MARKER_SD)
+    data["pose_rank"] = (
+        ("time", "segment"),
+        seen.rank.astype(np.int8),
+        {"units": "1", "long_name": "pose directions of six that the frame's own markers and joints fix"},
+    )
     _mark_informed(data, binding)
     data.attrs.update(
         {
@@ -127,6 +134,7 @@ def solve(
             "prior_digest": prior.digest if binding is not None and prior is not None else "",
             "input_digest": trial.digest(),
             "observability": describe_observability(segments, result.determined, lab),
+            "bridged": describe_bridged(seen, result.determined, lab),
             "suspects": name_suspects(suspects, lab, exclude_suspects),
             "reference_notes": "; ".join([*reference.notes, *notes]),
             "belief": binding.basis_of_belief if binding is not None else "no prior",
