@@ -14,7 +14,7 @@ from made_trials import fixed_prior, hide, moving_poses, write_moving_leg
 from sta_prior import se3
 from sta_prior.checks import BoolArray, FloatArray
 from sta_prior.prior.interface import IsotropicArtifact
-from sta_prior.solve import ESTIMATORS, solve
+from sta_prior.solve import ESTIMATORS, WITH_PRIOR, solve
 from sta_prior.solve.observability import describe_observability
 from sta_prior.solve.terms import SegmentProblem
 from sta_prior.study import Lab, read_lab
@@ -104,15 +104,16 @@ def assert_missing(data: xr.Dataset, thigh: slice, shank: slice) -> None:
 def solved(
     folder: Path, estimator: str, change: Callable[[dict[str, FloatArray]], None], lab: str = FREE
 ) -> xr.Dataset:
-    study = write_moving_leg(folder, lab=lab, change=change)
-    prior = fixed_prior() if estimator == "frame-map" else None
+    study = write_moving_leg(folder, lab=lab, change=change, alone=estimator != "smoother")
+    prior = fixed_prior() if estimator in WITH_PRIOR else None
     return solve(study.trial("P01", "stairs_01"), prior, estimator)
 
 
 NOTHING = slice(0, 0)
+FRAME_WISE = ("rigid", "linked", "frame-map")
 
 
-@pytest.mark.parametrize("estimator", ESTIMATORS)
+@pytest.mark.parametrize("estimator", FRAME_WISE)
 @pytest.mark.parametrize(
     ("names", "words"),
     [
@@ -199,7 +200,7 @@ def test_a_trial_without_a_single_marker(tmp_path: Path) -> None:
         assert_missing(data, slice(0, FRAMES), slice(0, FRAMES))
 
 
-@pytest.mark.parametrize("estimator", ESTIMATORS)
+@pytest.mark.parametrize("estimator", FRAME_WISE)
 @pytest.mark.parametrize("width", [0.0, 0.002])
 def test_markers_seen_near_one_line(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch, estimator: str, width: float
@@ -215,3 +216,49 @@ def test_markers_seen_near_one_line(
     data = solved(tmp_path, estimator, cover)
     assert data.attrs["observability"] == f"thigh: not determined in 5 of 40 frames, {NEAR_A_LINE}"
     assert_missing(data, slice(3, 8), NOTHING)
+
+
+# The smoother carries a pose over frames in which its own markers leave it open.
+
+
+@pytest.mark.parametrize(
+    ("names", "rank", "words"),
+    [
+        ("SA SB SC SD", 0, ""),
+        ("SA SB SC", 3, ""),
+        ("SA SC", 5, ", their own markers leave open the turn about the bone's axis (…"),
+    ],
+)
+def test_the_smoother_bridges_and_says_so(tmp_path: Path, names: str, rank: int, words: str) -> None:
+    def cover(points: dict[str, FloatArray]) -> None:
+        hide(points, names, slice(12, 19))
+
+    data = solved(tmp_path, "smoother", cover)
+    assert data.attrs["observability"] == ""
+    assert_missing(data, NOTHING, NOTHING)
+    told = "shank: 7 of 40 frames are carried by their neighbours"
+    assert data.attrs["bridged"].startswith(told + words.removesuffix("(…"))
+    own = data["pose_rank"].sel(segment="shank").to_numpy()
+    assert (own[12:19] == rank).all()
+    assert (np.delete(own, slice(12, 19)) == 6).all()
+    assert (data["pose_rank"].sel(segment="thigh") == 6).all()
+    sd = np.sqrt(np.einsum("txx->tx", data["pose_covariance"].sel(segment="shank").to_numpy()))
+    assert (sd[15] > 1.02 * sd[5]).any()
+    truth = moving_poses(FRAMES)[:, 1]
+    found = data.sel(segment="shank")
+    error = se3.log(se3.inverse(se3.make_pose(found["rotation"].values, found["position"].values)) @ truth)
+    assert (np.abs(error / sd) < 3.5).all()
+
+
+def test_what_is_open_throughout_is_not_bridged(tmp_path: Path) -> None:
+    """With two markers throughout, no neighbour can carry the turn about their line."""
+
+    def cover(points: dict[str, FloatArray]) -> None:
+        hide(points, "SA SC", slice(0, FRAMES))
+
+    data = solved(tmp_path, "smoother", cover)
+    assert data.attrs["observability"] == (
+        "shank: not determined in 40 of 40 frames, rotation about the line SB–SD is open"
+    )
+    assert data.attrs["bridged"] == ""
+    assert_missing(data, NOTHING, slice(0, FRAMES))

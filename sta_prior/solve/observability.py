@@ -59,7 +59,11 @@ def observe(
             )
             for segment in segments
         ]
-        information = assemble(here, joints, poses[own], marker_sd).information
+        system = assemble(here, joints, poses[own], marker_sd)
+        information = system.joint_normal.copy()
+        # The levers alone: what a neighbour's artifact tells of a bone is not its own markers' doing.
+        for term in system.markers:
+            information += np.swapaxes(term.lever, 1, 2) @ term.precision @ term.lever
         covariance = np.linalg.inv(information + ANCHOR * np.eye(6 * count))
         for index in range(count):
             at = slice(6 * index, 6 * index + 6)

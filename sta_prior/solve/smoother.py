@@ -5,19 +5,20 @@ Kernel: arrays in, arrays out. Conventions: docs/conventions.md. The model: solv
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
-from sta_prior.checks import FloatArray
+from sta_prior.checks import BoolArray, FloatArray, IntArray
 from sta_prior.prior.interface import design_of
 from sta_prior.rigid import fit_poses
 from sta_prior.solve.chain import ChainFactor, ConstantsPosterior, bounded_constants, factor, step
 from sta_prior.solve.constants import reduce_constants
 from sta_prior.solve.motion import first_rates, make_motion
+from sta_prior.solve.posterior import UNDETERMINED
 from sta_prior.solve.relaxation import relaxation
 from sta_prior.solve.spans import TrajectorySystem
-from sta_prior.solve.terms import JointProblem, SegmentProblem, angles_and_jacobians, drive
+from sta_prior.solve.terms import ANCHOR, JointProblem, SegmentProblem, angles_and_jacobians, assemble, drive
 from sta_prior.solve.trajectory import HiddenOutputs, Trajectory, TrajectoryProblem, moved, place_hidden
 
 CONSTANT_TIME = 1.0
@@ -25,6 +26,9 @@ CONSTANT_TIME = 1.0
 
 TOLERANCE = 1e-7
 MAXIMUM_ITERATIONS = 40
+LOOKED_AT = 200
+"""Frames of a trial, evenly spread, that tell whether its markers fix a pose at all."""
+
 _SHORTEST, _LONGEST = 1e-3, 4.0
 
 
@@ -32,19 +36,42 @@ _SHORTEST, _LONGEST = 1e-3, 4.0
 class Smoothed:
     """Optimum of a trajectory problem.
 
-    problem, hidden, state; factor, constants: of the information at the optimum, constants by bounded
-    information; misfit: mean square of what the markers' innovations are in their predicted SDs, 1 where the
-    prior's residual moves as the markers do; iterations, stop_reason.
+    problem, hidden, state; fixed: (S,) segments that the markers and joints fix at all; factor, constants: of
+    the information at the optimum, constants by bounded information; misfit: mean square of what the markers'
+    innovations are in their predicted SDs, 1 where the prior's residual moves as the markers do; iterations,
+    stop_reason.
     """
 
     problem: TrajectoryProblem
     hidden: HiddenOutputs
     state: Trajectory
+    fixed: BoolArray
     factor: ChainFactor
     constants: ConstantsPosterior
     misfit: float
     iterations: int
     stop_reason: str
+
+
+def segment_at(segment: SegmentProblem, frames: slice | IntArray) -> SegmentProblem:
+    """The segment at some of its frames."""
+    changes = None if segment.changes is None else segment.changes[frames]
+    return replace(segment, points=segment.points[frames], changes=changes)
+
+
+def fixed_by_markers(problem: TrajectoryProblem, look: FloatArray) -> BoolArray:
+    """Segments whose pose the markers and joints fix in the average frame, shape (S,); look: (F, S, 4, 4).
+
+    The motion prior carries a pose over frames that lack markers. It must not fix a direction that no marker
+    fixes in any frame: the innovations of a turning bone depend on how its axes lie, and would seem to.
+    """
+    frames = np.unique(np.linspace(0, problem.frames - 1, LOOKED_AT).round().astype(np.int64))
+    poses = look[frames]
+    here = [segment_at(segment, frames) for segment in problem.segments]
+    information = assemble(here, problem.joints, poses, problem.marker_sd).information.mean(axis=0)
+    covariance = np.linalg.inv(information + ANCHOR * np.eye(problem.poses))
+    sd = np.sqrt(np.diag(covariance)).reshape(-1, 6)
+    return np.asarray((sd < UNDETERMINED).all(axis=1))
 
 
 def make_problem(
@@ -89,6 +116,8 @@ def smooth(problem: TrajectoryProblem, start: FloatArray, constant_time: float =
     hidden = place_hidden(problem)
     bound = max(1.0, problem.frames * problem.step / constant_time)
     state = begin(problem, hidden, start)
+    fixed = fixed_by_markers(problem, start)
+    judged = np.flatnonzero(np.repeat(fixed, 6))
 
     def solved(at: Trajectory, held: Trajectory | None = None) -> tuple[float, ChainFactor, bool]:
         system = TrajectorySystem(problem, at, hidden, held=held)
@@ -97,12 +126,13 @@ def smooth(problem: TrajectoryProblem, start: FloatArray, constant_time: float =
 
     merit, system, grows = solved(state)
     posterior = bounded_constants(system, bound)
-    made = before = np.full((1, problem.frames * 6 * len(problem.segments)), np.nan)
+    made = before = np.full((1, problem.frames * judged.size), np.nan)
     reason, iterations = f"not converged in {MAXIMUM_ITERATIONS} iterations", 0
     while iterations < MAXIMUM_ITERATIONS:
         iterations += 1
         change = step(system, posterior, state.constants)
-        full = change.states[:, : 6 * len(problem.segments)].reshape(1, -1)
+        # A pose that nothing fixes may wander: it is not reported.
+        full = change.states[:, judged].reshape(1, -1)
         # Curvature that Gauss-Newton leaves out makes it crawl along one direction: lengthen the step there.
         length = float(np.clip(relaxation(made, before - full)[0], 1.0, _LONGEST))
         while True:
@@ -113,7 +143,7 @@ def smooth(problem: TrajectoryProblem, start: FloatArray, constant_time: float =
                 break
             length *= 0.5
         before, made = full, length * full
-        size = float(np.abs(full).max())
+        size = float(np.abs(full).max(initial=0.0))
         state, merit, system, grows = ahead, value, there, grows or now
         if grows:
             merit, system, _ = solved(state)
@@ -126,4 +156,4 @@ def smooth(problem: TrajectoryProblem, start: FloatArray, constant_time: float =
     informed = factor(final, problem.frames)
     misfit = 2.0 * final.marker_cost / max(_left_over(problem), 1.0)
     constants = bounded_constants(informed, bound)
-    return Smoothed(problem, hidden, state, informed, constants, misfit, iterations, reason)
+    return Smoothed(problem, hidden, state, fixed, informed, constants, misfit, iterations, reason)

@@ -11,7 +11,7 @@ from typing import Literal, cast
 
 import numpy as np
 
-from sta_prior.checks import BoolArray, FloatArray, IntArray
+from sta_prior.checks import BoolArray, FloatArray
 from sta_prior.prior.interface import design_of
 from sta_prior.solve.chain_marginals import Marginals, marginal_spans
 from sta_prior.solve.constants import Lumped
@@ -25,17 +25,13 @@ from sta_prior.solve.posterior import (
     variance_along,
 )
 from sta_prior.solve.rows import Rows
-from sta_prior.solve.smoother import CONSTANT_TIME, Smoothed, make_problem, smooth
+from sta_prior.solve.smoother import CONSTANT_TIME, Smoothed, make_problem, segment_at, smooth
 from sta_prior.solve.spans import TrajectorySystem
-from sta_prior.solve.terms import (
-    ANCHOR as FRAME_ANCHOR,
-)
 from sta_prior.solve.terms import (
     JointProblem,
     Linearised,
     SegmentProblem,
     angles_and_jacobians,
-    assemble,
     drive,
     joint_travel,
     marker_term,
@@ -43,9 +39,6 @@ from sta_prior.solve.terms import (
 
 Constants = Literal["bounded", "full", "none"]
 CONSTANTS: tuple[str, ...] = ("bounded", "full", "none")
-
-LOOKED_AT = 200
-"""Frames of a trial, evenly spread, that tell whether its markers fix a pose at all."""
 
 MARKERS, PRIOR, JOINT, MOTION = range(len(SOURCES))
 
@@ -94,7 +87,6 @@ def describe_trajectory(smoothed: Smoothed) -> FrameSolution:
     problem, hidden = smoothed.problem, smoothed.hidden
     system = TrajectorySystem(problem, smoothed.state, hidden, expected=True)
     leading = problem.poses + hidden.count
-    fixed = fixed_by_markers(smoothed)
     pieces: list[FrameSolution] = []
     part: Marginals | None = None
     # Spans come last first; what leads into one is known with the span before it.
@@ -102,27 +94,11 @@ def describe_trajectory(smoothed: Smoothed) -> FrameSolution:
         smoothed.factor, smoothed.constants, leading, lagged=True, with_constants=True
     ):
         if part is not None:
-            pieces.append(_describe(smoothed, system, part, before, fixed))
+            pieces.append(_describe(smoothed, system, part, before))
         part = before
     if part is not None:
-        pieces.append(_describe(smoothed, system, part, None, fixed))
+        pieces.append(_describe(smoothed, system, part, None))
     return join(pieces[::-1])
-
-
-def fixed_by_markers(smoothed: Smoothed) -> BoolArray:
-    """Segments whose pose the markers and joints fix in the trial's average frame, shape (S,).
-
-    The motion prior carries a pose over frames that lack markers. It must not fix a direction that no marker
-    fixes in any frame: the innovations of a turning bone depend on how its axes lie, and would seem to.
-    """
-    problem = smoothed.problem
-    frames = np.unique(np.linspace(0, problem.frames - 1, LOOKED_AT).round().astype(np.int64))
-    poses = smoothed.state.poses[frames]
-    here = [segment_at(segment, frames) for segment in problem.segments]
-    information = assemble(here, problem.joints, poses, problem.marker_sd).information.mean(axis=0)
-    covariance = np.linalg.inv(information + FRAME_ANCHOR * np.eye(problem.poses))
-    sd = np.sqrt(np.diag(covariance)).reshape(-1, 6)
-    return np.asarray((sd < UNDETERMINED).all(axis=1))
 
 
 def _describe(
@@ -130,14 +106,13 @@ def _describe(
     system: TrajectorySystem,
     part: Marginals,
     before: Marginals | None,
-    fixed: BoolArray,
 ) -> FrameSolution:
     problem, state = smoothed.problem, smoothed.state
     frames, count = slice(part.start, part.stop), len(problem.segments)
     poses = state.poses[frames]
     covariance = part.covariance[:, : problem.poses, : problem.poses]
     sd = np.sqrt(np.einsum("fxx->fx", covariance)).reshape(-1, count, 6)
-    determined: BoolArray = np.asarray((sd < UNDETERMINED).all(axis=2) & fixed)
+    determined: BoolArray = np.asarray((sd < UNDETERMINED).all(axis=2) & smoothed.fixed)
     angles, slope = angles_and_jacobians(problem.joints, poses)
     shown, angle_sd = angles.copy(), np.sqrt(variance_along(slope, covariance))
     travel = np.full((poses.shape[0], len(problem.joints), 3), np.nan)
@@ -178,12 +153,6 @@ def _describe(
         stop_reason=smoothed.stop_reason,
         misfit=smoothed.misfit,
     )
-
-
-def segment_at(segment: SegmentProblem, frames: slice | IntArray) -> SegmentProblem:
-    """The segment at some of its frames."""
-    changes = None if segment.changes is None else segment.changes[frames]
-    return replace(segment, points=segment.points[frames], changes=changes)
 
 
 def _artifact(
