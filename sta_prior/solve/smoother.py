@@ -29,7 +29,7 @@ MAXIMUM_ITERATIONS = 40
 LOOKED_AT = 200
 """Frames of a trial, evenly spread, that tell whether its markers fix a pose at all."""
 
-_SHORTEST, _LONGEST = 1e-3, 4.0
+_SHORTEST, _LENGTHS = 1e-3, (0.2, 4.0)
 
 
 @dataclass(frozen=True)
@@ -133,8 +133,8 @@ def smooth(problem: TrajectoryProblem, start: FloatArray, constant_time: float =
         change = step(system, posterior, state.constants)
         # A pose that nothing fixes may wander: it is not reported.
         full = change.states[:, judged].reshape(1, -1)
-        # Curvature that Gauss-Newton leaves out makes it crawl along one direction: lengthen the step there.
-        length = float(np.clip(relaxation(made, before - full)[0], 1.0, _LONGEST))
+        # Curvature that Gauss-Newton leaves out makes it crawl or swing along one direction.
+        length = float(np.clip(relaxation(made, before - full)[0], *_LENGTHS))
         while True:
             ahead = moved(problem, state, length * change.states, length * change.constants)
             # A covariance that follows the angles is held while steps are compared.
@@ -148,7 +148,7 @@ def smooth(problem: TrajectoryProblem, start: FloatArray, constant_time: float =
         if grows:
             merit, system, _ = solved(state)
         posterior = bounded_constants(system, bound)
-        if length >= 1.0 and size < TOLERANCE:
+        if size < TOLERANCE:
             reason = f"step below {TOLERANCE:g} rad and m in every frame"
             break
     # Steps see the markers where they are, the information where the prior expects them.
