@@ -41,8 +41,9 @@ def even_grid(time: FloatArray) -> Timeline:
     if time.size < 2:
         return Timeline(0.01, int(time.size), np.arange(time.size))
     step = float(np.median(np.diff(time)))
-    # The median step is good to rounding in the file; over a long trial the whole length tells it better.
-    at = np.rint((time - time[0]) / step)
+    # A median step is good to rounding in the file only; steps are counted one by one, and the whole length
+    # then tells how long they are.
+    at = np.concatenate([[0.0], np.cumsum(np.rint(np.diff(time) / step))])
     if at[-1] > 0:
         step = float((time[-1] - time[0]) / at[-1])
         at = np.rint((time - time[0]) / step)
