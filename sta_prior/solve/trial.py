@@ -98,7 +98,9 @@ def solve(
     notes = reference_notes(trial, points, reference)
     suspects: list[Suspect] = []
     if binding is not None:
-        suspects = find_suspects(segments, joints, bridge(rigid_poses, joints), MARKER_SD)
+        start = bridge(rigid_poses, joints)
+        segments = _with_inputs(segments, trial, binding, start, skin["time"].values)
+        suspects = find_suspects(segments, joints, start, MARKER_SD)
         warn_of_suspects(trial, suspects, exclude_suspects)
     if suspects and exclude_suspects:
         segments = hide(segments, suspects)
@@ -109,7 +111,7 @@ def solve(
         if estimator == "linked":
             segments = [_with_scatter(segment, fit) for segment, fit in zip(segments, fits, strict=True)]
         start = bridge(rigid_poses, joints)
-        if binding is not None and binding.inputs:
+        if binding is not None and suspects and exclude_suspects:
             segments = _with_inputs(segments, trial, binding, start, skin["time"].values)
         if estimator == "smoother":
             result = _smooth(segments, joints, start, skin["time"].values, constants)
