@@ -93,8 +93,8 @@ def test_the_prior_beats_the_rigid_fit_on_couriers_it_has_not_seen(
 def test_nine_of_ten_intervals_of_the_angles_hold_the_truth(shown: tuple[Path, Done]) -> None:
     """Mean over the degrees of freedom, each of them a mean over couriers.
 
-    The smoother's intervals are wider than the model's own by construction (bounded information, docs/model.md):
-    they may hold more than their name, but must not say nothing.
+    The smoother's intervals are wider than the model's own by construction (bounded information,
+    docs/model.md): they may hold more than their name, but must not say nothing.
     """
     rows = knee_rows(shown[1])
     covered = {dof: row["coverage_90_percent"] for dof, row in rows.items()}
