@@ -17,16 +17,14 @@ Lu & O'Connor (1999), J Biomech 32, 129–134 (poses of linked segments by least
 
 from __future__ import annotations
 
-from dataclasses import replace
-
 import numpy as np
 
 from sta_prior import se3
-from sta_prior.checks import BoolArray, FloatArray, IntArray
+from sta_prior.checks import BoolArray, FloatArray
 from sta_prior.rigid import RigidFit, fit_rigid
 from sta_prior.solve.posterior import FrameSolution, describe_posterior, join
 from sta_prior.solve.relaxation import relaxation
-from sta_prior.solve.terms import JointProblem, SegmentProblem, System, assemble
+from sta_prior.solve.terms import JointProblem, SegmentProblem, System, assemble, segment_at
 
 MARKER_SD = 0.0005
 """Instrument noise of a marker, m (common practice for optical systems, no source)."""
@@ -119,7 +117,7 @@ def _iterate(
     while iterations < MAXIMUM_ITERATIONS:
         iterations += 1
         active = np.flatnonzero(moving)
-        part = [_take(segment, active) for segment in segments]
+        part = [segment_at(segment, active) for segment in segments]
         system = assemble(part, joints, poses[active], marker_sd)
         step = -np.linalg.solve(system.normal + hold, system.gradient[..., None])[..., 0] / limit
         longest = np.maximum(np.abs(step).max(axis=1), 1e-300)
@@ -130,11 +128,6 @@ def _iterate(
         if not moving.any():
             break
     return poses, assemble(segments, joints, poses, marker_sd), iterations, ~moving
-
-
-def _take(segment: SegmentProblem, frames: IntArray) -> SegmentProblem:
-    changes = None if segment.changes is None else segment.changes[frames]
-    return replace(segment, points=segment.points[frames], changes=changes)
 
 
 def solve_frames(
@@ -159,7 +152,7 @@ def solve_frames(
     pieces = []
     for first in range(0, start.shape[0], _CHUNK):
         frames = np.arange(first, min(first + _CHUNK, start.shape[0]))
-        part = [_take(segment, frames) for segment in segments]
+        part = [segment_at(segment, frames) for segment in segments]
         poses, system, iterations, converged = _iterate(part, joints, start[frames].copy(), marker_sd)
         reason = (
             f"step below {TOLERANCE:g} rad and m in every frame"

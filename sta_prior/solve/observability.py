@@ -5,13 +5,13 @@ Kernel: arrays in, arrays and text out. Conventions: docs/conventions.md.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
 from sta_prior.checks import BoolArray, FloatArray, IntArray
 from sta_prior.solve.posterior import UNDETERMINED
-from sta_prior.solve.terms import ANCHOR, JointProblem, SegmentProblem, assemble
+from sta_prior.solve.terms import ANCHOR, JointProblem, SegmentProblem, assemble, segment_at
 from sta_prior.study import Lab
 
 _CHUNK = 1000
@@ -51,14 +51,7 @@ def observe(
     axis = np.full((frames, count, 3), np.nan)
     for first in range(0, frames, _CHUNK):
         own = slice(first, min(first + _CHUNK, frames))
-        here = [
-            replace(
-                segment,
-                points=segment.points[own],
-                changes=None if segment.changes is None else segment.changes[own],
-            )
-            for segment in segments
-        ]
+        here = [segment_at(segment, own) for segment in segments]
         system = assemble(here, joints, poses[own], marker_sd)
         information = system.joint_normal.copy()
         # The levers alone: what a neighbour's artifact tells of a bone is not its own markers' doing.

@@ -5,11 +5,11 @@ Kernel: arrays in, arrays out. Conventions: docs/conventions.md. The model: solv
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
-from sta_prior.checks import BoolArray, FloatArray, IntArray
+from sta_prior.checks import BoolArray, FloatArray
 from sta_prior.prior.interface import design_of
 from sta_prior.rigid import fit_poses
 from sta_prior.solve.chain import ChainFactor, ConstantsPosterior, bounded_constants, factor, step
@@ -18,7 +18,15 @@ from sta_prior.solve.motion import first_rates, make_motion
 from sta_prior.solve.posterior import UNDETERMINED
 from sta_prior.solve.relaxation import relaxation
 from sta_prior.solve.spans import TrajectorySystem
-from sta_prior.solve.terms import ANCHOR, JointProblem, SegmentProblem, angles_and_jacobians, assemble, drive
+from sta_prior.solve.terms import (
+    ANCHOR,
+    JointProblem,
+    SegmentProblem,
+    angles_and_jacobians,
+    assemble,
+    drive,
+    segment_at,
+)
 from sta_prior.solve.trajectory import HiddenOutputs, Trajectory, TrajectoryProblem, moved, place_hidden
 
 CONSTANT_TIME = 1.0
@@ -51,12 +59,6 @@ class Smoothed:
     misfit: float
     iterations: int
     stop_reason: str
-
-
-def segment_at(segment: SegmentProblem, frames: slice | IntArray) -> SegmentProblem:
-    """The segment at some of its frames."""
-    changes = None if segment.changes is None else segment.changes[frames]
-    return replace(segment, points=segment.points[frames], changes=changes)
 
 
 def fixed_by_markers(problem: TrajectoryProblem, look: FloatArray) -> BoolArray:
@@ -112,7 +114,25 @@ def _left_over(problem: TrajectoryProblem) -> float:
 
 
 def smooth(problem: TrajectoryProblem, start: FloatArray, constant_time: float = CONSTANT_TIME) -> Smoothed:
-    """Maximum a posteriori trajectory by Gauss-Newton with step control."""
+    """Maximum a posteriori trajectory by Gauss-Newton with step control.
+
+    Parameters
+    ----------
+    problem : from make_problem
+    start : shape (F, S, 4, 4), lab ← bone, finite
+    constant_time : s; information about the constants is divided by κ = max(1, duration/constant_time), so
+        that a trial teaches no more of them than so long a stretch does; infinite for all of it
+
+    Notes
+    -----
+    With bounded information the constants minimise ½|u|² + cost(x, u)/κ and the poses the cost itself given
+    them; P = A⁻¹ + A⁻¹B S⁻¹ BᵀA⁻¹ with S = 1 + H/κ is then the spread of the poses. At κ = 1 both are the
+    model's own posterior.
+
+    References
+    ----------
+    Bell (1994), SIAM J Optim 4, 626–636 (iterated smoother and Gauss-Newton; from memory).
+    """
     hidden = place_hidden(problem)
     bound = max(1.0, problem.frames * problem.step / constant_time)
     state = begin(problem, hidden, start)

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 import weakref
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from functools import cached_property
 
 import numpy as np
@@ -20,7 +20,14 @@ from sta_prior.solve.chain import Span
 from sta_prior.solve.chain_kernels import LETTERS, NUMBERS
 from sta_prior.solve.motion_kernels import add_motion
 from sta_prior.solve.rows import Rows, fast_part, whitener
-from sta_prior.solve.terms import BALL_JOINT_SD, SegmentProblem, angles_and_jacobians, drive, joint_travel
+from sta_prior.solve.terms import (
+    BALL_JOINT_SD,
+    SegmentProblem,
+    angles_and_jacobians,
+    drive,
+    joint_travel,
+    segment_at,
+)
 from sta_prior.solve.trajectory import (
     JOINT_TIME,
     OFFSET_SHARE,
@@ -171,8 +178,7 @@ class TrajectorySystem:
         """Markers of one segment against reference, prior mean and constants."""
         problem, state, frames = self.problem, self.state, part.frames
         segment, modes = problem.segments[index], problem.modes[index].modes
-        changes = None if segment.changes is None else segment.changes[frames]
-        segment = replace(segment, points=segment.points[frames], changes=changes)
+        segment = segment_at(segment, frames)
         poses, at = state.poses[frames], self._constants[0][index]
         inputs, input_jacobian = drive(segment, poses, angles, angle_jacobian)
         design = design_of(segment.artifact, inputs)

@@ -24,6 +24,7 @@ from sta_prior.solve.terms import (
     angles_and_jacobians,
     marker_term,
     precision_of_seen,
+    segment_at,
 )
 from sta_prior.study import Lab
 
@@ -136,8 +137,7 @@ def find_suspects(
     total = sum(segment.reference.shape[0] for segment in segments)
     found: list[Suspect] = []
     for segment in segments:
-        changes = None if segment.changes is None else segment.changes[frames]
-        here = replace(segment, points=segment.points[frames], changes=changes)
+        here = segment_at(segment, frames)
         found += _of_segment(here, poses[frames], angles, slope, marker_sd, FALSE_ALARM / total)
     return found
 

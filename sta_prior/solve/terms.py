@@ -9,13 +9,13 @@ T ← T·Exp(ξ); a Jacobian's last axis is the 6·S pose unknowns in segment or
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import NamedTuple
 
 import numpy as np
 
 from sta_prior.angles import JointConvention, joint_angle_pose_jacobians
-from sta_prior.checks import BoolArray, FloatArray
+from sta_prior.checks import BoolArray, FloatArray, IntArray
 from sta_prior.gaussian import symmetrise
 from sta_prior.prior.inputs import tilt, tilt_jacobian
 from sta_prior.prior.interface import Artifact
@@ -51,6 +51,12 @@ class SegmentProblem:
     artifact: Artifact
     gravity: Gravity | None = None
     changes: FloatArray | None = None
+
+
+def segment_at(segment: SegmentProblem, frames: slice | IntArray) -> SegmentProblem:
+    """The segment at some of its frames."""
+    changes = None if segment.changes is None else segment.changes[frames]
+    return replace(segment, points=segment.points[frames], changes=changes)
 
 
 @dataclass(frozen=True)

@@ -25,7 +25,7 @@ from sta_prior.solve.posterior import (
     variance_along,
 )
 from sta_prior.solve.rows import Rows
-from sta_prior.solve.smoother import CONSTANT_TIME, Smoothed, make_problem, segment_at, smooth
+from sta_prior.solve.smoother import CONSTANT_TIME, Smoothed, make_problem, smooth
 from sta_prior.solve.spans import TrajectorySystem
 from sta_prior.solve.terms import (
     JointProblem,
@@ -35,6 +35,7 @@ from sta_prior.solve.terms import (
     drive,
     joint_travel,
     marker_term,
+    segment_at,
 )
 
 Constants = Literal["bounded", "full", "none"]
