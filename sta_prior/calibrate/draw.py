@@ -1,6 +1,7 @@
 """Trials drawn from the smoother's own model, with a truth that is known.
 
-Kernel: arrays in, arrays out. Conventions: docs/conventions.md. The model: solve/trajectory.py, solve/motion.py.
+Kernel: arrays in, arrays out. Conventions: docs/conventions.md.
+The model: solve/trajectory.py, solve/motion.py.
 
 A thigh and a shank, invented. Motion is simulated from the motion prior, from a start that is plausible (the
 model's start is flat). The artifact is the prior's mean plus features times weights, drawn once a trial, plus
@@ -33,6 +34,7 @@ JointForm = Literal["free", "soft"]
 Noise = Literal["model", "white"]
 
 STEP = 0.01
+FRAMES = 60
 MARKER_SD = 0.0005
 TRAVEL_SD = 0.004
 DECAY_TIME = 0.1
@@ -55,8 +57,12 @@ SLOPE, BEND = 0.012, 0.005
 OFFSET_SD, SLOPE_SD, BEND_SD, RESIDUAL_SD = 0.003, 0.006, 0.003, 0.0025
 """Spread of a trial's constant, slope and bend; of the residual. m, m/rad, m/rad², m."""
 
-DENSITY = np.array([0.3, 0.3, 1.0, 1.0, 1.0, 1.0])
-"""Of the white noise on the acceleration, rad²/s³ and m²/s³."""
+DENSITY = np.array([0.2, 0.2, 0.6, 1.0, 1.0, 1.0])
+"""Of the white noise on the acceleration, rad²/s³ and m²/s³. Of rotation less in trials of more than FRAMES: an
+integral of white noise would turn the knee round."""
+
+TURN_SD, MOVE_SD = np.array([0.2, 0.2, 0.5]), 0.5
+"""Velocities at the start, rad/s (less in longer trials) and m/s."""
 
 
 @dataclass(frozen=True)
@@ -82,11 +88,21 @@ class Recipe:
     drawn, s (the prior always says DECAY_TIME).
     """
 
-    frames: int = 60
+    frames: int = FRAMES
     joint: JointForm = "free"
     noise: Noise = "model"
     artifact: float = 1.0
     decay_time: float = DECAY_TIME
+
+    @property
+    def slower(self) -> float:
+        """Factor on angular velocities that keeps angles within the same range in longer trials."""
+        return min(1.0, FRAMES / self.frames)
+
+    @property
+    def density(self) -> FloatArray:
+        """Of the white noise on the acceleration, (6,) rad²/s³ and m²/s³."""
+        return np.asarray(DENSITY * np.repeat([self.slower**3, 1.0], 3))
 
 
 def _covariance(rng: np.random.Generator, size: int, sd: float) -> FloatArray:
@@ -118,16 +134,15 @@ def _correlation(rng: np.random.Generator, size: int) -> FloatArray:
     return np.asarray(rows / np.linalg.norm(rows, axis=1, keepdims=True))
 
 
-def draw_start(rng: np.random.Generator) -> tuple[FloatArray, FloatArray]:
-    """Poses (2, 4, 4) and velocities (2, 6) of thigh and shank in the first frame, plausible."""
+def draw_start(rng: np.random.Generator, slower: float) -> tuple[FloatArray, FloatArray]:
+    """Poses (2, 4, 4) and velocities (2, 6) of thigh and shank in the first frame; slower: factor on turning."""
     angles = np.radians([30.0, 2.0, 0.0]) + np.radians([12.0, 3.0, 4.0]) * rng.standard_normal(3)
     thigh = se3.make_pose(se3.rotation_exp(0.3 * rng.standard_normal(3)), rng.standard_normal(3))
     rotation = rotation_from_angles(JointConvention("knee", "right"), angles)
     shank = thigh @ se3.make_pose(rotation, CENTRES[0] - rotation @ CENTRES[1])
-    turn = np.array([0.3, 0.3, 1.0])
     velocity = np.zeros((2, 6))
-    velocity[0, :3], velocity[1, :3] = turn * rng.standard_normal(3), turn * rng.standard_normal(3)
-    velocity[0, 3:] = 0.5 * rng.standard_normal(3)
+    velocity[:, :3] = slower * TURN_SD * rng.standard_normal((2, 3))
+    velocity[0, 3:] = MOVE_SD * rng.standard_normal(3)
     # The shank starts with the knee's velocity: in its own axes, v = v_knee − ω × centre.
     knee = rotation.T @ (velocity[0, 3:] + np.cross(velocity[0, :3], CENTRES[0]))
     velocity[1, 3:] = knee - np.cross(velocity[1, :3], CENTRES[1])
@@ -154,9 +169,7 @@ def draw_motion(
     return poses, velocities
 
 
-def draw_residual(
-    rng: np.random.Generator, covariance: FloatArray, recipe: Recipe
-) -> FloatArray:
+def draw_residual(rng: np.random.Generator, covariance: FloatArray, recipe: Recipe) -> FloatArray:
     """Residual artifact plus instrument noise, (F, n) m.
 
     The model whitens their sum: first R + σ², then innovations of (1 − ρ²)R + (1 + ρ²)σ². Noise that is
@@ -186,10 +199,10 @@ def draw_hidden(rng: np.random.Generator, frames: int, markers: int) -> BoolArra
 
 def draw_trial(rng: np.random.Generator, recipe: Recipe) -> DrawnTrial:
     """Draw priors, motion, artifact and markers of one trial."""
-    motions = [MotionPrior(2, STEP, DENSITY) for _ in CLUSTERS]
+    motions = [MotionPrior(2, STEP, recipe.density) for _ in CLUSTERS]
     travel_sd = TRAVEL_SD if recipe.joint == "soft" else np.inf
     joint = JointProblem(0, 1, JointConvention("knee", "right"), *CENTRES, travel_sd)
-    first, velocity = draw_start(rng)
+    first, velocity = draw_start(rng, recipe.slower)
     drawn = [draw_motion(rng, *own, recipe.frames) for own in zip(motions, first, velocity, strict=True)]
     poses = np.stack([own for own, _ in drawn], axis=1)
     velocities = np.stack([own for _, own in drawn], axis=1)

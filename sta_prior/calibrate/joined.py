@@ -169,7 +169,9 @@ def draw_joined(
     value = misfit(rows, offset)
     for _ in range(MAXIMUM_ITERATIONS):
         system = _System(rows, held)
-        change, shift = system.solve(rows, rows.step - drawn_step, rows.joint - drawn_joint, offset - drawn_offset)
+        change, shift = system.solve(
+            rows, rows.step - drawn_step, rows.joint - drawn_joint, offset - drawn_offset
+        )
         length = 1.0
         while True:
             ahead = poses @ se3.exp(length * change[:, :POSES].reshape(-1, 2, 6))

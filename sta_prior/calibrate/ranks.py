@@ -17,7 +17,12 @@ from sta_prior.solve.smoother import smooth
 from sta_prior.solve.trajectory_posterior import describe_trajectory
 
 QUANTITIES = (
-    *(f"{segment} {kind} {axis}" for segment in ("thigh", "shank") for kind in ("rotation", "position") for axis in "xyz"),
+    *(
+        f"{segment} {kind} {axis}"
+        for segment in ("thigh", "shank")
+        for kind in ("rotation", "position")
+        for axis in "xyz"
+    ),
     *(f"knee {name}" for name in ("flexion", "adduction", "rotation")),
 )
 """Components of Log(T̂⁻¹T) of both segments, along the bone's axes, and the knee's angles."""
