@@ -65,7 +65,6 @@ def calibrate(
     *,
     constant_time: float = math.inf,
     workers: int = 1,
-    sd_factor: float = 1.0,
 ) -> Calibration:
     """Draw trials from the model, solve them, and judge where the truth stands in the posteriors.
 
@@ -76,7 +75,6 @@ def calibrate(
     recipe : how trials are drawn
     constant_time : information about the constants that counts, s; infinite for all
     workers : processes
-    sd_factor : on the posterior's SD; 1 but in a test of this test
 
     Raises
     ------
@@ -101,12 +99,20 @@ def calibrate(
     ):
         if got < least:
             raise InputError(message(name, f"expected {least} or more, got {got}"))
-    jobs = (delayed(rank_one)(seed, number, recipe, constant_time, sd_factor) for number in range(trials))
-    ranked = tuple(Parallel(n_jobs=workers)(jobs))
+    jobs = (delayed(rank_one)(seed, number, recipe, constant_time) for number in range(trials))
+    return judge(tuple(Parallel(n_jobs=workers)(jobs)))
+
+
+def judge(ranked: tuple[Ranked, ...]) -> Calibration:
+    """Judge where the truth stands in the posteriors, one frame a trial.
+
+    Parameters
+    ----------
+    ranked : of each trial
+    """
     places = np.stack([own.places[number % own.places.shape[0]] for number, own in enumerate(ranked)])
-    band = simultaneous_band(trials, FALSE_ALARM / (BOUNDS * len(QUANTITIES)))
-    judged = tuple(judge_uniformity(own, band) for own in places.T)
-    return Calibration(ranked, places, band, judged)
+    band = simultaneous_band(len(ranked), FALSE_ALARM / (BOUNDS * len(QUANTITIES)))
+    return Calibration(ranked, places, band, tuple(judge_uniformity(own, band) for own in places.T))
 
 
 def table(found: Calibration, verdict: bool) -> str:
@@ -116,12 +122,14 @@ def table(found: Calibration, verdict: bool) -> str:
     low, high = found.judged[0].squared_range
     heads = [f"{100 * level:g} %" for level in LEVELS]
     lines = [
-        f"{'quantity':<18}{heads[0]:>7}{heads[1]:>7}{heads[2]:>7}{'χ² p':>9}{'ECDF':>8}{'bound':>7}{'z²':>7}"
+        f"{'quantity':<18}{heads[0]:>7}{heads[1]:>7}{heads[2]:>7}{'χ² p':>9}{'ECDF':>8}{'bound':>7}{'z²':>7}{'z':>7}"
         + ("  verdict" if verdict else "")
     ]
     for name, own in zip(QUANTITIES, found.judged, strict=True):
         shares = "".join(f"{100 * share:7.1f}" for share in own.covered)
-        numbers = f"{own.chi_square_p:9.4f}{own.deviation:8.3f}{own.bound:7.3f}{own.squared:7.2f}"
+        numbers = (
+            f"{own.chi_square_p:9.4f}{own.deviation:8.3f}{own.bound:7.3f}{own.squared:7.2f}{own.shift:7.2f}"
+        )
         word = ("  uniform" if own.uniform else "  NOT UNIFORM") if verdict else ""
         lines.append(f"{name:<18}{shares}{numbers}{word}")
     chance = ", ".join(f"{100 * low:.1f}–{100 * high:.1f}" for low, high in ranges)
@@ -130,6 +138,7 @@ def table(found: Calibration, verdict: bool) -> str:
         [
             *lines,
             f"Coverage that chance allows, 95 % of times: {chance} %.",
+            f"z: normal deviates of the places, an SD of their mean is {count**-0.5:.2f}.",
             f"Bounds: χ² p at least {found.band.level:.5f}; z² within {low:.2f}–{high:.2f}; a false alarm "
             f"anywhere in at most {100 * FALSE_ALARM:g} % of runs.",
             f"Trials: {count}, of which the iteration did not converge in {stopped}.",
@@ -196,7 +205,9 @@ def main(arguments: Sequence[str] | None = None) -> int:
         if not 0.0 < asked.artifact < math.inf:
             raise InputError(message("--artifact", f"expected a number above 0, got {asked.artifact:g}"))
         if asked.out is not None and not asked.out.parent.is_dir():
-            raise InputError(message(asked.out, "expected a file in a folder that exists, got none"))
+            raise InputError(
+                message(asked.out, "expected a file in a folder that exists, got no such folder")
+            )
         found = calibrate(asked.trials, asked.seed, recipe, constant_time=limit, workers=asked.workers)
         if asked.out is not None:
             _write(asked.out, found)

@@ -58,8 +58,8 @@ OFFSET_SD, SLOPE_SD, BEND_SD, RESIDUAL_SD = 0.003, 0.006, 0.003, 0.0025
 """Spread of a trial's constant, slope and bend; of the residual. m, m/rad, m/rad², m."""
 
 DENSITY = np.array([0.2, 0.2, 0.6, 1.0, 1.0, 1.0])
-"""Of the white noise on the acceleration, rad²/s³ and m²/s³. Of rotation less in trials of more than FRAMES: an
-integral of white noise would turn the knee round."""
+"""Of the white noise on the acceleration, rad²/s³ and m²/s³. Of rotation less in trials longer than FRAMES:
+an integral of white noise would turn the knee round."""
 
 TURN_SD, MOVE_SD = np.array([0.2, 0.2, 0.5]), 0.5
 """Velocities at the start, rad/s (less in longer trials) and m/s."""
@@ -135,7 +135,7 @@ def _correlation(rng: np.random.Generator, size: int) -> FloatArray:
 
 
 def draw_start(rng: np.random.Generator, slower: float) -> tuple[FloatArray, FloatArray]:
-    """Poses (2, 4, 4) and velocities (2, 6) of thigh and shank in the first frame; slower: factor on turning."""
+    """Poses (2, 4, 4) and velocities (2, 6) of thigh and shank in the first frame; slower: on turning."""
     angles = np.radians([30.0, 2.0, 0.0]) + np.radians([12.0, 3.0, 4.0]) * rng.standard_normal(3)
     thigh = se3.make_pose(se3.rotation_exp(0.3 * rng.standard_normal(3)), rng.standard_normal(3))
     rotation = rotation_from_angles(JointConvention("knee", "right"), angles)

@@ -29,11 +29,11 @@ from sta_prior.solve.trajectory import JOINT_TIME, OFFSET_SHARE
 POSES, STATES = 12, 24
 """Unknowns of a frame: poses of both segments, then their velocities."""
 
-HELD = 1e8
+HELD = 1e13
 """Precision that keeps the start where it was drawn: the thigh's pose and velocity, the shank's rotation and
 angular velocity. The model says nothing about these."""
 
-TOLERANCE, MAXIMUM_ITERATIONS, SHORTEST = 1e-8, 40, 1e-3
+TOLERANCE, MAXIMUM_ITERATIONS, SHORTEST = 1e-6, 40, 1e-3
 
 
 @dataclass(frozen=True)

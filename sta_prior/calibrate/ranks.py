@@ -46,14 +46,13 @@ class Ranked:
     iterations: int
 
 
-def rank_trial(trial: DrawnTrial, constant_time: float, sd_factor: float = 1.0) -> Ranked:
+def rank_trial(trial: DrawnTrial, constant_time: float) -> Ranked:
     """Solve a drawn trial and place its truth in the posterior.
 
     Parameters
     ----------
     trial : from `draw_trial`
     constant_time : information about the constants that counts, s; infinite for all
-    sd_factor : 1; another to see whether a wrong posterior is found out
     """
     smoothed = smooth(trial.problem, trial.start, constant_time)
     found = describe_trajectory(smoothed)
@@ -63,11 +62,11 @@ def rank_trial(trial: DrawnTrial, constant_time: float, sd_factor: float = 1.0) 
     away = se3.log(se3.inverse(smoothed.state.poses[at]) @ trial.poses[at]).reshape(at.size, -1)
     spread = np.sqrt(np.einsum("fxx->fx", found.covariance[at]))
     error = np.concatenate([away, (trial.angles - found.angles)[at, 0]], axis=1)
-    sd = sd_factor * np.concatenate([spread, found.angle_sd[at, 0]], axis=1)
+    sd = np.concatenate([spread, found.angle_sd[at, 0]], axis=1)
     converged = not smoothed.stop_reason.startswith("not converged")
     return Ranked(norm.cdf(error / sd), frames, sd, converged, smoothed.iterations)
 
 
-def rank_one(seed: int, number: int, recipe: Recipe, constant_time: float, sd_factor: float = 1.0) -> Ranked:
+def rank_one(seed: int, number: int, recipe: Recipe, constant_time: float) -> Ranked:
     """Draw and place one trial; its random numbers depend on seed and number alone."""
-    return rank_trial(draw_trial(np.random.default_rng([seed, number]), recipe), constant_time, sd_factor)
+    return rank_trial(draw_trial(np.random.default_rng([seed, number]), recipe), constant_time)

@@ -44,8 +44,8 @@ class Uniformity:
     """What a sample of places says.
 
     covered: share within the central 50, 90 and 95 %; chi_square_p; deviation, bound: of the distribution
-    function, where it comes nearest to the band or leaves it farthest; squared, squared_range: mean square of
-    the normal deviates, and its range; uniform: whether all three bounds are kept.
+    function, where it deviates most, or, if it leaves the band, where it leaves it farthest; squared, squared_range: mean square of
+    the normal deviates, and its range; shift: their mean; uniform: whether all three bounds are kept.
     """
 
     covered: tuple[float, ...]
@@ -54,6 +54,7 @@ class Uniformity:
     bound: float
     squared: float
     squared_range: tuple[float, float]
+    shift: float
     uniform: bool
 
 
@@ -122,18 +123,15 @@ def judge_uniformity(places: FloatArray, band: Band) -> Uniformity:
     filled, _ = np.histogram(places, bins, (0.0, 1.0))
     p = float(chisquare(filled).pvalue)
     counts = np.searchsorted(np.sort(places), band.points, side="right")
-    # A count may touch the band; one more leaves it.
-    above, below = counts - count * band.points, count * band.points - counts
-    room_above, room_below = band.high - count * band.points, count * band.points - band.low
-    inner = slice(0, -1)
-    worst_above = int(np.argmax(((above - room_above) / (room_above + 1.0))[inner]))
-    worst_below = int(np.argmax(((below - room_below) / (room_below + 1.0))[inner]))
-    up = above[worst_above] / (room_above[worst_above] + 1.0)
-    down = below[worst_below] / (room_below[worst_below] + 1.0)
-    pair = (above, room_above, worst_above) if up > down else (below, room_below, worst_below)
-    deviation, bound = float(pair[0][pair[2]] / count), float(pair[1][pair[2]] / count)
-    within = bool((counts >= band.low).all() and (counts <= band.high).all())
-    squared = float((norm.ppf(np.clip(places, SMALLEST, 1.0 - SMALLEST)) ** 2).mean())
+    away = counts - count * band.points
+    room = np.where(away > 0, band.high - count * band.points, count * band.points - band.low)
+    left = (counts < band.low) | (counts > band.high)
+    # Where the band is left, the place where it is left farthest; else the largest deviation.
+    worst = int(np.argmax(np.abs(away) - room * left + count * left))
+    deviation, bound = float(np.abs(away[worst]) / count), float(room[worst] / count)
+    within = not bool(left.any())
+    deviates = norm.ppf(np.clip(places, SMALLEST, 1.0 - SMALLEST))
+    squared = float((deviates**2).mean())
     low, high = (
         float(value) / count for value in chi2.ppf([0.5 * band.level, 1.0 - 0.5 * band.level], count)
     )
@@ -144,5 +142,6 @@ def judge_uniformity(places: FloatArray, band: Band) -> Uniformity:
         bound=bound,
         squared=squared,
         squared_range=(low, high),
+        shift=float(deviates.mean()),
         uniform=p >= band.level and within and low <= squared <= high,
     )
