@@ -122,8 +122,8 @@ def table(found: Calibration, verdict: bool) -> str:
     low, high = found.judged[0].squared_range
     heads = [f"{100 * level:g} %" for level in LEVELS]
     lines = [
-        f"{'quantity':<18}{heads[0]:>7}{heads[1]:>7}{heads[2]:>7}{'χ² p':>9}{'ECDF':>8}{'bound':>7}{'z²':>7}{'z':>7}"
-        + ("  verdict" if verdict else "")
+        f"{'quantity':<18}{heads[0]:>7}{heads[1]:>7}{heads[2]:>7}"
+        f"{'χ² p':>9}{'ECDF':>8}{'bound':>7}{'z²':>7}{'z':>7}" + ("  verdict" if verdict else "")
     ]
     for name, own in zip(QUANTITIES, found.judged, strict=True):
         shares = "".join(f"{100 * share:7.1f}" for share in own.covered)
