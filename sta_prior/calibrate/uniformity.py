@@ -44,8 +44,9 @@ class Uniformity:
     """What a sample of places says.
 
     covered: share within the central 50, 90 and 95 %; chi_square_p; deviation, bound: of the distribution
-    function, where it deviates most, or, if it leaves the band, where it leaves it farthest;
-    squared, squared_range: mean square of the normal deviates, and its range; shift: their mean; uniform: whether all three bounds are kept.
+    function, where it deviates most, or, if it leaves the band, where it leaves it farthest; squared,
+    squared_range: mean square of the normal deviates, and its range; shift: their mean; uniform: whether all
+    three bounds are kept.
     """
 
     covered: tuple[float, ...]
