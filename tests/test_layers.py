@@ -20,7 +20,7 @@ ORDER: tuple[str, ...] = (
     "solve",
     "support",
     *("compare", "report"),
-    "testing",
+    *("testing", "calibrate"),
     *("batch", "words", "screen", "demo", "cli"),
     "__init__",
     "__main__",
@@ -33,6 +33,7 @@ KERNELS = (
     *("solve/chain", "solve/chain_kernels", "solve/chain_marginals"),
     *("solve/motion", "solve/motion_kernels", "solve/constants", "solve/rows", "solve/spans"),
     *("solve/span_kernels", "solve/trajectory", "solve/smoother", "solve/trajectory_posterior"),
+    *("calibrate/draw", "calibrate/joined", "calibrate/ranks", "calibrate/uniformity"),
 )
 NOT_IN_A_KERNEL = {"xarray", "pathlib", "matplotlib", "h5netcdf", "ezc3d", "typer", "rich"}
 
