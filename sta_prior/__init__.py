@@ -3,6 +3,7 @@
 Public names; conventions: docs/conventions.md.
 """
 
+import sta_prior.compiled  # noqa: F401  (before anything compiled is imported)
 from sta_prior.pairs import pair
 from sta_prior.prior import Prior, learn, load_prior
 from sta_prior.solve import solve

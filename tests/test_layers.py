@@ -12,6 +12,7 @@ PACKAGE = Path(__file__).parents[1] / "sta_prior"
 # Left to right: a module may import what stands in a column to its left, or its own module.
 # Inside one column no module may import one that comes after it.
 ORDER: tuple[str, ...] = (
+    "compiled",
     *("errors", "checks"),
     *("se3", "gaussian", "angles", "rigid"),
     "io",
