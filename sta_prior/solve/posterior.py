@@ -143,6 +143,36 @@ def conflict_of(term: Linearised, index: int, determined: BoolArray) -> tuple[Fl
     return np.where(enough, np.maximum(whole - explained, 0.0), np.nan), freedom
 
 
+def describe_joints(
+    joints: list[JointProblem],
+    poses: FloatArray,
+    angles: FloatArray,
+    angle_jacobian: FloatArray,
+    covariance: FloatArray,
+    determined: BoolArray,
+) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+    """Angles and travel with their SDs, (F, J, 3) each, rad and m; NaN where a bone is not determined.
+
+    Parameters
+    ----------
+    joints, poses : as for describe_posterior
+    angles, angle_jacobian : at these poses, from angles_and_jacobians
+    covariance : shape (F, 6S, 6S), of all poses
+    determined : shape (F, S)
+    """
+    shown, angle_sd = angles.copy(), np.sqrt(variance_along(angle_jacobian, covariance))
+    travel = np.full(angles.shape, np.nan)
+    travel_sd = np.full(angles.shape, np.nan)
+    for index, joint in enumerate(joints):
+        unknown = ~(determined[:, joint.proximal] & determined[:, joint.distal])
+        if joint.has_centre:
+            travel[:, index], jacobian = joint_travel(joint, poses)
+            travel_sd[:, index] = np.sqrt(variance_along(jacobian, covariance))
+        for array in (shown, angle_sd, travel, travel_sd):
+            array[unknown, index] = np.nan
+    return shown, angle_sd, travel, travel_sd
+
+
 def describe_posterior(
     segments: list[SegmentProblem],
     joints: list[JointProblem],
@@ -163,17 +193,9 @@ def describe_posterior(
     """
     frames, count = poses.shape[:2]
     covariance, determined = _pose_covariance(system, count, converged)
-    angles, angle_sd = system.angles.copy(), np.sqrt(variance_along(system.angle_jacobian, covariance))
-    travel = np.full((frames, len(joints), 3), np.nan)
-    travel_sd = np.full((frames, len(joints), 3), np.nan)
-    for index, joint in enumerate(joints):
-        hidden = ~(determined[:, joint.proximal] & determined[:, joint.distal])
-        if joint.has_centre:
-            travel[:, index], jacobian = joint_travel(joint, poses)
-            travel_sd[:, index] = np.sqrt(variance_along(jacobian, covariance))
-        for array in (angles, angle_sd, travel, travel_sd):
-            array[hidden, index] = np.nan
-
+    angles, angle_sd, travel, travel_sd = describe_joints(
+        joints, poses, system.angles, system.angle_jacobian, covariance, determined
+    )
     share = np.zeros((frames, 6 * count, len(SOURCES)))
     conflict = np.full((frames, count), np.nan)
     freedom = np.zeros((frames, count))

@@ -21,6 +21,7 @@ from sta_prior.solve.posterior import (
     UNDETERMINED,
     FrameSolution,
     conflict_of,
+    describe_joints,
     join,
     variance_along,
 )
@@ -33,7 +34,6 @@ from sta_prior.solve.terms import (
     SegmentProblem,
     angles_and_jacobians,
     drive,
-    joint_travel,
     marker_term,
     segment_at,
 )
@@ -115,16 +115,9 @@ def _describe(
     sd = np.sqrt(np.einsum("fxx->fx", covariance)).reshape(-1, count, 6)
     determined: BoolArray = np.asarray((sd < UNDETERMINED).all(axis=2) & smoothed.fixed)
     angles, slope = angles_and_jacobians(problem.joints, poses)
-    shown, angle_sd = angles.copy(), np.sqrt(variance_along(slope, covariance))
-    travel = np.full((poses.shape[0], len(problem.joints), 3), np.nan)
-    travel_sd = np.full_like(travel, np.nan)
-    for index, joint in enumerate(problem.joints):
-        unknown = ~(determined[:, joint.proximal] & determined[:, joint.distal])
-        if joint.has_centre:
-            travel[:, index], along = joint_travel(joint, poses)
-            travel_sd[:, index] = np.sqrt(variance_along(along, covariance))
-        for array in (shown, angle_sd, travel, travel_sd):
-            array[unknown, index] = np.nan
+    shown, angle_sd, travel, travel_sd = describe_joints(
+        problem.joints, poses, angles, slope, covariance, determined
+    )
     artifact, artifact_sd = [], []
     conflict = np.full((poses.shape[0], count), np.nan)
     freedom = np.zeros_like(conflict)
